@@ -1,0 +1,167 @@
+"""What a reader must know about a result before trusting it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+
+import numpy as np
+
+from fastsmooth.bintable import BinTable
+from fastsmooth.curve import OUTSIDE, THIN, Caution, Curve
+from fastsmooth.plan import Sample
+from fastsmooth.search import FINE_BINS_PER_BANDWIDTH
+from fastsmooth.source import Source
+
+_MANY_REFUSED = 0.05
+_MANY_ALIKE = 0.001
+_HEAVY_FOLD = 0.5
+_CORRELATION_WORTH_TELLING = 0.1
+_PAIRS_ENOUGH = 100
+_FAR_OUT_SD = 10.0
+
+
+def about_rows(table: BinTable, source: Source) -> Iterator[Caution]:
+    """Yield cautions about refused rows and about folds."""
+    tally = table.tally
+    kept = tally.read - tally.filtered
+    refused = {k: v for k, v in tally.refused.items() if k not in ("x below range", "x above range")}
+    if kept and sum(refused.values()) > _MANY_REFUSED * kept:
+        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        share = sum(refused.values()) / kept
+        yield Caution(
+            "many rows refused",
+            f"{share:.0%} of the rows could not be used ({counts}). Find out why before you trust "
+            f"what is left.",
+        )
+    weights = np.array([float(sums[:, 0].sum()) for sums in table.sums.values()])
+    if weights.size > 1 and weights.max() > _HEAVY_FOLD * weights.sum():
+        yield Caution(
+            "one fold dominates",
+            f"One of {weights.size} folds holds {weights.max() / weights.sum():.0%} of the weight, "
+            f"so the flat zone rests on few independent parts.",
+        )
+
+
+def about_search(made: Curve) -> Iterator[Caution]:
+    """Yield cautions about the choice of the bandwidth."""
+    settings = made.trace["settings"]
+    trail = made.search.trails[settings["estimator"]]
+    criterion = made.search.criterion
+    label = made.width_label
+    low, high = trail.flat_zone
+    if settings["bandwidth"] is not None:
+        if not low <= made.bandwidth <= high:
+            yield Caution(
+                "width outside the flat zone",
+                f"The given bandwidth {label(made.bandwidth)} lies outside the flat zone "
+                f"{label(low)} to {label(high)} of {criterion}; its choice is "
+                f"{label(trail.bandwidth)}.",
+            )
+    elif trail.at_low_end:
+        yield Caution(
+            "width at the lower end",
+            f"The best bandwidth {label(trail.bandwidth)} is the narrowest searched. Rows that "
+            f"repeat each other (serial correlation, duplicated files) drive it there; give "
+            f"--bandwidth or thin the rows.",
+        )
+    elif trail.at_high_end:
+        shape = "a straight line" if settings["estimator"] == "local-linear" else "a constant"
+        yield Caution(
+            "width at the upper end",
+            f"The best bandwidth {label(trail.bandwidth)} is the widest searched: within the noise "
+            f"the data look like {shape}.",
+        )
+    if trail.minima > 1:
+        yield Caution(
+            "several minima",
+            f"The criterion has {trail.minima} separate minima; look at the lower panel of the "
+            f"picture before you rely on {label(trail.bandwidth)}.",
+        )
+    if trail.is_flat:
+        yield Caution(
+            "flat criterion",
+            "Every bandwidth searched is within one standard error of the best: the data do not "
+            "say how much to smooth.",
+        )
+    if made.search.rows_alone:
+        yield Caution(
+            "rows alone",
+            f"{made.search.rows_alone:g} rows have no neighbour within the narrowest width and "
+            f"took no part in the choice of the bandwidth.",
+        )
+
+
+def about_curve(made: Curve, sample: Sample) -> Iterator[Caution]:
+    """Yield cautions about the curve itself; `sample` has x in axis floats."""
+    engine = made.trace["engine"]
+    if engine["bins_per_bandwidth"] < 0.99 * min(FINE_BINS_PER_BANDWIDTH, 16):
+        yield Caution(
+            "coarse bins",
+            f"The bandwidth spans only {engine['bins_per_bandwidth']:.1f} bins within the memory "
+            f"cap; the curve's binning error is estimated as {engine['error_in_noise_sd']:.1g} "
+            f"residual standard deviations. Narrow --range for finer bins.",
+        )
+    unsupported = np.mean((made.status == THIN) | (made.status == OUTSIDE))
+    if unsupported > 0.5:
+        yield Caution(
+            "mostly thin",
+            f"{unsupported:.0%} of the points have too few rows; the curve says little there.",
+        )
+    yield from _about_correlation(made, sample)
+    yield from _about_spikes(made, sample)
+
+
+def _standardised(made: Curve, sample: Sample) -> np.ndarray:
+    spread = made.residual_sd
+    known = np.isfinite(spread) & (spread > 0.0)
+    if not known.any():
+        return np.full(sample.x.shape, np.nan)
+    sd = np.interp(sample.x, made.x[known], spread[known])
+    return (sample.y - made.at(sample.x)) / sd
+
+
+def _about_correlation(made: Curve, sample: Sample) -> Iterator[Caution]:
+    """Lag-one correlation of residuals over neighbouring rows of the sample."""
+    z = np.clip(_standardised(made, sample), -5.0, 5.0)
+    pairs = (sample.run[1:] == sample.run[:-1]) & ~sample.gap[1:]
+    pairs &= np.isfinite(z[1:]) & np.isfinite(z[:-1])
+    if np.count_nonzero(pairs) < _PAIRS_ENOUGH:
+        return
+    first, second = z[:-1][pairs], z[1:][pairs]
+    variance = 0.5 * float(np.mean(first**2) + np.mean(second**2))
+    if variance <= 0.0:
+        return
+    correlation = min(float(np.mean(first * second)) / variance, 0.9999)
+    if correlation <= max(_CORRELATION_WORTH_TELLING, 3.0 / math.sqrt(first.size)):
+        return
+    worth = (1.0 + correlation) / (1.0 - correlation)
+    yield Caution(
+        "neighbouring rows alike",
+        f"Residuals of neighbouring rows are correlated ({correlation:.2f} over {first.size} "
+        f"sampled pairs), so about {worth:.3g} rows carry the news of one, the band is too narrow "
+        f"and {made.search.criterion} may choose too narrow a width. Average over time first, or "
+        f"take every so many rows.",
+    )
+
+
+def _about_spikes(made: Curve, sample: Sample) -> Iterator[Caution]:
+    """One far value of y repeated over and over is a code for missing, not a reading."""
+    z = _standardised(made, sample)
+    far = np.flatnonzero(np.abs(z) > _FAR_OUT_SD)
+    # Far values inflate the residual spread that they are measured by; compare with the bulk too.
+    middle = np.median(sample.y) if sample.y.size else 0.0
+    bulk = 1.4826 * np.median(np.abs(sample.y - middle)) if sample.y.size else 0.0
+    far = np.union1d(far, np.flatnonzero(np.abs(sample.y - middle) > 30.0 * bulk)) if bulk else far
+    if not far.size:
+        return
+    values, counts = np.unique(sample.y[far], return_counts=True)
+    most = int(np.argmax(counts))
+    if counts[most] >= max(3, _MANY_ALIKE * sample.y.size):
+        column = made.trace["settings"]["y"]
+        yield Caution(
+            "repeated far value",
+            f"{column} is {values[most]:g} in {counts[most]} of {sample.y.size} sampled rows, far "
+            f"from all others: is it a code for a missing reading? Leave such rows out with "
+            f"--where '{column} <> {values[most]:g}'.",
+        )

@@ -1,0 +1,287 @@
+"""The result: a reference curve with its band, its search, its cautions and its trace."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.axis import Axis
+from fastsmooth.errors import InputError
+from fastsmooth.search import Search
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+Floats = NDArray[np.float64]
+
+STATUSES = ("ok", "thin", "edge", "outside")
+OK, THIN, EDGE, OUTSIDE = range(4)
+CURVE_KEY = b"fastsmooth.curve"
+FORMAT = 1
+
+
+class Caution(NamedTuple):
+    """Something about a result that its reader must know.
+
+    Attributes
+    ----------
+    code : str
+        A short fixed name.
+    text : str
+        One or two plain sentences, with the remedy.
+    """
+
+    code: str
+    text: str
+
+
+@dataclass(frozen=True)
+class Density:
+    """Where the rows lie, for pictures.
+
+    Attributes
+    ----------
+    x_edges : (k + 1,) float64
+        Equal stretches of the axis (of its logarithm on a log scale), in axis floats.
+    rows : (k,) float64
+        All rows of each stretch.
+    y_edges : (m + 1,) float64
+        Equal stretches of y that hold most of the sample.
+    sampled : (k, m) float64
+        Rows of the sample in each cell.
+    """
+
+    x_edges: Floats
+    rows: Floats
+    y_edges: Floats
+    sampled: Floats
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return plain data for JSON."""
+        return {name: value.tolist() for name, value in vars(self).items()}
+
+    @classmethod
+    def from_dict(cls, plain: dict[str, Any]) -> Density:
+        """Build from what `to_dict` returned."""
+        return cls(**{name: np.array(value, np.float64) for name, value in plain.items()})
+
+
+@dataclass(frozen=True)
+class Curve:
+    """A reference curve: the mean of y as a function of x.
+
+    Attributes
+    ----------
+    x : (n,) float64
+        Where the curve is given, ascending, in axis floats (seconds since `axis.origin` for
+        times).
+    estimate : (n,) float64
+        Estimated mean of y; NaN where status is ``outside``.
+    slope : (n,) float64
+        Change of y per unit of x (per second for times): the local line's own slope, or the
+        derivative of the local constant curve (NaN with the uniform kernel).
+    std_error : (n,) float64
+        Standard error of the band's centre.
+    lower, upper : (n,) float64
+        The pointwise band.
+    effective_rows : (n,) float64
+        1 / sum of squared weights: how many equally weighted rows would be as sharp.
+    status : (n,) int64
+        Index into `STATUSES`.
+    residual_sd : (n,) float64
+        Standard deviation of single rows around the curve.
+    bandwidth : float
+        In axis floats; a factor on a log scale (2.0: from half to twice x).
+    axis : Axis
+        What the floats of x mean.
+    density : Density
+        Where the rows lie.
+    search : Search
+        Criteria of both estimators over the bandwidth, in axis floats or factors.
+    cautions : tuple of Caution
+        What the reader must know.
+    trace : dict
+        Everything needed to make the curve again: files, row counts, plan, settings, versions.
+    """
+
+    x: Floats
+    estimate: Floats
+    slope: Floats
+    std_error: Floats
+    lower: Floats
+    upper: Floats
+    effective_rows: Floats
+    status: NDArray[np.int64]
+    residual_sd: Floats
+    bandwidth: float
+    axis: Axis
+    density: Density
+    search: Search
+    cautions: tuple[Caution, ...]
+    trace: dict[str, Any]
+
+    @property
+    def settings(self) -> dict[str, Any]:
+        """The settings that made the curve."""
+        return dict(self.trace["settings"])
+
+    @property
+    def scale(self) -> str:
+        """``linear`` or ``log``."""
+        return str(self.trace["settings"]["scale"])
+
+    def width_label(self, width: float) -> str:
+        """Write a bandwidth for people: in units of x, or as a factor on a log scale."""
+        return f"factor {width:.4g}" if self.scale == "log" else self.axis.width_label(width)
+
+    @property
+    def statuses(self) -> list[str]:
+        """Status names, one per point."""
+        return [STATUSES[code] for code in self.status.tolist()]
+
+    def at(self, x: Any) -> Floats:
+        """Read the curve at other places, by a cubic spline through its points.
+
+        Parameters
+        ----------
+        x : array_like
+            Places in axis floats.
+
+        Returns
+        -------
+        (n,) float64
+            Estimates; NaN outside the supported stretches. The spline departs from the exact
+            curve by far less than the standard error; pass ``at=`` when making the curve for
+            exact values.
+        """
+        from scipy.interpolate import CubicSpline
+
+        places = np.atleast_1d(np.asarray(x, np.float64))
+        out = np.full(places.shape, np.nan)
+        inside = np.isfinite(self.estimate)
+        edges = np.flatnonzero(np.diff(np.concatenate(([0], inside.astype(int), [0]))))
+        transform = np.log if self.scale == "log" else np.asarray
+        for start, stop in edges.reshape(-1, 2).tolist():
+            knots, values = self.x[start:stop], self.estimate[start:stop]
+            here = (places >= knots[0]) & (places <= knots[-1])
+            if stop - start == 1:
+                out[here] = values[0]
+            elif here.any():
+                out[here] = CubicSpline(transform(knots), values)(transform(places[here]))
+        return out
+
+    def table(self) -> pa.Table:
+        """Return the curve as an Arrow table, the trace in its schema metadata.
+
+        Returns
+        -------
+        pyarrow.Table
+            Columns ``x`` (in the column's own type), ``estimate``, ``slope``, ``std_error``,
+            ``lower``, ``upper``, ``effective_rows``, ``residual_sd``, ``status``. Values without
+            support are null.
+        """
+        import pyarrow as pa
+
+        def column(values: Floats) -> pa.Array:
+            return pa.array(values, mask=~np.isfinite(values))
+
+        columns = {"x": self.axis.to_arrow(self.x)}
+        for name in (
+            "estimate", "slope", "std_error", "lower", "upper", "effective_rows", "residual_sd",
+        ):  # fmt: skip
+            columns[name] = column(getattr(self, name))
+        columns["status"] = pa.array(self.statuses)
+        metadata = {CURVE_KEY: json.dumps(self.to_dict(), allow_nan=False).encode()}
+        return pa.table(columns).replace_schema_metadata(metadata)
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return everything but the table's own columns as plain data for JSON."""
+        return {
+            "format": FORMAT,
+            "x_floats": self.x.tolist(),
+            "bandwidth": self.bandwidth,
+            "axis": self.axis.to_dict(),
+            "density": self.density.to_dict(),
+            "search": self.search.to_dict(),
+            "cautions": [caution._asdict() for caution in self.cautions],
+            "trace": self.trace,
+        }
+
+    @classmethod
+    def from_table(cls, table: pa.Table, name: str = "the table") -> Curve:
+        """Build a curve from what `table` returned.
+
+        Raises
+        ------
+        InputError
+            The table is no curve, or a newer version wrote it.
+        """
+        metadata = table.schema.metadata or {}
+        if CURVE_KEY not in metadata:
+            raise InputError(
+                "CURVE", "be a curve that fastsmooth wrote", f"{name} carries no trace",
+                "name a file that 'fastsmooth curve --out' made",
+            )  # fmt: skip
+        told = json.loads(metadata[CURVE_KEY])
+        if told["format"] != FORMAT:
+            raise InputError(
+                "CURVE", f"have format {FORMAT}", f"{name} has format {told['format']}",
+                "make the curve again with this version",
+            )  # fmt: skip
+        values = {
+            column: table[column].to_numpy().astype(np.float64)
+            for column in (
+                "estimate", "slope", "std_error", "lower", "upper", "effective_rows",
+                "residual_sd",
+            )
+        }  # fmt: skip
+        return cls(
+            x=np.array(told["x_floats"], np.float64),
+            **values,
+            status=np.array([STATUSES.index(one) for one in table["status"].to_pylist()], np.int64),
+            bandwidth=told["bandwidth"],
+            axis=Axis.from_dict(told["axis"]),
+            density=Density.from_dict(told["density"]),
+            search=Search.from_dict(told["search"]),
+            cautions=tuple(Caution(**one) for one in told["cautions"]),
+            trace=told["trace"],
+        )
+
+    def save(self, path: Any) -> None:
+        """Write the curve; the suffix decides: .parquet, .arrow, .csv or .json.
+
+        Parquet, Arrow and JSON files carry the trace and can be read back with `load_curve`; a
+        CSV file holds the table alone.
+
+        Raises
+        ------
+        WriteError
+            The file cannot be written; nothing is left behind.
+        """
+        from fastsmooth.files_out import write_curve
+
+        write_curve(self, path)
+
+    def plot(self, path: Any) -> None:
+        """Draw the curve and its search; the suffix decides: .png, .svg or .pdf.
+
+        Raises
+        ------
+        WriteError
+            The file cannot be written; nothing is left behind.
+        """
+        from fastsmooth.report.picture import draw
+
+        draw(self, path)
+
+
+def supported_stretches(curve: Curve) -> Sequence[tuple[float, float]]:
+    """Return the stretches of x, end to end, in which the curve has status ``ok`` or ``edge``."""
+    good = (curve.status == OK) | (curve.status == EDGE)
+    edges = np.flatnonzero(np.diff(np.concatenate(([0], good.astype(int), [0])))).reshape(-1, 2)
+    return [(float(curve.x[start]), float(curve.x[stop - 1])) for start, stop in edges.tolist()]

@@ -1,0 +1,244 @@
+"""Passes over the data: plan, count into a bin table, look, and plan again where needed."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from fastsmooth.bintable import BinTable
+from fastsmooth.curve import Caution
+from fastsmooth.errors import InputError
+from fastsmooth.plan import (
+    BINS,
+    Plan,
+    Sample,
+    check_scale,
+    draw_sample,
+    find_range,
+    make_plan,
+    most_bins,
+    no_usable_rows,
+    user_range,
+)
+from fastsmooth.settings import Reading
+from fastsmooth.source import Chunk, Source, Task
+
+# The range is trimmed when all but one row in a thousand lie within an eighth of it.
+_TRIMMED_SHARE = 0.001
+_TRIM_GAIN = 8.0
+# A statistics range this much wider than the sample's says that the extremes are no readings.
+_ABSURD_RANGE = 1e4
+_SAMPLE_ENOUGH = 1000
+_MOST_PASSES = 4
+
+Progress = Callable[[str, int, int | None], None]
+
+
+def silent(stage: str, rows: int, of: int | None) -> None:
+    """Report progress to nobody."""
+
+
+@dataclass(frozen=True)
+class Counted:
+    """Rows counted into a table, and what was noticed on the way.
+
+    Attributes
+    ----------
+    table : BinTable
+        Finished.
+    sample : Sample
+        Some of the rows.
+    cautions : tuple of Caution
+        About range and rows.
+    passes : int
+        How often the data were read.
+    """
+
+    table: BinTable
+    sample: Sample
+    cautions: tuple[Caution, ...]
+    passes: int
+
+
+def count_pass(source: Source, plan: Plan, threads: int, progress: Progress = silent) -> BinTable:
+    """Read all rows once into a table of the plan.
+
+    Each task sums into a table of its own; tables are merged in task order, so the result is the
+    same to the last bit for any number of threads.
+    """
+    done = 0
+
+    def count(task: Task, chunks: Iterator[Chunk]) -> BinTable:
+        table = BinTable(plan)
+        row = 0
+        for chunk in chunks:
+            table.update(chunk, task.index, row)
+            row += chunk.x.shape[0]
+        return table
+
+    def report(rows: int) -> None:
+        nonlocal done
+        done += rows
+        progress("reading", done, source.rows_expected)
+
+    total = BinTable(plan)
+    for part in source.map_tasks(count, threads, progress=report):
+        total.merge(part)
+    return total
+
+
+def count_rows(source: Source, reading: Reading, progress: Progress = silent) -> Counted:
+    """Plan and read, as often as the range of x demands (once for ordinary data).
+
+    Raises
+    ------
+    InputError
+        No row can be used, x is constant, a weight is negative, or `strict` meets a refused row.
+    """
+    scale = reading.scale
+    check_scale(source, scale)
+    sample = draw_sample(source, scale)
+    trimmed = False
+    if reading.range is not None:
+        bounds = user_range(source, reading.range, scale)
+    else:
+        bounds = _statistics_bounds(source, scale) or find_range(source, scale, reading.threads)
+        full = bounds
+        bounds = _plausible_bounds(bounds, sample)
+        trimmed = bounds != full
+    for passes in range(1, _MOST_PASSES + 1):
+        plan = make_plan(source, sample, bounds, scale=scale, folds=reading.folds)
+        table = count_pass(source, plan, reading.threads, progress)
+        check_rows(table, source, reading)
+        if reading.range is not None or passes == _MOST_PASSES:
+            break
+        if trimmed and _rows_outside(table) > _TRIMMED_SHARE * (table.tally.used + _rows_outside(table)):
+            # The sample missed too much: give the range back.
+            bounds, trimmed = full, False
+            continue
+        narrower = _trimmed_bounds(table)
+        if narrower is None:
+            break
+        bounds, trimmed = narrower, True
+    cautions = []
+    if trimmed and _rows_outside(table):
+        cautions.append(_trim_caution(table, source))
+    return Counted(table, sample, tuple(cautions), passes)
+
+
+def count_finer(
+    source: Source, counted: Counted, reading: Reading, bins: int, progress: Progress = silent
+) -> Counted:
+    """Read again with more bins over the range that holds rows."""
+    table = counted.table
+    low, high = table.extent.tolist()
+    plan = table.plan
+    if reading.range is not None or _rows_outside(table):
+        low, high = plan.origin, plan.high
+    finer = make_plan(
+        source, counted.sample, (low, high), scale=plan.scale, bins=bins, folds=plan.folds
+    )
+    again = count_pass(source, finer, reading.threads, progress)
+    return replace(counted, table=again, passes=counted.passes + 1)
+
+
+def bins_for(table: BinTable, bandwidth: float, bins_per_bandwidth: float, threads: int) -> int:
+    """Return how many bins give the bandwidth so many bins, within the memory cap."""
+    low, high = table.extent.tolist()
+    wanted = bins_per_bandwidth * (high - low) / bandwidth * 1.05
+    power = 1 << max(0, math.ceil(math.log2(max(wanted, 1.0))))
+    return max(BINS, min(power, most_bins(table.plan.folds, threads, table.slots)))
+
+
+def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
+    """Refuse what must not be smoothed over.
+
+    Raises
+    ------
+    InputError
+        Negative weights or counts, no usable row, or any refused row when `strict`.
+    """
+    refused = table.tally.refused
+    for role in ("weight", "count"):
+        bad = refused.get(f"{role} negative or infinite", 0)
+        if bad:
+            column = getattr(source.columns, role)
+            raise InputError(
+                f"--{role}", "name a column of positive finite numbers",
+                f"'{column}' is negative or infinite in {bad} rows",
+                f"leave those rows out with --where '{column} > 0'",
+            )  # fmt: skip
+    if table.tally.used == 0:
+        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        if not counts:
+            raise no_usable_rows()
+        raise InputError(
+            "DATA", "hold rows with finite x and y",
+            f"every row was filtered or refused ({table.tally.filtered} filtered, {counts})",
+            "check --where, --range and the columns",
+        )  # fmt: skip
+    if reading.strict and refused:
+        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        raise InputError(
+            "DATA", "hold usable rows only with --strict", f"some were refused ({counts})",
+            "clean the data, filter with --where, or leave --strict out",
+        )  # fmt: skip
+
+
+def _statistics_bounds(source: Source, scale: str) -> tuple[float, float] | None:
+    if source.x_range is None:
+        return None
+    low, high = source.x_range
+    if scale == "log":
+        return (math.log(low), math.log(high)) if low > 0.0 else None
+    return low, high
+
+
+def _plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[float, float]:
+    """Narrow a range so wide that the sample would fall into a single bin."""
+    low, high = bounds
+    if sample.x.size < _SAMPLE_ENOUGH:
+        return bounds
+    first, last = (float(q) for q in np.quantile(sample.x, (0.001, 0.999)))
+    span = last - first
+    if span <= 0.0 or high - low < _ABSURD_RANGE * span:
+        return bounds
+    return max(low, first - 100.0 * span), min(high, last + 100.0 * span)
+
+
+def _rows_outside(table: BinTable) -> int:
+    refused = table.tally.refused
+    return refused.get("x below range", 0) + refused.get("x above range", 0)
+
+
+def _trimmed_bounds(table: BinTable) -> tuple[float, float] | None:
+    """A range without the far outliers, or None if there is nothing to gain."""
+    plan = table.plan
+    weight = table.total()[:, 0]
+    up_to = np.cumsum(weight)
+    aside = 0.5 * _TRIMMED_SHARE * up_to[-1]
+    first = int(np.searchsorted(up_to, aside, side="right"))
+    last = int(np.searchsorted(up_to, up_to[-1] - aside, side="left"))
+    low = plan.origin + first * plan.width
+    high = plan.origin + (last + 1) * plan.width
+    margin = 0.5 * (high - low)
+    low, high = max(low - margin, float(table.extent[0])), min(high + margin, float(table.extent[1]))
+    if (high - low) * _TRIM_GAIN > table.extent[1] - table.extent[0]:
+        return None
+    return low, high
+
+
+def _trim_caution(table: BinTable, source: Source) -> Caution:
+    refused = table.tally.refused
+    plan = table.plan
+    ends = [math.exp(end) if plan.scale == "log" else end for end in (plan.origin, plan.high)]
+    below, above = refused.get("x below range", 0), refused.get("x above range", 0)
+    return Caution(
+        "range trimmed",
+        f"The range of {source.columns.x} was trimmed to {source.axis.label(ends[0])} to "
+        f"{source.axis.label(ends[1])} because of far outliers: {below} rows lie below and {above} "
+        f"above it and were left out. Give --range to decide yourself.",
+    )

@@ -1,0 +1,462 @@
+"""The choice of the bandwidth: criteria over a grid, the best, and how flat it lies."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.bintable import BinTable, Level, Pyramid
+from fastsmooth.errors import InputError
+from fastsmooth.settings import ESTIMATORS
+from fastsmooth.smoother import (
+    Scores,
+    fit_level,
+    fold_sums,
+    least_weight,
+    score_level,
+)
+
+if TYPE_CHECKING:
+    from fastsmooth.kernels.shapes import Shape
+
+Floats = NDArray[np.float64]
+
+WIDTHS = 48
+# Below this many bins in h the binned sums lose accuracy; the search then asks for finer bins.
+FINE_BINS_PER_BANDWIDTH = 64
+# The search itself looks further down, to see how much finer the bins must be.
+_COARSEST_BINS_PER_BANDWIDTH = 8
+# The narrowest width leaves this share of rows with windows of four places or more.
+_SHARE_SUPPORTED = 0.95
+_PLACES_PER_WINDOW = 4
+_REFINED = 1e-3  # of log h
+# A local minimum this close to the best rivals it.
+_RIVAL_SHARE = 0.1
+_GOLDEN = (math.sqrt(5.0) - 1.0) / 2.0
+
+
+@dataclass(frozen=True)
+class Trail:
+    """What the search found for one estimator.
+
+    Attributes
+    ----------
+    estimator : str
+        Which.
+    bandwidths : (k,) float64
+        The grid, ascending, on the plan's scale.
+    leave_one_out, gcv, aicc : (k,) float64
+        Criteria at the grid; infinite where undefined.
+    excess : (k,) float64
+        Mean leave-one-out criterion less the chosen bandwidth's, paired row by row.
+    excess_std_error : (k,) float64
+        Its standard error from folds.
+    bandwidth : float
+        The criterion's choice, refined between grid points.
+    score : float
+        Leave-one-out criterion at the choice.
+    trace : float
+        Sum of leverages at the choice (equivalent number of parameters).
+    flat_zone : (float, float)
+        Bandwidths whose criterion is within one standard error of the choice's.
+    minima : int
+        Local minima of the criterion that are deeper than one standard error.
+    """
+
+    estimator: str
+    bandwidths: Floats
+    leave_one_out: Floats
+    gcv: Floats
+    aicc: Floats
+    excess: Floats
+    excess_std_error: Floats
+    bandwidth: float
+    score: float
+    trace: float
+    flat_zone: tuple[float, float]
+    minima: int
+
+    def values(self, criterion: str) -> Floats:
+        """Return the criterion's values at the grid (leave-one-out for the plug-in rule)."""
+        return {"gcv": self.gcv, "aicc": self.aicc}.get(criterion, self.leave_one_out)
+
+    @property
+    def at_low_end(self) -> bool:
+        """Whether the choice is the narrowest width searched."""
+        return self.bandwidth <= self.bandwidths[0] * (1.0 + 2.0 * _REFINED)
+
+    @property
+    def at_high_end(self) -> bool:
+        """Whether the choice is the widest width searched."""
+        return self.bandwidth >= self.bandwidths[-1] / (1.0 + 2.0 * _REFINED)
+
+    @property
+    def is_flat(self) -> bool:
+        """Whether the flat zone covers the whole interval searched."""
+        low, high = self.flat_zone
+        return low <= self.bandwidths[0] and high >= self.bandwidths[-1]
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return plain data for JSON (infinite values become null)."""
+        plain: dict[str, Any] = {}
+        for name, value in vars(self).items():
+            if isinstance(value, np.ndarray):
+                plain[name] = [one if math.isfinite(one) else None for one in value.tolist()]
+            else:
+                plain[name] = list(value) if isinstance(value, tuple) else value
+        return plain
+
+    @classmethod
+    def from_dict(cls, plain: dict[str, Any]) -> Trail:
+        """Build a trail from what `to_dict` returned."""
+        made: dict[str, Any] = {}
+        for name, value in plain.items():
+            if name == "flat_zone":
+                made[name] = tuple(value)
+            elif isinstance(value, list):
+                made[name] = np.array([math.inf if one is None else one for one in value])
+            else:
+                made[name] = value
+        return cls(**made)
+
+
+@dataclass(frozen=True)
+class Search:
+    """The search for both estimators.
+
+    Attributes
+    ----------
+    criterion : str
+        What chose.
+    kernel : str
+        Kernel function.
+    trails : dict of str to Trail
+        Per estimator.
+    rows_alone : float
+        Weight of rows that took no part in the criterion at any width, because the narrowest
+        window around them holds no other row.
+    """
+
+    criterion: str
+    kernel: str
+    trails: dict[str, Trail]
+    rows_alone: float
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return plain data for JSON."""
+        return {**vars(self), "trails": {k: v.to_dict() for k, v in self.trails.items()}}
+
+    @classmethod
+    def from_dict(cls, plain: dict[str, Any]) -> Search:
+        """Build a search from what `to_dict` returned."""
+        trails = {k: Trail.from_dict(v) for k, v in plain["trails"].items()}
+        return cls(**{**plain, "trails": trails})
+
+
+def narrowest_width(table: BinTable) -> float:
+    """Return the narrowest bandwidth that the data can support, on the plan's scale.
+
+    Nineteen rows in twenty must have four distinct places within one bandwidth to either side.
+    Places closer together than a bin count as two at most.
+
+    Raises
+    ------
+    InputError
+        There are fewer than four places.
+    """
+    total = table.total()
+    n = total[:, 0]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean = total[:, 1] / n
+        spread = total[:, 2] / n - mean * mean > 1e-9
+    places = np.where(n > 0.0, 1 + spread, 0)
+    if places.sum() < _PLACES_PER_WINDOW:
+        raise InputError(
+            "--x",
+            f"hold at least {_PLACES_PER_WINDOW} distinct values",
+            f"the rows that can be used have {int(places.sum())}",
+            "name another column, or check --where and --range",
+        )
+    up_to = np.concatenate(([0], np.cumsum(places)))
+    used = np.flatnonzero(n)
+    weight = n[used]
+
+    def supported(reach: int) -> bool:
+        low = np.maximum(used - reach, 0)
+        high = np.minimum(used + reach + 1, n.shape[0])
+        enough = up_to[high] - up_to[low] >= _PLACES_PER_WINDOW
+        return float(weight[enough].sum()) >= _SHARE_SUPPORTED * float(weight.sum())
+
+    low, high = 0, n.shape[0]
+    while low < high:
+        middle = (low + high) // 2
+        if supported(middle):
+            high = middle
+        else:
+            low = middle + 1
+    return (low + 1) * table.plan.width
+
+
+def search_table(
+    table: BinTable,
+    shape: Shape,
+    *,
+    criterion: str = "leave-one-out",
+    widths: int = WIDTHS,
+    bounds: tuple[float, float] | None = None,
+    threads: int = 1,
+) -> Search:
+    """Search the bandwidth of both estimators on a bin table.
+
+    Parameters
+    ----------
+    table : BinTable
+        Finished table.
+    shape : Shape
+        Kernel function.
+    criterion : str
+        One of `fastsmooth.settings.CRITERIA`.
+    widths : int
+        Bandwidths in the grid, evenly spaced in log h.
+    bounds : (float, float) or None
+        Interval to search, on the plan's scale; None takes it from the data.
+    threads : int
+        Bandwidths worked on at a time; the result does not depend on it.
+
+    Returns
+    -------
+    Search
+        Criteria, choices, flat zones.
+
+    Raises
+    ------
+    InputError
+        Too few distinct x.
+    """
+    low, high = bounds or _interval(table)
+    grid = np.geomspace(low, high, widths)
+    pyramid = Pyramid(table)
+    empty = least_weight(pyramid, shape)
+    keep, rows_alone = _voters(pyramid, shape, low, empty)
+    scored = pyramid if keep is None else Pyramid(table, keep)
+    job = _Job(pyramid, scored, shape, empty)
+    with ThreadPoolExecutor(threads) as pool:
+        points = list(pool.map(job.scores, grid.tolist()))
+        trails = dict(
+            zip(
+                ESTIMATORS,
+                pool.map(lambda name: _trail(job, name, grid, points, criterion), ESTIMATORS),
+                strict=True,
+            )
+        )
+    return Search(criterion, shape.name, trails, rows_alone)
+
+
+def _interval(table: BinTable) -> tuple[float, float]:
+    """The widths to search: from what data and bins support up to the whole range."""
+    low, high = table.extent.tolist()
+    narrowest = max(narrowest_width(table), _COARSEST_BINS_PER_BANDWIDTH * table.plan.width)
+    widest = max(high - low, 2.0 * narrowest)
+    return narrowest, widest
+
+
+def _voters(
+    pyramid: Pyramid, shape: Shape, narrowest: float, empty: float
+) -> tuple[NDArray[np.bool_] | None, float]:
+    """Bins whose rows have a leave-one-out prediction at the narrowest width, for both estimators.
+
+    The criterion is taken over these rows at every width: a set that changed with the width
+    would compare unlike things.
+    """
+    finest = pyramid.levels[0]
+    level = pyramid.levels[pyramid.level_for(narrowest, shape.bins_per_bandwidth)]
+    fits = fit_level(level, shape, narrowest, empty)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean_weight = np.where(level.first[0] > 0.0, level.first[0] / level.count, 0.0)
+    keep = np.ones(level.bins, bool)
+    for name in ESTIMATORS:
+        leverage = fits.unit_leverages[name] * mean_weight
+        # Beyond this, room is a difference of nearly equal binned sums.
+        keep &= leverage < 1.0 - 1e-6
+    lost = (level.first[0] > 0.0) & ~keep
+    if not lost.any():
+        return None, 0.0
+    return np.repeat(keep, finest.bins // level.bins), float(level.count[lost].sum())
+
+
+class _Job:
+    """Scores of both estimators at any bandwidth."""
+
+    def __init__(self, pyramid: Pyramid, scored: Pyramid, shape: Shape, empty: float) -> None:
+        self.pyramid = pyramid
+        self.scored = scored
+        self.shape = shape
+        self.empty = empty
+        top = scored.levels[-1]
+        self.rows = float(top.count.sum())
+        self.weight = float(top.first[0].sum())
+
+    def level(self, bandwidth: float) -> int:
+        return self.pyramid.level_for(bandwidth, self.shape.bins_per_bandwidth)
+
+    def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
+        index = self.level(bandwidth) if level is None else level
+        fits = fit_level(self.pyramid.levels[index], self.shape, bandwidth, self.empty)
+        scored = self.scored.levels[index]
+        points = {}
+        for name in ESTIMATORS:
+            scores = score_level(fits, name, scored)
+            points[name] = self._point(bandwidth, scores, fold_sums(scored, scores), scored)
+        return points
+
+    def _point(self, bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
+        n = self.rows
+        # A width at which a voter has no prediction cannot be compared with the others.
+        loo = scores.score / self.weight if scores.lost == 0.0 else math.inf
+        variance = scores.residual / self.weight
+        room = 1.0 - scores.trace / n
+        gcv = variance / room**2 if room > 0.0 else math.inf
+        aicc = math.inf
+        if n - scores.trace - 2.0 > 0.0 and variance > 0.0:
+            aicc = math.log(variance) + 1.0 + 2.0 * (scores.trace + 1.0) / (n - scores.trace - 2.0)
+        return _Point(
+            bandwidth, {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}, scores.trace,
+            folds / self.weight, scored.folds[:, 0].sum(axis=1) / self.weight,
+        )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Point:
+    bandwidth: float
+    criteria: dict[str, float]
+    trace: float
+    folds: Floats
+    shares: Floats
+
+
+def _trail(
+    job: _Job, name: str, grid: Floats, points: list[dict[str, _Point]], criterion: str
+) -> Trail:
+    mine = [point[name] for point in points]
+    if criterion == "plug-in":
+        from fastsmooth.plugin import plug_in_bandwidth
+
+        bandwidth = float(np.clip(plug_in_bandwidth(job.pyramid, job.shape, name), grid[0], grid[-1]))
+        best = job.scores(bandwidth)[name]
+        values = [point.criteria["leave-one-out"] for point in mine]
+    else:
+        values = [point.criteria[criterion] for point in mine]
+        if not any(math.isfinite(value) for value in values):
+            raise InputError(
+                "DATA",
+                "leave some width at which rows can be predicted from others",
+                "no width between the narrowest and the widest does",
+                "give more rows or --bandwidth",
+            )
+        best = _refine(job, name, grid, values, criterion)
+    excess = np.array([p.criteria["leave-one-out"] - best.criteria["leave-one-out"] for p in mine])
+    errors = np.array([_paired_error(p, best) for p in mine])
+    zone = _flat_zone(grid, excess, errors, best.bandwidth)
+    return Trail(
+        name,
+        grid,
+        *(np.array([p.criteria[c] for p in mine]) for c in ("leave-one-out", "gcv", "aicc")),
+        excess=excess,
+        excess_std_error=errors,
+        bandwidth=best.bandwidth,
+        score=best.criteria["leave-one-out"],
+        trace=best.trace,
+        flat_zone=zone,
+        minima=_deep_minima(np.exp(values) if criterion == "aicc" else np.array(values), errors),
+    )
+
+
+def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: str) -> _Point:
+    """Golden section between the neighbours of the best grid point, on one level throughout."""
+    place = int(np.argmin(values))
+    level = job.level(float(grid[place]))
+
+    def at(log_h: float) -> tuple[float, _Point]:
+        point = job.scores(math.exp(log_h), level)[name]
+        return point.criteria[criterion], point
+
+    low = math.log(grid[max(place - 1, 0)])
+    high = math.log(grid[min(place + 1, grid.shape[0] - 1)])
+    best = at(math.log(grid[place]))
+    left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
+    at_left, at_right = at(left), at(right)
+    while high - low > _REFINED:
+        if at_left[0] <= at_right[0]:
+            high, right, at_right = right, left, at_left
+            left = high - _GOLDEN * (high - low)
+            at_left = at(left)
+        else:
+            low, left, at_left = left, right, at_right
+            right = low + _GOLDEN * (high - low)
+            at_right = at(right)
+    return min((at_left, at_right, best), key=lambda pair: pair[0])[1]
+
+
+def _paired_error(point: _Point, best: _Point) -> float:
+    """Standard error of the criterion's difference, from its differences per fold.
+
+    Breiman, Friedman, Olshen & Stone (1984) for the one-standard-error rule; paired, because the
+    error of the criterion's level is far larger than that of a difference.
+    """
+    folds = point.folds.shape[0]
+    if folds < 2:
+        return math.inf
+    difference = point.folds - best.folds
+    away = difference - point.shares * difference.sum()
+    return math.sqrt(folds / (folds - 1.0) * float(away @ away))
+
+
+def _flat_zone(grid: Floats, excess: Floats, errors: Floats, best: float) -> tuple[float, float]:
+    """The interval around the best within one standard error, ends between grid points."""
+    # Positive outside the zone. Where the criterion is undefined, so is membership: outside.
+    over = np.where(np.isfinite(excess), excess - errors, math.inf)
+    logs = np.log(grid)
+
+    def end(places: Iterable[int]) -> float:
+        former_log, former_over = math.log(best), -1.0
+        for place in places:
+            if over[place] > 0.0:
+                if not math.isfinite(over[place]) or former_over >= 0.0:
+                    return math.exp(former_log)
+                share = former_over / (former_over - over[place]) if former_log != math.log(best) else 0.5
+                return math.exp(former_log + share * (logs[place] - former_log))
+            former_log, former_over = float(logs[place]), float(over[place])
+        return math.exp(former_log)
+
+    below = [i for i in range(grid.shape[0] - 1, -1, -1) if grid[i] < best]
+    above = [i for i in range(grid.shape[0]) if grid[i] > best]
+    return end(below), end(above)
+
+
+def _deep_minima(values: Floats, errors: Floats) -> int:
+    """Count local minima that rival the best and are parted from it by a standard error."""
+    best = int(np.argmin(values))
+    rival = values[best] + _RIVAL_SHARE * abs(values[best])
+    minima = 1
+    for place in range(values.shape[0]):
+        around = values[max(place - 1, 0) : place + 2]
+        if place == best or not values[place] <= min(around.min(), rival):
+            continue
+        lower = np.flatnonzero(values < values[place])
+        if not lower.size:
+            continue  # a tie with the best
+        deep = True
+        for end in (lower[lower < place][-1:], lower[lower > place][:1]):
+            if end.size:
+                between = slice(min(place, int(end[0])), max(place, int(end[0])) + 1)
+                barrier = between.start + int(np.argmax(values[between]))
+                climb = values[barrier] - values[place]
+                deep &= bool(climb > max(errors[place], errors[barrier]))
+        minima += deep
+    return minima

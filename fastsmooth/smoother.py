@@ -1,0 +1,167 @@
+"""One bandwidth on one level of a bin table: fits at all bin centres, and their criteria."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.bintable import Level, Pyramid
+
+if TYPE_CHECKING:
+    from fastsmooth.kernels.shapes import Shape
+
+Floats = NDArray[np.float64]
+
+# A window whose kernel weights sum to less than this share of one row's at the centre is empty.
+_LEAST_WINDOW = 1e-6
+# Rows that spread by less than this many bins (standard deviation) carry no slope.
+_LEAST_SPREAD_BINS = 1.0 / 16.0
+
+
+@dataclass(frozen=True)
+class Fits:
+    """Both estimators at the bin centres of one level, for one bandwidth.
+
+    Attributes
+    ----------
+    level : Level
+        Where the fits were made.
+    bandwidth_bins : float
+        h in bins of the level.
+    values : dict of str to (bins,)
+        Fitted mean less the plan's reference, per estimator; NaN in empty windows.
+    slopes : dict of str to (bins,)
+        Slope of the fitted curve, per bin.
+    unit_leverages : dict of str to (bins,)
+        Leverage of a row of weight 1 at the bin's centre.
+    sums : (3, bins)
+        S_0, S_1, S_2.
+    """
+
+    level: Level
+    bandwidth_bins: float
+    values: dict[str, Floats]
+    slopes: dict[str, Floats]
+    unit_leverages: dict[str, Floats]
+    sums: Floats
+
+
+@dataclass(frozen=True)
+class Scores:
+    """Criterion sums of one estimator at one bandwidth.
+
+    Attributes
+    ----------
+    score : float
+        Sum over rows of w (r / (1 - L))^2.
+    residual : float
+        Sum over rows of w r^2.
+    trace : float
+        Sum of the leverages.
+    lost : float
+        Weight of rows without a leave-one-out prediction.
+    coefficients : (7, bins)
+        Turn a fold's sums into its share of `score`.
+    """
+
+    score: float
+    residual: float
+    trace: float
+    lost: float
+    coefficients: Floats
+
+
+def least_weight(pyramid: Pyramid, shape: Shape) -> float:
+    """Return the sum of kernel weights up to which a window counts as empty."""
+    top = pyramid.levels[-1]
+    weight, rows = float(top.first[0].sum()), float(top.count.sum())
+    return _LEAST_WINDOW * shape.at_zero * (weight / rows if rows else 1.0)
+
+
+def kernel_sums(moments: Floats, shape: Shape, bandwidth_bins: float, powers: int, squared: bool) -> Floats:
+    """Return kernel sums at all bin centres.
+
+    Parameters
+    ----------
+    moments : (3, bins)
+        Bin sums of a, a v, a v^2.
+    shape : Shape
+        Kernel function.
+    bandwidth_bins : float
+        h in bins.
+    powers : int
+        Sums of K u^0 up to u^(powers - 1).
+    squared : bool
+        Whether to use K^2 in place of K.
+    """
+    from fastsmooth.kernels import binned
+
+    bins = moments.shape[1]
+    reach = min(math.ceil(shape.support * bandwidth_bins + 0.5), bins)
+    stencil = np.empty((powers, 3, reach + 1))
+    binned.fill_stencil(shape.code, bandwidth_bins, 2 if squared else 1, stencil)
+    padded = np.zeros((3, bins + 2 * reach))
+    padded[:, reach : reach + bins] = moments
+    out = np.empty((powers, bins))
+    binned.bin_sums(padded, stencil, out)
+    return out
+
+
+def least_spread(bandwidth_bins: float) -> float:
+    """Return the variance of u in a window up to which its rows carry no slope."""
+    return min((_LEAST_SPREAD_BINS / bandwidth_bins) ** 2, 1e-2)
+
+
+def fit_level(level: Level, shape: Shape, bandwidth: float, empty: float) -> Fits:
+    """Fit both estimators at the bin centres of a level.
+
+    Parameters
+    ----------
+    level : Level
+        Bin moments.
+    shape : Shape
+        Kernel function.
+    bandwidth : float
+        h on the plan's scale.
+    empty : float
+        See `least_weight`.
+    """
+    from fastsmooth.kernels import localfit
+
+    h = bandwidth / level.width
+    s = kernel_sums(level.first[0:3], shape, h, 3, squared=False)
+    t = kernel_sums(level.response, shape, h, 2, squared=False)
+    out = np.empty((6, level.bins))
+    localfit.fit_bins(s, t, shape.at_zero, empty, least_spread(h), out)
+    values = {"local-constant": out[0], "local-linear": out[3]}
+    slopes = {}
+    for row, name in ((1, "local-constant"), (4, "local-linear")):
+        slopes[name] = np.empty(level.bins)
+        localfit.curve_slopes(values[name], out[row], h, slopes[name])
+    return Fits(level, h, values, slopes, {"local-constant": out[2], "local-linear": out[5]}, s)
+
+
+def score_level(fits: Fits, estimator: str, scored: Level) -> Scores:
+    """Sum the criteria of one estimator over the rows of `scored`, a level of the same bins."""
+    from fastsmooth.kernels import localfit
+
+    coefficients = np.empty((7, scored.bins))
+    out = np.empty(4)
+    localfit.score_bins(
+        scored.first, scored.second, scored.pilot, fits.values[estimator],
+        fits.slopes[estimator], fits.unit_leverages[estimator], coefficients, out,
+    )  # fmt: skip
+    return Scores(float(out[0]), float(out[1]), float(out[2]), float(out[3]), coefficients)
+
+
+def fold_sums(scored: Level, scores: Scores) -> Floats:
+    """Return each fold's share of the leave-one-out sum, (folds,)."""
+    from fastsmooth.kernels import localfit
+
+    out = np.empty(scored.folds.shape[0])
+    localfit.fold_scores(scored.folds, scores.coefficients, out)
+    return out

@@ -1,0 +1,626 @@
+"""Data of any kind as chunks of float64 columns, in a fixed order, as often as asked."""
+
+from __future__ import annotations
+
+import math
+import os
+from collections import deque
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, field
+from threading import Event, Lock
+from types import TracebackType
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.axis import SECONDS_PER_DAY, TICKS_PER_SECOND, Axis
+from fastsmooth.errors import InputError, ReadError
+from fastsmooth.files import FileRecord, Task, check_unchanged, find_files, join_names
+from fastsmooth.near import advise
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+    from fastsmooth.casts import Role, Values
+    from fastsmooth.readers import Reader
+    from fastsmooth.where import Filter
+
+__all__ = ["Axis", "Chunk", "Columns", "FileRecord", "Source", "Task", "open_source"]
+
+T = TypeVar("T")
+CHUNK_ROWS = 65_536
+PENDING_PER_THREAD = 2
+
+
+@dataclass(frozen=True)
+class Columns:
+    """Which columns play which part.
+
+    Parameters
+    ----------
+    x, y : str
+        The reading along the axis and the reading whose mean is sought.
+    weight : str or None
+        Weight of each row.
+    count : str or None
+        Number of readings that each row stands for.
+    extra : tuple of str
+        Further columns, delivered as they are.
+    """
+
+    x: str
+    y: str
+    weight: str | None = None
+    count: str | None = None
+    extra: tuple[str, ...] = ()
+
+
+@dataclass
+class Chunk:
+    """Consecutive rows, in the file's own order, without the rows that hold a null.
+
+    Parameters
+    ----------
+    x, y : (n,) float64
+        Values, C-contiguous, possibly read-only. NaN and infinities are left in. On a temporal
+        axis x is seconds since the origin.
+    weight, count : (n,) float64 or None
+        Values, if such columns are named.
+    extra : tuple of pyarrow.Array
+        Further columns, n values each, as they are.
+    rows : int
+        Rows read, before the row filter and before nulls were removed.
+    filtered : int
+        Rows that the row filter dropped.
+    refused : dict of str to int
+        Rows with a null, by the first of ``x null``, ``y null``, ``weight null``, ``count null``
+        that applies.
+    """
+
+    x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    weight: NDArray[np.float64] | None
+    count: NDArray[np.float64] | None
+    extra: tuple[pa.Array, ...]
+    rows: int
+    filtered: int
+    refused: dict[str, int] = field(default_factory=dict)
+
+
+class Source:
+    """An opened set of data, to be passed over once or several times.
+
+    Use as a context manager, or call `close`.
+
+    Parameters
+    ----------
+    reader : Reader
+        Where record batches come from.
+    columns : Columns
+        Which columns play which part.
+    where : str or None
+        Row filter.
+
+    Attributes
+    ----------
+    axis : Axis
+        What the floats of x mean; the same for every file.
+    files : tuple of FileRecord
+        The files as they were when opened; empty for data in memory.
+    tasks : tuple of Task
+        What can be read on its own, in the fixed order.
+    rows_expected : int or None
+        Rows before the filter, if known.
+    x_range : tuple of float or None
+        Smallest and largest x by the files' statistics, over row groups in which rows may meet
+        the filter; None unless every one of them has a finite range.
+    x_unit, y_unit : str
+        Units from the fields' metadata; empty if there are none.
+    """
+
+    def __init__(self, reader: Reader, columns: Columns, where: str | None) -> None:
+        """Check the columns, parse the filter and fix the axis; see `open_source`."""
+        from fastsmooth.casts import Role, caster
+
+        self._reader = reader
+        self.columns = columns
+        self.where = where
+        self._roles = tuple(
+            Role(name, column)
+            for name, column in (
+                ("x", columns.x),
+                ("y", columns.y),
+                ("weight", columns.weight),
+                ("count", columns.count),
+            )
+            if column is not None
+        )
+        _check_present(reader, self._roles, columns.extra)
+        self._filters = _parse_filters(reader, where)
+        used = [role.column for role in self._roles] + list(columns.extra)
+        used += [name for one in self._filters for name in one.columns]
+        self._needed = tuple(dict.fromkeys(used))
+        reader.prepare(self._needed)
+        self.files = reader.files
+        self.tasks = reader.tasks
+        self.rows_expected = reader.rows_expected
+        self.x_unit = _unit_of(reader, columns.x)
+        self.y_unit = _unit_of(reader, columns.y)
+        kinds = _check_kinds(reader, self._roles)
+        _check_some_value(reader, self._roles)
+        self.axis = _make_axis(reader, self._roles[0], kinds)
+        self._pruned = _prune(reader, self._filters)
+        self.x_range = self._statistics_range()
+        self._casts = [
+            tuple(
+                caster(role, schema.field(role.column).type, self.axis if place_x else None)
+                for role, place_x in zip(self._roles, (True, False, False, False), strict=False)
+            )
+            for schema in reader.schemas
+        ]
+
+    def __enter__(self) -> Source:
+        """Return the source itself."""
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        """Close the source."""
+        self.close()
+
+    def close(self) -> None:
+        """Release what the source holds, temporary files included."""
+        self._reader.close()
+
+    def chunks(self, task: Task, rows: int = CHUNK_ROWS) -> Iterator[Chunk]:
+        """Read one task from start to end.
+
+        Parameters
+        ----------
+        task : Task
+            One of `tasks`.
+        rows : int
+            Rows of each chunk before filtering; the last may have fewer.
+
+        Yields
+        ------
+        Chunk
+            The rows. A task that cannot meet the filter by its statistics is one empty chunk
+            that counts all its rows as filtered.
+
+        Raises
+        ------
+        ReadError
+            Damage, another number of rows than the footer says, or a file that changed.
+        InputError
+            Integers beyond 2^53.
+        """
+        record = self._check_task_file(task)
+        if task.index in self._pruned:
+            yield self._empty_chunk(task)
+            return
+        place = self._reader.place_of[task.index]
+        filter_ = self._filters[place] if self._filters else None
+        casts = self._casts[place]
+        seen = 0
+        for batch in self._reader.batches(task.index, self._needed, rows):
+            seen += batch.num_rows
+            yield self._chunk(batch, casts, filter_)
+        if task.rows is not None and seen != task.rows:
+            raise ReadError(
+                "DATA",
+                "hold as many rows as it says",
+                f"{task.label} delivered {seen} of {task.rows} rows",
+                "copy or write the file again",
+            )
+        if record is not None:
+            check_unchanged(record)
+
+    def map_tasks(
+        self,
+        function: Callable[[Task, Iterator[Chunk]], T],
+        threads: int,
+        chunk_rows: int = CHUNK_ROWS,
+        progress: Callable[[int], None] | None = None,
+    ) -> Iterator[T]:
+        """Apply a function to every task, several at a time, and give results in task order.
+
+        Parameters
+        ----------
+        function : callable
+            Takes a task and its chunks, and returns a result. It runs in a thread of its own and
+            must not share what it changes.
+        threads : int
+            Tasks at a time; 1 runs them in the caller's thread.
+        chunk_rows : int
+            Rows of each chunk.
+        progress : callable or None
+            Called with the number of rows of each chunk as it is read, one call at a time.
+
+        Yields
+        ------
+        object
+            Results in task order, at most two for each thread kept waiting.
+
+        Raises
+        ------
+        Exception
+            What reading or `function` raised first in task order; the other tasks are stopped.
+        """
+        if threads < 1:
+            raise InputError("--threads", "be at least 1", f"it is {threads}", "leave it out")
+        stop = Event()
+        lock = Lock()
+
+        def feed(task: Task) -> Iterator[Chunk]:
+            for chunk in self.chunks(task, chunk_rows):
+                if stop.is_set():
+                    return
+                if progress is not None:
+                    with lock:
+                        progress(chunk.rows)
+                yield chunk
+
+        def run(task: Task) -> T:
+            return function(task, feed(task))
+
+        if threads == 1:
+            yield from map(run, self.tasks)
+            return
+        pool = ThreadPoolExecutor(threads, thread_name_prefix="fastsmooth")
+        pending: deque[Future[T]] = deque()
+        try:
+            for task in self.tasks:
+                if len(pending) >= PENDING_PER_THREAD * threads:
+                    yield pending.popleft().result()
+                pending.append(pool.submit(run, task))
+            while pending:
+                yield pending.popleft().result()
+        finally:
+            stop.set()
+            pool.shutdown(wait=True, cancel_futures=True)
+
+    def _chunk(
+        self,
+        batch: pa.RecordBatch,
+        casts: Sequence[Callable[[pa.Array], Values]],
+        filter_: Filter | None,
+    ) -> Chunk:
+        rows = batch.num_rows
+        if filter_ is not None:
+            mask = filter_.mask(batch)
+            if mask.true_count < rows:
+                batch = batch.filter(mask)
+        column = dict(zip(self._needed, batch.columns, strict=True))
+        parts = [cast(column[role.column]) for role, cast in zip(self._roles, casts, strict=True)]
+        extra = tuple(column[name] for name in self.columns.extra)
+        filtered = rows - batch.num_rows
+        refused: dict[str, int] = {}
+        keep: NDArray[np.bool_] | None = None
+        for role, part in zip(self._roles, parts, strict=True):
+            if part.valid is not None:
+                missing = ~part.valid if keep is None else keep & ~part.valid
+                refused[f"{role.name} null"] = int(np.count_nonzero(missing))
+                keep = part.valid if keep is None else keep & part.valid
+        floats = [part.floats for part in parts]
+        if keep is not None:
+            import pyarrow as pa
+
+            mask = pa.array(keep)
+            floats = [values[keep] for values in floats]
+            extra = tuple(array.filter(mask) for array in extra)
+        named = {role.name: values for role, values in zip(self._roles, floats, strict=True)}
+        return Chunk(
+            named["x"],
+            named["y"],
+            named.get("weight"),
+            named.get("count"),
+            extra,
+            rows,
+            filtered,
+            {reason: number for reason, number in refused.items() if number},
+        )
+
+    def _empty_chunk(self, task: Task) -> Chunk:
+        import pyarrow as pa
+
+        schema = self._reader.schemas[self._reader.place_of[task.index]]
+        none = np.empty(0)
+        return Chunk(
+            none,
+            none,
+            none if self.columns.weight is not None else None,
+            none if self.columns.count is not None else None,
+            tuple(pa.array([], schema.field(name).type) for name in self.columns.extra),
+            rows=task.rows or 0,
+            filtered=task.rows or 0,
+        )
+
+    def _check_task_file(self, task: Task) -> FileRecord | None:
+        if not self.files:
+            return None
+        record = self.files[self._reader.place_of[task.index]]
+        check_unchanged(record)
+        return record
+
+    def _statistics_range(self) -> tuple[float, float] | None:
+        lows: list[float] = []
+        highs: list[float] = []
+        for task in self.tasks:
+            if task.index in self._pruned:
+                continue
+            extent = self._reader.extent(task.index, self.columns.x)
+            if extent is not None and extent.nulls is not None and extent.nulls == task.rows:
+                continue
+            if extent is None or extent.low is None or extent.high is None:
+                return None
+            lows.append(_axis_float(extent.low, extent.unit, self.axis))
+            highs.append(_axis_float(extent.high, extent.unit, self.axis))
+        if not lows or not math.isfinite(min(lows)) or not math.isfinite(max(highs)):
+            return None
+        return min(lows), max(highs)
+
+
+def open_source(data: Any, columns: Columns, *, where: str | None = None) -> Source:
+    """Open data of any kind.
+
+    Parameters
+    ----------
+    data : path, list of paths, dict, tuple, or frame
+        A file, folder or glob (Parquet, Arrow IPC or CSV), or a list of these; a dict of column
+        name to one-dimensional array; a tuple of arrays in the order x, y, weight, count, extra
+        (those that `columns` names); a pyarrow Dataset; a polars LazyFrame; or any object with
+        ``__arrow_c_stream__``.
+    columns : Columns
+        Which columns play which part.
+    where : str or None
+        Row filter, an SQL condition.
+
+    Returns
+    -------
+    Source
+        To be used as a context manager.
+
+    Raises
+    ------
+    InputError
+        Data, a column or the filter cannot be used.
+    ReadError
+        A file is damaged.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> arrays = {"wet_bulb_c": np.array([9.5, 10.0]), "power_kw": np.array([30.0, 31.0])}
+    >>> with open_source(arrays, Columns("wet_bulb_c", "power_kw")) as source:
+    ...     [chunk.rows for task in source.tasks for chunk in source.chunks(task)]
+    [2]
+    """
+    reader = _open_reader(data, columns)
+    try:
+        return Source(reader, columns, where)
+    except BaseException:
+        reader.close()
+        raise
+
+
+def _open_reader(data: Any, columns: Columns) -> Reader:
+    from fastsmooth import readers
+
+    if isinstance(data, str | os.PathLike):
+        return _open_files(find_files(data))
+    if isinstance(data, list | tuple) and (
+        not data or all(isinstance(one, str | os.PathLike) for one in data)
+    ):
+        return _open_files(find_files(data))
+    if isinstance(data, tuple):
+        names = [columns.x, columns.y, columns.weight, columns.count, *columns.extra]
+        named = [name for name in names if name is not None]
+        if len(data) != len(named):
+            raise InputError(
+                "DATA",
+                "hold one array for each named column",
+                f"it holds {len(data)} arrays for {join_names(named)}",
+                "hand in a dict of name to array",
+            )
+        data = dict(zip(named, data, strict=True))
+    if isinstance(data, dict):
+        return readers.TableReader(readers.table_from_arrays(data), "the arrays")
+    raise InputError(
+        "DATA",
+        "be a path, arrays or a frame",
+        f"it is a {type(data).__name__}",
+        "hand in a path, a dict of arrays, or a frame with __arrow_c_stream__",
+    )
+
+
+def _open_files(paths: tuple[str, ...]) -> Reader:
+    from fastsmooth.parquet import ParquetReader
+
+    return ParquetReader(paths)
+
+
+def _check_present(reader: Reader, roles: Sequence[Role], extra: Sequence[str]) -> None:
+    from fastsmooth.readers import count_fields
+
+    wanted = [(role.argument, role.column) for role in roles] + [("DATA", name) for name in extra]
+    known = list(dict.fromkeys(name for schema in reader.schemas for name in schema.names))
+    for argument, column in wanted:
+        requirement = "name a column of DATA" if argument != "DATA" else "hold each named column"
+        if column not in known:
+            raise InputError(argument, requirement, f"'{column}' is none", advise(column, known))
+        for place, schema in zip(reader.places, reader.schemas, strict=True):
+            found = count_fields(schema, column)
+            if found == 0:
+                raise InputError(
+                    argument,
+                    requirement.replace("DATA", "every file")
+                    + (" in every file" if argument == "DATA" else ""),
+                    f"'{column}' is missing from '{place}'",
+                    "leave the file out or write the column to it",
+                )
+            if found > 1:
+                raise InputError(
+                    argument,
+                    requirement,
+                    f"'{place}' has {found} columns called '{column}'",
+                    "rename all but one",
+                )
+
+
+def _check_kinds(reader: Reader, roles: Sequence[Role]) -> list[str]:
+    from fastsmooth.casts import column_kind
+
+    kinds = [
+        [
+            column_kind(role, schema.field(role.column).type, f"'{place}'")
+            for place, schema in zip(reader.places, reader.schemas, strict=True)
+        ]
+        for role in roles
+    ]
+    for role, kinds_of_role in zip(roles, kinds, strict=True):
+        if all(kind == "empty" for kind in kinds_of_role):
+            raise _all_null(role)
+    first = next(place for place, kind in enumerate(kinds[0]) if kind != "empty")
+    for place, kind in enumerate(kinds[0]):
+        if kind not in ("empty", kinds[0][first]):
+            raise InputError(
+                roles[0].argument,
+                "name a column of one kind in every file",
+                f"'{roles[0].column}' holds {kinds[0][first]}s in '{reader.places[first]}' and "
+                f"{kind}s in '{reader.places[place]}'",
+                "write the files alike",
+            )
+    return kinds[0]
+
+
+def _all_null(role: Role) -> InputError:
+    return InputError(
+        role.argument,
+        "name a column with values",
+        f"'{role.column}' holds nulls only",
+        "name another column",
+    )
+
+
+def _check_some_value(reader: Reader, roles: Sequence[Role]) -> None:
+    """Refuse a column of which the statistics say that every value is null."""
+    for role in roles:
+        total = 0
+        for task in reader.tasks:
+            extent = reader.extent(task.index, role.column)
+            if extent is None or extent.nulls is None or extent.nulls != task.rows:
+                break
+            total += extent.nulls
+        else:
+            if total:
+                raise _all_null(role)
+
+
+def _parse_filters(reader: Reader, where: str | None) -> list[Filter]:
+    if where is None:
+        return []
+    from fastsmooth.where import parse_where
+
+    parsed: dict[pa.Schema, Filter] = {}
+    filters = []
+    for schema in reader.schemas:
+        # Metadata does not matter here and would only multiply the schemas.
+        bare = schema.remove_metadata()
+        if bare not in parsed:
+            parsed[bare] = parse_where(where, bare)
+        filters.append(parsed[bare])
+    return filters
+
+
+def _prune(reader: Reader, filters: Sequence[Filter]) -> frozenset[int]:
+    from fastsmooth.parquet import ParquetReader
+
+    if not filters or not isinstance(reader, ParquetReader):
+        return frozenset()
+    return frozenset(
+        index for place, one in enumerate(filters) for index in reader.prune(place, one.prunable)
+    )
+
+
+def _unit_of(reader: Reader, column: str) -> str:
+    metadata = reader.schemas[0].field(column).metadata or {}
+    return bytes(metadata.get(b"unit", b"")).decode("utf-8", "replace")
+
+
+def _axis_float(value: float, unit: str, axis: Axis) -> float:
+    from fastsmooth.casts import statistic_ticks
+
+    if axis.kind == "number":
+        return float(value)
+    ticks = statistic_ticks(int(value), unit, axis) - axis.origin
+    if axis.unit == "day":
+        return float(ticks * SECONDS_PER_DAY)
+    return ticks / TICKS_PER_SECOND[axis.unit]
+
+
+def _make_axis(reader: Reader, role: Role, kinds: Sequence[str]) -> Axis:
+    from fastsmooth.casts import finest_unit, plain_type
+
+    kind = next(kind for kind in kinds if kind != "empty")
+    if kind == "number":
+        return Axis("number", "double", "", None, 0)
+    types = [
+        plain_type(schema.field(role.column).type)
+        for schema, kind_of_file in zip(reader.schemas, kinds, strict=True)
+        if kind_of_file != "empty"
+    ]
+    if kind == "duration":
+        unit = finest_unit(types)
+        return Axis(kind, f"duration[{unit}]", unit, None, 0)
+    if kind == "date":
+        axis = Axis(kind, "date32[day]", "day", None, 0)
+        return _with_origin(axis, reader, role)
+    zones = list(dict.fromkeys(one.tz for one in types))
+    if None in zones and len(zones) > 1:
+        named = next(zone for zone in zones if zone is not None)
+        raise InputError(
+            role.argument,
+            "name a column with a zone in every file or in none",
+            f"'{role.column}' has zone {named} in some and no zone in others",
+            "write the files alike",
+        )
+    unit = finest_unit(types)
+    spelled = f"timestamp[{unit}]" if zones[0] is None else f"timestamp[{unit}, tz={zones[0]}]"
+    return _with_origin(Axis(kind, spelled, unit, zones[0], 0), reader, role)
+
+
+def _with_origin(axis: Axis, reader: Reader, role: Role) -> Axis:
+    """Put the origin at the start of the day (UTC) of the smallest statistic or first value."""
+    from fastsmooth.casts import statistic_ticks
+
+    extents = [reader.extent(task.index, role.column) for task in reader.tasks]
+    lows = [
+        statistic_ticks(int(extent.low), extent.unit, axis)
+        for extent in extents
+        if extent is not None and extent.low is not None
+    ]
+    first = min(lows) if lows else _first_ticks(axis, reader, role)
+    day = 1 if axis.unit == "day" else SECONDS_PER_DAY * TICKS_PER_SECOND[axis.unit]
+    return Axis(axis.kind, axis.arrow_type, axis.unit, axis.zone, first // day * day)
+
+
+def _first_ticks(axis: Axis, reader: Reader, role: Role) -> int:
+    import pyarrow.types as pt
+
+    from fastsmooth.casts import plain_type, to_ticks
+
+    for task in reader.tasks:
+        for batch in reader.batches(task.index, (role.column,), CHUNK_ROWS):
+            if pt.is_null(plain_type(batch.column(0).type)):
+                break
+            ticks = to_ticks(role, batch.column(0).drop_null(), axis)
+            if len(ticks):
+                return int(ticks[0].as_py())
+    return 0
