@@ -16,7 +16,7 @@ from fastsmooth.cautions import about_curve, about_rows, about_search
 from fastsmooth.curve import Curve, Density
 from fastsmooth.errors import InputError
 from fastsmooth.passes import Counted, Progress, bins_for, count_finer, count_rows, silent
-from fastsmooth.search import FINE_BINS_PER_BANDWIDTH, Search, Trail, search_table
+from fastsmooth.search import Search, Trail, search_table
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.smoother import Fits, fit_level, least_weight
 from fastsmooth.source import Columns, Source, open_source
@@ -27,6 +27,7 @@ if TYPE_CHECKING:
 Floats = NDArray[np.float64]
 
 _MOST_SEARCHES = 3
+_ERROR_MARGIN = 4.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
 
@@ -91,9 +92,11 @@ def make_curve(
     with open_source(data, Columns(x, y, weight, count), where=reading.where) as source:
         fixed = _own_bandwidth(source, reading, smoothing)
         places = _own_points(source, reading, band)
-        counted, found, chosen = _count_and_search(source, reading, smoothing, fixed, progress)
+        counted, pyramid, found, chosen = _count_and_search(
+            source, reading, smoothing, fixed, progress
+        )
         progress("fitting", 0, None)
-        return _assemble(source, counted, found, chosen, places, reading, smoothing, band)
+        return _assemble(source, counted, pyramid, found, chosen, places, reading, smoothing, band)
 
 
 def search_bandwidth(
@@ -173,15 +176,16 @@ def _count_and_search(
     smoothing: Smoothing,
     fixed: float | None,
     progress: Progress,
-) -> tuple[Counted, Search, float]:
+) -> tuple[Counted, Pyramid, Search, float]:
     """Read and search; read again with finer bins while the chosen width asks for them."""
     counted = count_rows(source, reading, progress)
     shape = find_shape(smoothing.kernel)
-    fine = min(FINE_BINS_PER_BANDWIDTH, shape.bins_per_bandwidth)
+    fine = shape.fewest_bins_per_bandwidth
     for tried in range(1, _MOST_SEARCHES + 1):
         progress("searching", 0, None)
+        pyramid = Pyramid(counted.table)
         found = search_table(
-            counted.table, shape, criterion=smoothing.criterion, widths=smoothing.widths,
+            counted.table, pyramid, shape, criterion=smoothing.criterion, widths=smoothing.widths,
             threads=reading.threads,
         )  # fmt: skip
         chosen = fixed or found.trails[smoothing.estimator].bandwidth
@@ -190,17 +194,18 @@ def _count_and_search(
             break
         # A width at the very end of what these bins resolve may want to go much further.
         ahead = 4.0 if found.trails[smoothing.estimator].at_low_end and fixed is None else 1.0
-        bins = bins_for(counted.table, chosen, ahead * fine, reading.threads)
+        bins = bins_for(counted.table, chosen, ahead * shape.bins_per_bandwidth, reading.threads)
         low, high = counted.table.extent.tolist()
         if (high - low) / bins > 0.8 * plan.width:
             break
         counted = count_finer(source, counted, reading, bins, progress)
-    return counted, found, chosen
+    return counted, pyramid, found, chosen
 
 
 def _assemble(
     source: Source,
     counted: Counted,
+    pyramid: Pyramid,
     found: Search,
     bandwidth: float,
     places: Floats | None,
@@ -213,7 +218,6 @@ def _assemble(
     low, high = table.extent.tolist()
     if places is None:
         places = np.linspace(low, high, band.points)
-    pyramid = Pyramid(table)
     level = pyramid.levels[pyramid.level_for(bandwidth, shape.bins_per_bandwidth)]
     empty = least_weight(pyramid, shape)
     occupied = Occupied(plan.origin, plan.width, np.flatnonzero(pyramid.levels[0].first[0]))
@@ -247,6 +251,7 @@ def _assemble(
     }  # fmt: skip
     engine = {
         "name": "binned", "bins": plan.bins, "bins_per_bandwidth": bandwidth / plan.width,
+        "fewest_bins_per_bandwidth": shape.fewest_bins_per_bandwidth,
         "level_bins_per_bandwidth": bandwidth / level.width, "passes": counted.passes,
         "error_in_noise_sd": error, "equivalent_parameters": _trace(fits, smoothing.estimator),
         "residual_sd": math.sqrt(noise.overall) if noise.overall > 0.0 else 0.0,
@@ -287,14 +292,15 @@ def _binning_error(points: Points, coarse: Points, shape: Shape) -> float:
     """Estimated error of the binned sums, in residual standard deviations.
 
     The difference to a table of half as many bins, divided by what the order of the error allows
-    (Richardson's argument): the error falls by at least two to the power smoothness + 1, up to
-    three.
+    (Richardson's argument: the error falls by at least two to the power smoothness + 1, up to
+    three), times a margin, because the difference may be small by chance.
     """
     both = np.isfinite(points.estimate) & np.isfinite(coarse.estimate) & (points.residual_sd > 0.0)
     if not both.any():
         return math.nan
     away = np.abs(points.estimate - coarse.estimate)[both] / points.residual_sd[both]
-    return float(away.max()) / max(1.0, 2.0 ** min(shape.smoothness + 1, 3) - 1.0)
+    order = min(shape.smoothness + 1, 3)
+    return _ERROR_MARGIN * float(away.max()) / (2.0**order - 1.0)
 
 
 def _trace(fits: Fits, estimator: str) -> float:

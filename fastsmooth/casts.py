@@ -101,6 +101,26 @@ def plain_array(array: pa.Array) -> pa.Array:
             return array
 
 
+def filterable_type(data_type: pa.DataType) -> pa.DataType:
+    """Return the type in which Arrow can filter a column.
+
+    Parameters
+    ----------
+    data_type : pyarrow.DataType
+        Type of a column.
+
+    Returns
+    -------
+    pyarrow.DataType
+        Text and binary without views; every other type as it is.
+    """
+    if pt.is_string_view(data_type):
+        return pa.large_string()
+    if pt.is_binary_view(data_type):
+        return pa.large_binary()
+    return data_type
+
+
 def is_number(data_type: pa.DataType) -> bool:
     """Tell whether values of a plain type become floats by value.
 

@@ -10,11 +10,11 @@ import numpy as np
 from fastsmooth.bintable import BinTable
 from fastsmooth.curve import OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
-from fastsmooth.search import FINE_BINS_PER_BANDWIDTH
 from fastsmooth.source import Source
 
 _MANY_REFUSED = 0.05
 _MANY_ALIKE = 0.001
+_MANY_ALONE = 0.001
 _HEAVY_FOLD = 0.5
 _CORRELATION_WORTH_TELLING = 0.1
 _PAIRS_ENOUGH = 100
@@ -84,7 +84,7 @@ def about_search(made: Curve) -> Iterator[Caution]:
             "Every bandwidth searched is within one standard error of the best: the data do not "
             "say how much to smooth.",
         )
-    if made.search.rows_alone:
+    if made.search.rows_alone > _MANY_ALONE * made.trace["rows"]["used"]:
         yield Caution(
             "rows alone",
             f"{made.search.rows_alone:g} rows have no neighbour within the narrowest width and "
@@ -95,7 +95,7 @@ def about_search(made: Curve) -> Iterator[Caution]:
 def about_curve(made: Curve, sample: Sample) -> Iterator[Caution]:
     """Yield cautions about the curve itself; `sample` has x in axis floats."""
     engine = made.trace["engine"]
-    if engine["bins_per_bandwidth"] < 0.99 * min(FINE_BINS_PER_BANDWIDTH, 16):
+    if engine["bins_per_bandwidth"] < 0.99 * engine["fewest_bins_per_bandwidth"]:
         yield Caution(
             "coarse bins",
             f"The bandwidth spans only {engine['bins_per_bandwidth']:.1f} bins within the memory "

@@ -285,12 +285,12 @@ def check_unchanged(record: FileRecord) -> None:
     ReadError
         The file changed or went away.
     """
-    now = read_identity(record.path, record.rows)
+    now = read_identity(record.path, record.rows) if os.path.exists(record.path) else None
     if now != record:
         raise ReadError(
             "DATA",
             "stay as it is while it is read",
-            f"'{record.path}' was changed meanwhile",
+            f"'{record.path}' was changed or removed meanwhile",
             "run again when nothing writes to it",
         )
 

@@ -175,6 +175,12 @@ class TableReader(Reader):
         part = self._table.select(numbers).slice(index * ROWS_PER_TABLE_TASK, ROWS_PER_TABLE_TASK)
         return rebatch(part.to_batches(), rows)
 
+    def extent(self, index: int, column: str) -> Extent:
+        """Count a stretch's nulls."""
+        number = self._table.schema.get_field_index(column)
+        part = self._table.column(number).slice(index * ROWS_PER_TABLE_TASK, ROWS_PER_TABLE_TASK)
+        return Extent(None, None, "", part.null_count)
+
 
 def table_from_arrays(arrays: dict[str, object]) -> pa.Table:
     """Wrap named one-dimensional arrays as a table, without a copy where their memory allows.
@@ -209,13 +215,11 @@ def table_from_arrays(arrays: dict[str, object]) -> pa.Table:
                 f"'{name}' has {array.ndim} dimensions",
                 "hand in one column at a time",
             )
-        masked = isinstance(values, np.ma.MaskedArray)
+        mask = np.ma.getmaskarray(values) if isinstance(values, np.ma.MaskedArray) else None
         # Arrow shares native-endian memory only.
         native = array.astype(array.dtype.newbyteorder("="), copy=False)
         try:
-            columns[name] = pa.array(
-                native, mask=np.ma.getmaskarray(values) if masked else None, from_pandas=False
-            )
+            columns[name] = pa.array(native, mask=mask, from_pandas=False)
         except (pa.ArrowException, TypeError) as error:
             raise InputError(
                 "DATA",

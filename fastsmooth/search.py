@@ -23,13 +23,13 @@ from fastsmooth.smoother import (
 )
 
 if TYPE_CHECKING:
+    import pyarrow as pa
+
     from fastsmooth.kernels.shapes import Shape
 
 Floats = NDArray[np.float64]
 
 WIDTHS = 48
-# Below this many bins in h the binned sums lose accuracy; the search then asks for finer bins.
-FINE_BINS_PER_BANDWIDTH = 64
 # The search itself looks further down, to see how much finer the bins must be.
 _COARSEST_BINS_PER_BANDWIDTH = 8
 # The narrowest width leaves this share of rows with windows of four places or more.
@@ -148,6 +148,28 @@ class Search:
     trails: dict[str, Trail]
     rows_alone: float
 
+    def table(self) -> pa.Table:
+        """Return the criteria of both estimators at every width as an Arrow table.
+
+        Returns
+        -------
+        pyarrow.Table
+            Columns ``estimator``, ``bandwidth``, ``leave_one_out``, ``gcv``, ``aicc``,
+            ``excess``, ``excess_std_error``; undefined values are null.
+        """
+        import pyarrow as pa
+
+        names = ("leave_one_out", "gcv", "aicc", "excess", "excess_std_error")
+        parts = []
+        for name, trail in self.trails.items():
+            columns: dict[str, Any] = {"estimator": [name] * trail.bandwidths.shape[0]}
+            columns["bandwidth"] = trail.bandwidths
+            for column in names:
+                values = getattr(trail, column)
+                columns[column] = pa.array(values, mask=~np.isfinite(values))
+            parts.append(pa.table(columns))
+        return pa.concat_tables(parts)
+
     def to_dict(self) -> dict[str, Any]:
         """Return plain data for JSON."""
         return {**vars(self), "trails": {k: v.to_dict() for k, v in self.trails.items()}}
@@ -205,6 +227,7 @@ def narrowest_width(table: BinTable) -> float:
 
 def search_table(
     table: BinTable,
+    pyramid: Pyramid,
     shape: Shape,
     *,
     criterion: str = "leave-one-out",
@@ -218,6 +241,8 @@ def search_table(
     ----------
     table : BinTable
         Finished table.
+    pyramid : Pyramid
+        Its levels.
     shape : Shape
         Kernel function.
     criterion : str
@@ -241,7 +266,6 @@ def search_table(
     """
     low, high = bounds or _interval(table)
     grid = np.geomspace(low, high, widths)
-    pyramid = Pyramid(table)
     empty = least_weight(pyramid, shape)
     keep, rows_alone = _voters(pyramid, shape, low, empty)
     scored = pyramid if keep is None else Pyramid(table, keep)

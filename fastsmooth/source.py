@@ -15,10 +15,9 @@ from typing import TYPE_CHECKING, Any, TypeVar
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.axis import SECONDS_PER_DAY, TICKS_PER_SECOND, Axis
+from fastsmooth.axis import Axis
 from fastsmooth.errors import InputError, ReadError
-from fastsmooth.files import FileRecord, Task, check_unchanged, find_files, join_names
-from fastsmooth.near import advise
+from fastsmooth.files import FileRecord, Task, check_unchanged, file_format, find_files, join_names
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -122,36 +121,40 @@ class Source:
 
     def __init__(self, reader: Reader, columns: Columns, where: str | None) -> None:
         """Check the columns, parse the filter and fix the axis; see `open_source`."""
-        from fastsmooth.casts import Role, caster
+        from fastsmooth.casts import caster
+        from fastsmooth.opening import (
+            check_kinds,
+            check_present,
+            check_some_value,
+            find_pruned,
+            make_axis,
+            parse_filters,
+            unit_of,
+        )
 
         self._reader = reader
         self.columns = columns
         self.where = where
-        self._roles = tuple(
-            Role(name, column)
-            for name, column in (
-                ("x", columns.x),
-                ("y", columns.y),
-                ("weight", columns.weight),
-                ("count", columns.count),
-            )
-            if column is not None
-        )
-        _check_present(reader, self._roles, columns.extra)
-        self._filters = _parse_filters(reader, where)
+        self._roles = _roles_of(columns)
+        check_present(reader, self._roles, columns.extra)
+        self._filters = parse_filters(reader, where)
         used = [role.column for role in self._roles] + list(columns.extra)
         used += [name for one in self._filters for name in one.columns]
         self._needed = tuple(dict.fromkeys(used))
+        schemas = reader.schemas
         reader.prepare(self._needed)
+        if reader.schemas is not schemas:
+            # A temporary file may store a column in another type than announced.
+            self._filters = parse_filters(reader, where)
         self.files = reader.files
         self.tasks = reader.tasks
         self.rows_expected = reader.rows_expected
-        self.x_unit = _unit_of(reader, columns.x)
-        self.y_unit = _unit_of(reader, columns.y)
-        kinds = _check_kinds(reader, self._roles)
-        _check_some_value(reader, self._roles)
-        self.axis = _make_axis(reader, self._roles[0], kinds)
-        self._pruned = _prune(reader, self._filters)
+        self.x_unit = unit_of(reader, columns.x)
+        self.y_unit = unit_of(reader, columns.y)
+        kinds = check_kinds(reader, self._roles)
+        check_some_value(reader, self._roles)
+        self.axis = make_axis(reader, self._roles[0], kinds)
+        self._pruned = find_pruned(reader, self._filters)
         self.x_range = self._statistics_range()
         self._casts = [
             tuple(
@@ -292,15 +295,24 @@ class Source:
         casts: Sequence[Callable[[pa.Array], Values]],
         filter_: Filter | None,
     ) -> Chunk:
-        rows = batch.num_rows
+        from fastsmooth.casts import filterable_type, plain_array
+
+        rows = kept = batch.num_rows
+        column = dict(zip(self._needed, batch.columns, strict=True))
+        for name in self.columns.extra:
+            column[name] = column[name].cast(filterable_type(column[name].type))
         if filter_ is not None:
             mask = filter_.mask(batch)
-            if mask.true_count < rows:
-                batch = batch.filter(mask)
-        column = dict(zip(self._needed, batch.columns, strict=True))
+            kept = mask.true_count
+            if kept < rows:
+                # Columns that only the filter reads are done with. Runs cannot be filtered.
+                plain = {role.column: plain_array(column[role.column]) for role in self._roles}
+                extra_columns = {name: column[name] for name in self.columns.extra}
+                column = {
+                    name: array.filter(mask) for name, array in (plain | extra_columns).items()
+                }
         parts = [cast(column[role.column]) for role, cast in zip(self._roles, casts, strict=True)]
         extra = tuple(column[name] for name in self.columns.extra)
-        filtered = rows - batch.num_rows
         refused: dict[str, int] = {}
         keep: NDArray[np.bool_] | None = None
         for role, part in zip(self._roles, parts, strict=True):
@@ -323,21 +335,24 @@ class Source:
             named.get("count"),
             extra,
             rows,
-            filtered,
+            rows - kept,
             {reason: number for reason, number in refused.items() if number},
         )
 
     def _empty_chunk(self, task: Task) -> Chunk:
         import pyarrow as pa
 
+        from fastsmooth.casts import filterable_type
+
         schema = self._reader.schemas[self._reader.place_of[task.index]]
+        types = [filterable_type(schema.field(name).type) for name in self.columns.extra]
         none = np.empty(0)
         return Chunk(
             none,
             none,
             none if self.columns.weight is not None else None,
             none if self.columns.count is not None else None,
-            tuple(pa.array([], schema.field(name).type) for name in self.columns.extra),
+            tuple(pa.array([], data_type) for data_type in types),
             rows=task.rows or 0,
             filtered=task.rows or 0,
         )
@@ -350,6 +365,8 @@ class Source:
         return record
 
     def _statistics_range(self) -> tuple[float, float] | None:
+        from fastsmooth.opening import axis_float
+
         lows: list[float] = []
         highs: list[float] = []
         for task in self.tasks:
@@ -360,8 +377,8 @@ class Source:
                 continue
             if extent is None or extent.low is None or extent.high is None:
                 return None
-            lows.append(_axis_float(extent.low, extent.unit, self.axis))
-            highs.append(_axis_float(extent.high, extent.unit, self.axis))
+            lows.append(axis_float(extent.low, extent.unit, self.axis))
+            highs.append(axis_float(extent.high, extent.unit, self.axis))
         if not lows or not math.isfinite(min(lows)) or not math.isfinite(max(highs)):
             return None
         return min(lows), max(highs)
@@ -414,11 +431,11 @@ def _open_reader(data: Any, columns: Columns) -> Reader:
     from fastsmooth import readers
 
     if isinstance(data, str | os.PathLike):
-        return _open_files(find_files(data))
+        return _open_files(find_files(data), columns)
     if isinstance(data, list | tuple) and (
         not data or all(isinstance(one, str | os.PathLike) for one in data)
     ):
-        return _open_files(find_files(data))
+        return _open_files(find_files(data), columns)
     if isinstance(data, tuple):
         names = [columns.x, columns.y, columns.weight, columns.count, *columns.extra]
         named = [name for name in names if name is not None]
@@ -432,195 +449,33 @@ def _open_reader(data: Any, columns: Columns) -> Reader:
         data = dict(zip(named, data, strict=True))
     if isinstance(data, dict):
         return readers.TableReader(readers.table_from_arrays(data), "the arrays")
-    raise InputError(
-        "DATA",
-        "be a path, arrays or a frame",
-        f"it is a {type(data).__name__}",
-        "hand in a path, a dict of arrays, or a frame with __arrow_c_stream__",
-    )
+    from fastsmooth.frames import open_frame
+
+    return open_frame(data)
 
 
-def _open_files(paths: tuple[str, ...]) -> Reader:
+def _open_files(paths: tuple[str, ...], columns: Columns) -> Reader:
+    kind = file_format(paths[0])
+    if kind == "csv":
+        from fastsmooth.csvfile import CsvReader
+
+        return CsvReader(paths, _roles_of(columns))
+    if kind == "arrow":
+        from fastsmooth.arrowfile import ArrowReader
+
+        return ArrowReader(paths)
     from fastsmooth.parquet import ParquetReader
 
     return ParquetReader(paths)
 
 
-def _check_present(reader: Reader, roles: Sequence[Role], extra: Sequence[str]) -> None:
-    from fastsmooth.readers import count_fields
+def _roles_of(columns: Columns) -> tuple[Role, ...]:
+    from fastsmooth.casts import Role
 
-    wanted = [(role.argument, role.column) for role in roles] + [("DATA", name) for name in extra]
-    known = list(dict.fromkeys(name for schema in reader.schemas for name in schema.names))
-    for argument, column in wanted:
-        requirement = "name a column of DATA" if argument != "DATA" else "hold each named column"
-        if column not in known:
-            raise InputError(argument, requirement, f"'{column}' is none", advise(column, known))
-        for place, schema in zip(reader.places, reader.schemas, strict=True):
-            found = count_fields(schema, column)
-            if found == 0:
-                raise InputError(
-                    argument,
-                    requirement.replace("DATA", "every file")
-                    + (" in every file" if argument == "DATA" else ""),
-                    f"'{column}' is missing from '{place}'",
-                    "leave the file out or write the column to it",
-                )
-            if found > 1:
-                raise InputError(
-                    argument,
-                    requirement,
-                    f"'{place}' has {found} columns called '{column}'",
-                    "rename all but one",
-                )
-
-
-def _check_kinds(reader: Reader, roles: Sequence[Role]) -> list[str]:
-    from fastsmooth.casts import column_kind
-
-    kinds = [
-        [
-            column_kind(role, schema.field(role.column).type, f"'{place}'")
-            for place, schema in zip(reader.places, reader.schemas, strict=True)
-        ]
-        for role in roles
-    ]
-    for role, kinds_of_role in zip(roles, kinds, strict=True):
-        if all(kind == "empty" for kind in kinds_of_role):
-            raise _all_null(role)
-    first = next(place for place, kind in enumerate(kinds[0]) if kind != "empty")
-    for place, kind in enumerate(kinds[0]):
-        if kind not in ("empty", kinds[0][first]):
-            raise InputError(
-                roles[0].argument,
-                "name a column of one kind in every file",
-                f"'{roles[0].column}' holds {kinds[0][first]}s in '{reader.places[first]}' and "
-                f"{kind}s in '{reader.places[place]}'",
-                "write the files alike",
-            )
-    return kinds[0]
-
-
-def _all_null(role: Role) -> InputError:
-    return InputError(
-        role.argument,
-        "name a column with values",
-        f"'{role.column}' holds nulls only",
-        "name another column",
-    )
-
-
-def _check_some_value(reader: Reader, roles: Sequence[Role]) -> None:
-    """Refuse a column of which the statistics say that every value is null."""
-    for role in roles:
-        total = 0
-        for task in reader.tasks:
-            extent = reader.extent(task.index, role.column)
-            if extent is None or extent.nulls is None or extent.nulls != task.rows:
-                break
-            total += extent.nulls
-        else:
-            if total:
-                raise _all_null(role)
-
-
-def _parse_filters(reader: Reader, where: str | None) -> list[Filter]:
-    if where is None:
-        return []
-    from fastsmooth.where import parse_where
-
-    parsed: dict[pa.Schema, Filter] = {}
-    filters = []
-    for schema in reader.schemas:
-        # Metadata does not matter here and would only multiply the schemas.
-        bare = schema.remove_metadata()
-        if bare not in parsed:
-            parsed[bare] = parse_where(where, bare)
-        filters.append(parsed[bare])
-    return filters
-
-
-def _prune(reader: Reader, filters: Sequence[Filter]) -> frozenset[int]:
-    from fastsmooth.parquet import ParquetReader
-
-    if not filters or not isinstance(reader, ParquetReader):
-        return frozenset()
-    return frozenset(
-        index for place, one in enumerate(filters) for index in reader.prune(place, one.prunable)
-    )
-
-
-def _unit_of(reader: Reader, column: str) -> str:
-    metadata = reader.schemas[0].field(column).metadata or {}
-    return bytes(metadata.get(b"unit", b"")).decode("utf-8", "replace")
-
-
-def _axis_float(value: float, unit: str, axis: Axis) -> float:
-    from fastsmooth.casts import statistic_ticks
-
-    if axis.kind == "number":
-        return float(value)
-    ticks = statistic_ticks(int(value), unit, axis) - axis.origin
-    if axis.unit == "day":
-        return float(ticks * SECONDS_PER_DAY)
-    return ticks / TICKS_PER_SECOND[axis.unit]
-
-
-def _make_axis(reader: Reader, role: Role, kinds: Sequence[str]) -> Axis:
-    from fastsmooth.casts import finest_unit, plain_type
-
-    kind = next(kind for kind in kinds if kind != "empty")
-    if kind == "number":
-        return Axis("number", "double", "", None, 0)
-    types = [
-        plain_type(schema.field(role.column).type)
-        for schema, kind_of_file in zip(reader.schemas, kinds, strict=True)
-        if kind_of_file != "empty"
-    ]
-    if kind == "duration":
-        unit = finest_unit(types)
-        return Axis(kind, f"duration[{unit}]", unit, None, 0)
-    if kind == "date":
-        axis = Axis(kind, "date32[day]", "day", None, 0)
-        return _with_origin(axis, reader, role)
-    zones = list(dict.fromkeys(one.tz for one in types))
-    if None in zones and len(zones) > 1:
-        named = next(zone for zone in zones if zone is not None)
-        raise InputError(
-            role.argument,
-            "name a column with a zone in every file or in none",
-            f"'{role.column}' has zone {named} in some and no zone in others",
-            "write the files alike",
-        )
-    unit = finest_unit(types)
-    spelled = f"timestamp[{unit}]" if zones[0] is None else f"timestamp[{unit}, tz={zones[0]}]"
-    return _with_origin(Axis(kind, spelled, unit, zones[0], 0), reader, role)
-
-
-def _with_origin(axis: Axis, reader: Reader, role: Role) -> Axis:
-    """Put the origin at the start of the day (UTC) of the smallest statistic or first value."""
-    from fastsmooth.casts import statistic_ticks
-
-    extents = [reader.extent(task.index, role.column) for task in reader.tasks]
-    lows = [
-        statistic_ticks(int(extent.low), extent.unit, axis)
-        for extent in extents
-        if extent is not None and extent.low is not None
-    ]
-    first = min(lows) if lows else _first_ticks(axis, reader, role)
-    day = 1 if axis.unit == "day" else SECONDS_PER_DAY * TICKS_PER_SECOND[axis.unit]
-    return Axis(axis.kind, axis.arrow_type, axis.unit, axis.zone, first // day * day)
-
-
-def _first_ticks(axis: Axis, reader: Reader, role: Role) -> int:
-    import pyarrow.types as pt
-
-    from fastsmooth.casts import plain_type, to_ticks
-
-    for task in reader.tasks:
-        for batch in reader.batches(task.index, (role.column,), CHUNK_ROWS):
-            if pt.is_null(plain_type(batch.column(0).type)):
-                break
-            ticks = to_ticks(role, batch.column(0).drop_null(), axis)
-            if len(ticks):
-                return int(ticks[0].as_py())
-    return 0
+    named = {
+        "x": columns.x,
+        "y": columns.y,
+        "weight": columns.weight,
+        "count": columns.count,
+    }
+    return tuple(Role(name, column) for name, column in named.items() if column is not None)

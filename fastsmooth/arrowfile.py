@@ -1,0 +1,114 @@
+"""Arrow IPC files, memory-mapped, one task for each stretch of record batches."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Iterator, Sequence
+
+import pyarrow as pa
+import pyarrow.dataset as ds
+import pyarrow.ipc as ipc
+
+from fastsmooth.errors import ReadError
+from fastsmooth.files import FileRecord, Task, reading
+from fastsmooth.readers import PartitionKeys, Reader, identify, rebatch, with_constants
+
+ROWS_PER_TASK = 1 << 20
+FILE_MAGIC = b"ARROW1"
+FEATHER_1_MAGIC = b"FEA1"
+
+
+class ArrowReader(Reader):
+    """Arrow IPC files and streams.
+
+    A file in the stream format has no footer and is one task of unknown length.
+    """
+
+    def __init__(self, paths: Sequence[str]) -> None:
+        """Read the footers of `paths`."""
+        records: list[FileRecord] = []
+        tasks: list[Task] = []
+        self._own: list[pa.Schema] = []
+        # Place and record batches of each task; None for a stream.
+        self._stretches: list[tuple[int, range | None]] = []
+        for place, record in enumerate(identify(paths)):
+            path = record.path
+            rows = None
+            with reading(path):
+                if _has_footer(path):
+                    with pa.memory_map(path) as mapped, ipc.open_file(mapped) as file:
+                        schema, count = file.schema, file.num_record_batches
+                    rows = ds.dataset(path, format="ipc").count_rows()
+                    stretches = _cut(count, rows)
+                else:
+                    with pa.memory_map(path) as mapped, ipc.open_stream(mapped) as stream:
+                        schema, stretches = stream.schema, [None]
+            self._own.append(schema)
+            records.append(dataclasses.replace(record, rows=rows))
+            for stretch in stretches:
+                whole = stretch is None or len(stretches) == 1
+                label = path
+                if stretch is not None and not whole:
+                    label += f", record batches {stretch[0] + 1} to {stretch[-1] + 1}"
+                tasks.append(Task(len(tasks), label, rows if whole else None))
+                self._stretches.append((place, stretch))
+        self._keys = PartitionKeys(paths)
+        self.files = tuple(records)
+        self.places = tuple(paths)
+        self.schemas = tuple(self._keys.extend(one, n) for n, one in enumerate(self._own))
+        self.tasks = tuple(tasks)
+        self.place_of = tuple(place for place, _ in self._stretches)
+        known = [record.rows for record in records if record.rows is not None]
+        self.rows_expected = sum(known) if len(known) == len(records) else None
+
+    def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
+        """Deliver views of the mapped file where it is not compressed."""
+        place, stretch = self._stretches[index]
+        constants = self._keys.constants(place, self._own[place])
+        stored = [name for name in columns if name not in constants]
+        path = self.places[place]
+        with reading(path):
+            for batch in rebatch(self._read(place, stretch, stored), rows):
+                yield with_constants(batch, columns, constants)
+
+    def _read(
+        self, place: int, stretch: range | None, stored: Sequence[str]
+    ) -> Iterator[pa.RecordBatch]:
+        numbers = sorted(self._own[place].get_field_index(name) for name in stored)
+        # An empty list means every field; one field is enough to tell the number of rows.
+        options = ipc.IpcReadOptions(included_fields=numbers or [0], use_threads=False)
+        with pa.memory_map(self.places[place]) as mapped:
+            if stretch is None:
+                with ipc.open_stream(mapped, options=options) as stream:
+                    for batch in stream:
+                        batch.validate()
+                        yield batch
+                return
+            with ipc.open_file(mapped, options=options) as file:
+                for number in stretch:
+                    batch = file.get_batch(number)
+                    # Lengths that a damaged file states wrongly would be read beyond its end.
+                    batch.validate()
+                    yield batch
+
+
+def _cut(count: int, rows: int) -> list[range | None]:
+    """Cut a file's record batches into stretches of about a million rows."""
+    if not count or not rows:
+        return []
+    step = max(1, round(ROWS_PER_TASK * count / rows))
+    return [range(start, min(start + step, count)) for start in range(0, count, step)]
+
+
+def _has_footer(path: str) -> bool:
+    with open(path, "rb") as file:
+        magic = file.read(len(FILE_MAGIC))
+    if magic.startswith(FEATHER_1_MAGIC):
+        raise ReadError(
+            "DATA",
+            "be Arrow IPC files of format version 4 or later",
+            f"'{path}' is of the first Feather version",
+            "write the file again as Arrow IPC or Parquet",
+        )
+    # A file too short for either format is reported by the reader of files.
+    return magic == FILE_MAGIC or len(magic) < len(FILE_MAGIC)

@@ -1,0 +1,160 @@
+"""A result in a few lines for people, and as plain data for programs."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from fastsmooth.curve import STATUSES, Curve
+from fastsmooth.search import Search, Trail
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+PRUDENCE = (
+    "A mean curve is not a protection limit: where it could lead to harm, local codes and "
+    "licensed practice decide."
+)
+
+
+def curve_lines(made: Curve) -> list[str]:
+    """Return what a person should read first about a curve, one fact a line."""
+    settings, engine = made.settings, made.trace["engine"]
+    lines = [f"{settings['y']} against {settings['x']}", *_row_lines(made)]
+    lines += _width_lines(made)
+    kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
+    lines.append(
+        f"band       pointwise {100 * settings['level']:g} %, {kind}; rows scatter around the "
+        f"curve by {engine['residual_sd']:.4g} (residual sd)"
+    )
+    counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
+    ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
+    lines.append(f"points     {made.x.shape[0]} from {ends}: {counts}")
+    lines.append(
+        f"engine     binned, {engine['bins']} bins, {engine['bins_per_bandwidth']:.3g} to a "
+        f"bandwidth, {_times(engine['passes'])} over the data"
+        + _error_words(engine["error_in_noise_sd"])
+    )
+    lines += [f"caution    {caution.text}" for caution in made.cautions]
+    return lines
+
+
+def search_lines(made: Curve) -> list[str]:
+    """Return the search as a table for people."""
+    found = made.search
+    names = list(found.trails)
+    lines = [f"{made.settings['y']} against {made.settings['x']}", *_row_lines(made)]
+    lines.append(f"criterion  {found.criterion}, kernel {found.kernel}")
+    lines.append("")
+    lines.append(f"{'bandwidth':>22}" + "".join(f"{name:>18}" for name in names))
+    grid = found.trails[names[0]].bandwidths
+    best = {name: int(np.argmin(found.trails[name].values(found.criterion))) for name in names}
+    for place, width in enumerate(grid.tolist()):
+        cells = ""
+        for name in names:
+            value = float(found.trails[name].values(found.criterion)[place])
+            mark = "<" if place == best[name] else " "
+            text = "none" if not math.isfinite(value) else f"{value:.6g}"
+            cells += f"{text:>17}{mark}"
+        lines.append(f"{made.width_label(width):>22}{cells}")
+    lines.append("")
+    for name in names:
+        trail = found.trails[name]
+        low, high = trail.flat_zone
+        lines.append(
+            f"{name:<16} chooses {made.width_label(trail.bandwidth)}; within one standard error: "
+            f"{made.width_label(low)} to {made.width_label(high)}"
+        )
+    lines += [f"caution    {caution.text}" for caution in made.cautions]
+    return lines
+
+
+def curve_facts(made: Curve) -> dict[str, Any]:
+    """Return what `curve_lines` tells as plain data for JSON."""
+    trail = made.search.trails[made.settings["estimator"]]
+    return {
+        "settings": made.settings,
+        "rows": made.trace["rows"],
+        "files": len(made.trace["files"]),
+        "bandwidth": made.bandwidth,
+        "chosen_by": made.search.criterion if made.settings["bandwidth"] is None else "caller",
+        "flat_zone": list(trail.flat_zone),
+        "search": search_facts(made.search),
+        "points": status_counts(made),
+        "engine": made.trace["engine"],
+        "cautions": [caution._asdict() for caution in made.cautions],
+    }
+
+
+def search_facts(found: Search) -> dict[str, Any]:
+    """Return choices, scores and flat zones per estimator as plain data for JSON."""
+
+    def facts(trail: Trail) -> dict[str, Any]:
+        return {
+            "bandwidth": trail.bandwidth,
+            "leave_one_out": trail.score if math.isfinite(trail.score) else None,
+            "equivalent_parameters": trail.trace,
+            "flat_zone": list(trail.flat_zone),
+            "minima": trail.minima,
+        }
+
+    return {name: facts(trail) for name, trail in found.trails.items()}
+
+
+def status_counts(made: Curve) -> dict[str, int]:
+    """Return how many points have each status."""
+    counts = np.bincount(made.status, minlength=len(STATUSES)).tolist()
+    return dict(zip(STATUSES, counts, strict=True))
+
+
+def _row_lines(made: Curve) -> list[str]:
+    rows = made.trace["rows"]
+    files = len(made.trace["files"])
+    text = f"rows       {rows['used']:,} used of {rows['read']:,} read"
+    if files:
+        text += f" from {files} file{'s' if files > 1 else ''}"
+    if rows["filtered"]:
+        text += f"; {rows['filtered']:,} filtered by --where"
+    lines = [text]
+    if rows["refused"]:
+        counts = ", ".join(f"{n:,} {reason}" for reason, n in rows["refused"].items())
+        lines.append(f"refused    {counts}")
+    return lines
+
+
+def _width_lines(made: Curve) -> list[str]:
+    settings = made.settings
+    label: Callable[[float], str] = made.width_label
+    mine = made.search.trails[settings["estimator"]]
+    other_name = next(name for name in made.search.trails if name != settings["estimator"])
+    other = made.search.trails[other_name]
+    by = "given" if settings["bandwidth"] is not None else f"chosen by {made.search.criterion}"
+    low, high = mine.flat_zone
+    lines = [
+        f"bandwidth  {label(made.bandwidth)} {by}; {settings['estimator']}, "
+        f"{settings['kernel']} kernel"
+        + (" (its standard deviation)" if settings["kernel"] == "gaussian" else "")
+    ]
+    if settings["bandwidth"] is not None:
+        lines.append(f"           {made.search.criterion} would choose {label(mine.bandwidth)}")
+    lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
+    if mine.score > 0.0 and math.isfinite(other.score):
+        away = other.score / mine.score - 1.0
+        worse = "larger" if away >= 0.0 else "smaller"
+        lines.append(
+            f"           {other_name} would choose {label(other.bandwidth)}; its mean squared "
+            f"prediction error is {abs(away):.2%} {worse}"
+        )
+    return lines
+
+
+def _times(passes: int) -> str:
+    return "one pass" if passes == 1 else f"{passes} passes"
+
+
+def _error_words(error: float | None) -> str:
+    if error is None:
+        return ""
+    return f"; binning error about {error:.1g} residual sd"
