@@ -27,6 +27,8 @@ if TYPE_CHECKING:
 Floats = NDArray[np.float64]
 
 _MOST_SEARCHES = 3
+# One curve costs little: finer bins than the search's keep its error down where rows are few.
+_FINER_FOR_CURVE = 4
 _ERROR_MARGIN = 4.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
@@ -218,7 +220,9 @@ def _assemble(
     low, high = table.extent.tolist()
     if places is None:
         places = np.linspace(low, high, band.points)
-    level = pyramid.levels[pyramid.level_for(bandwidth, shape.bins_per_bandwidth)]
+    level = pyramid.levels[
+        pyramid.level_for(bandwidth, _FINER_FOR_CURVE * shape.bins_per_bandwidth)
+    ]
     empty = least_weight(pyramid, shape)
     occupied = Occupied(plan.origin, plan.width, np.flatnonzero(pyramid.levels[0].first[0]))
 

@@ -151,15 +151,23 @@ def _choose_multiple(groups: Floats, weights: Floats, shape: Shape, own: float) 
         return multiples[-1]
     scores = np.zeros(len(multiples))
     total, total_weight = groups.sum(axis=0), weights.sum(axis=0)
-    scale, _ = _smooth_variance(total, total_weight, shape, multiples[-1] * own)
+    scale, _ = _smooth_variance(total, total_weight, shape, own)
     with np.errstate(divide="ignore", invalid="ignore"):
         relative = np.where(scale > 0.0, 1.0 / scale**2, 0.0)
     for place, multiple in enumerate(multiples):
+        # Wider windows do with coarser bins; the variance is scored on the fine ones.
+        step = 1
+        while multiple / (2 * step) >= 1.0 and bins % (2 * step) == 0:
+            step *= 2
+        coarse = groups.reshape(groups.shape[0], -1, step).sum(axis=2)
+        coarse_weights = weights.reshape(groups.shape[0], -1, step).sum(axis=2)
         for group in range(groups.shape[0]):
             others = np.arange(groups.shape[0]) != group
             variance, _ = _smooth_variance(
-                groups[others].sum(axis=0), weights[others].sum(axis=0), shape, multiple * own
-            )
+                coarse[others].sum(axis=0), coarse_weights[others].sum(axis=0), shape,
+                multiple * own / step,
+            )  # fmt: skip
+            variance = np.repeat(variance, step)
             part = relative * (variance**2 * weights[group] - 2.0 * variance * groups[group])
             missing = ~np.isfinite(variance) & (weights[group] > 0.0)
             scores[place] += np.inf if missing.any() else float(np.nansum(part))

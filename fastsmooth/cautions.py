@@ -13,7 +13,7 @@ from fastsmooth.plan import Sample
 from fastsmooth.source import Source
 
 _MANY_REFUSED = 0.05
-_MANY_ALIKE = 0.001
+_MANY_ALIKE = 0.0001
 _MANY_ALONE = 0.001
 _HEAVY_FOLD = 0.5
 _CORRELATION_WORTH_TELLING = 0.1

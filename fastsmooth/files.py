@@ -163,8 +163,9 @@ def _expand(path: str) -> list[str]:
         return [_known(path)]
     if glob.has_magic(path):
         found = []
+        fixed = next(n for n, part in enumerate(Path(path).parts) if glob.has_magic(part))
         for match in glob.glob(path, recursive=True):
-            if _is_hidden(os.path.basename(match.rstrip(os.sep))):
+            if any(_is_hidden(part) for part in Path(match).parts[fixed:]):
                 continue
             # '**' also matches folders, whose files it then matches one by one.
             if os.path.isdir(match):

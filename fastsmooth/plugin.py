@@ -17,6 +17,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -47,8 +48,11 @@ _TRIMMED = 0.05
 _INNER = 2.0 * (1.0 - 2.0 * _TRIMMED)
 # Mean square of q'' (in z) that rounding alone can make, in variances of y.
 _NO_CURVATURE = 1e-18
-# Share of its scale below which a local cubic's determinant says: too few places for a cubic.
-_THIN_CUBIC = 1e-5
+# A local cubic whose second coefficient is this many times as variable as among evenly spread
+# rows (300 times at the very end of a range) has too few places in its window.
+_MOST_VARIABLE = 1000.0
+# Sums of powers of u that are smaller than this share of S_0 may be rounding alone.
+_ROUNDING = 1e-9
 _MEDIAN_GAPS = 5.0
 # With fewer rows in the interval, the rule would tune the width for where hardly any row is.
 _LEAST_INNER_SHARE = 0.5
@@ -121,17 +125,17 @@ def _twicing_roughness(shape: Shape) -> float:
     nodes, weights = np.polynomial.legendre.leggauss(2 * degree + 2)
     kernel = np.polynomial.Polynomial(shape.coefficients)
     total = 0.0
-    for start, stop in ((0.0, 1.0), (1.0, 2.0)):
-        t = start + (stop - start) * (nodes + 1.0) / 2.0
+    for start in (0.0, 1.0):
+        t = start + (nodes + 1.0) / 2.0
+        # K(s) K(s - t) lives on [t - 1, 1], with kinks at s = 0 and s = t if t < 1.
+        inner = [np.zeros(t.shape), t] if start == 0.0 else []
         folded = np.zeros(t.shape)
-        # K(s) K(s - t) has kinks at s = 0 and s = t where these lie within its support.
-        ends = [t - 1.0, np.zeros(t.shape), t, np.ones(t.shape)] if start == 0.0 else [t - 1.0, 1.0]
-        for left, right in zip(ends[:-1], ends[1:], strict=True):
+        for left, right in pairwise([t - 1.0, *inner, np.ones(t.shape)]):
             s = left + (right - left) * (nodes[:, np.newaxis] + 1.0) / 2.0
             product = kernel(np.abs(s)) * kernel(np.abs(s - t))
             folded += (right - left) / 2.0 * (weights @ product)
         difference = (2.0 * kernel(t) if start == 0.0 else 0.0) - folded
-        total += 2.0 * (stop - start) / 2.0 * float(weights @ difference**2)
+        total += float(weights @ difference**2)  # half the interval, on both sides of 0
     return total
 
 
@@ -141,8 +145,8 @@ def plug_in_bandwidth(pyramid: Pyramid, shape: Shape, estimator: str) -> float:
     Quartics fitted to blocks of rows (as many blocks as Mallows' Cp prefers) give pilot
     bandwidths; a local cubic at the one then gives theta22, and a local line at the other
     sigma^2. Averages leave out a twentieth of the range at either end. Where a window holds too
-    few places for a cubic, the blocks' quartic stands in. If theta22 or theta24 is nil, the answer is
-    `rule_of_thumb`.
+    few places for a cubic, the blocks' quartic stands in. If theta22 or theta24 is nil, the
+    answer is `rule_of_thumb`.
 
     Parameters
     ----------
@@ -399,7 +403,7 @@ def _local_theta22(data: _Data, shape: Shape, bandwidth: float, pilot: _Pilot) -
     s0, s1, s2, s3, s4, s5, s6 = kernel_sums(level.first[0:3], shape, h, 7, squared=False)[:, inner]
     t0, t1, t2, t3 = kernel_sums(level.response, shape, h, 4, squared=False)[:, inner]
     determinant = s0 * s2 - s1 * s1
-    line = determinant > _THIN_CUBIC * s0 * s2
+    line = determinant > _ROUNDING * s0 * s0
     safe = np.where(line, determinant, 1.0)
     # Rows of B A^-1.
     p0, p1 = (s2 * s2 - s1 * s3) / safe, (s0 * s3 - s1 * s2) / safe
@@ -410,7 +414,9 @@ def _local_theta22(data: _Data, shape: Shape, bandwidth: float, pilot: _Pilot) -
     g0 = t2 - p0 * t0 - p1 * t1
     g1 = t3 - q0 * t0 - q1 * t1
     determinant = f00 * f11 - f01 * f01
-    cubic = line & (determinant > _THIN_CUBIC * s4 * s6)
+    # The variance of the second coefficient is in proportion to f11 / determinant.
+    even = shape.moment(4) - shape.moment(2) ** 2
+    cubic = line & (f11 > _ROUNDING * s0) & (determinant > even / _MOST_VARIABLE * f11 * s0)
     beta = (f11 * g0 - f01 * g1) / np.where(cubic, determinant, 1.0)
     quartic = np.interp(data.z(level.centres[inner]), pilot.z, pilot.curvature)
     curvature = np.where(cubic, 2.0 * beta * (data.half / bandwidth) ** 2, quartic)

@@ -142,10 +142,11 @@ def _width_lines(made: Curve) -> list[str]:
     lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
     if mine.score > 0.0 and math.isfinite(other.score):
         away = other.score / mine.score - 1.0
-        worse = "larger" if away >= 0.0 else "smaller"
+        size = "about the same" if abs(away) < 5e-5 else f"{abs(away):.2%} "
+        size += "" if abs(away) < 5e-5 else "larger" if away > 0.0 else "smaller"
         lines.append(
             f"           {other_name} would choose {label(other.bandwidth)}; its mean squared "
-            f"prediction error is {abs(away):.2%} {worse}"
+            f"prediction error is {size}"
         )
     return lines
 

@@ -315,6 +315,7 @@ def test_progress_counts_every_row_one_call_at_a_time(tmp_path):
     def progress(rows):
         inside[0] += 1
         overlaps.append(inside[0])
+        time.sleep(0.0005)
         total[0] += rows
         inside[0] -= 1
 

@@ -3,34 +3,42 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
-from datetime import UTC, datetime, timedelta, timezone, tzinfo
+from datetime import UTC, timedelta, timezone, tzinfo
+from typing import NamedTuple
 from zoneinfo import ZoneInfo
 
 import numpy as np
+from matplotlib.dates import AutoDateLocator, ConciseDateFormatter, num2date
+from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from fastsmooth.axis import SECONDS_PER_DAY, TICKS_PER_SECOND, WIDTH_UNITS, Axis
 
 Floats = NDArray[np.float64]
-# Inches taken by a label of so many letters; None stands for "one below the other".
-Measure = Callable[[str], float]
 
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
-# Below this span a calendar has nothing to say.
+_STEPS = [1, 2, 2.5, 5, 10]
+_MOST_TICKS = 8
+# Linear steps read better than 1, 2, 5 where a log axis spans less than this factor.
+_SHORT_LOG_SPAN = 4.0
+_GAP_IN = 0.12
+# Below this span a calendar has nothing to say, nor has it outside the years 2 to 9998.
 _SHORTEST_CALENDAR_S = 10.0
-_DATES_FROM = datetime(2, 1, 1, tzinfo=UTC).timestamp()
-_DATES_UNTIL = datetime(9998, 1, 1, tzinfo=UTC).timestamp()
-_WIDTH_STEPS_S = (
-    *(a * 10.0**k for k in range(-9, 0) for a in (1, 2, 5)),
-    1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 10_800, 21_600, 43_200,
-    *(86_400.0 * a * 10.0**k for k in range(7) for a in (1, 2, 5)),
+_CALENDAR_DAYS = (-718_000.0, 2_930_000.0)
+_WIDTHS_S = (
+    *(digit * 10.0**power for power in range(-9, 0) for digit in (1, 2, 5)),
+    1.0, 2.0, 5.0, 10.0, 30.0, 60.0, 120.0, 300.0, 600.0, 1800.0, 3600.0, 7200.0, 21_600.0,
+    43_200.0, *(86_400.0 * digit * 10.0**power for power in range(7) for digit in (1, 2, 5)),
+)  # fmt: skip
+_FACTORS = (
+    *(1.0 + digit * 10.0**power for power in range(-9, 0) for digit in (1, 2, 5)),
+    2.0, 3.0, 5.0, 10.0, 30.0, *(10.0**power for power in (2, 3, 4, 6, 9, 12, 20, 50, 100, 200)),
 )  # fmt: skip
 
 
-@dataclass(frozen=True)
-class Ticks:
+class Ticks(NamedTuple):
     """Tick marks of one axis.
 
     Attributes
@@ -40,16 +48,66 @@ class Ticks:
     texts : list of str
         What they say.
     note : str
-        What all have in common: a power of ten, a value to add, a date; may be empty.
+        What they have in common: a power of ten, a value to add, a date; may be empty.
     """
 
     places: list[float]
     texts: list[str]
-    note: str = ""
+    note: str
+
+
+@dataclass(frozen=True)
+class Track:
+    """The room for tick labels along an axis.
+
+    Attributes
+    ----------
+    inches : callable
+        Where along the axis a value lies.
+    measure : callable
+        How wide a text is, inches.
+    """
+
+    inches: Callable[[float], float]
+    measure: Callable[[str], float]
+
+    def fitting(self, values: Iterable[float], name: Callable[[float], str]) -> list[float]:
+        """Return the values whose labels keep a gap to the one before."""
+        kept, end = [], -math.inf
+        for value in values:
+            centre, half = self.inches(value), 0.5 * self.measure(name(value))
+            if centre - half >= end + _GAP_IN:
+                kept.append(value)
+                end = centre + half
+        return kept
+
+
+class Shown(NamedTuple):
+    """How x is drawn.
+
+    Attributes
+    ----------
+    plotted : callable
+        Turns axis floats into plotted units.
+    ticks : Ticks
+        Its tick marks.
+    label : str
+        What stands at the axis.
+    """
+
+    plotted: Callable[[Floats], Floats]
+    ticks: Ticks
+    label: str
+
+
+def named(name: str, unit: str, note: str = "") -> str:
+    """Write a column with its unit, and what its ticks have in common."""
+    text = f"{name} ({unit})" if unit else name
+    return f"{text}, {note}" if note else text
 
 
 def short_number(value: float) -> str:
-    """Write a number for people: up to six digits with commas, else a short power of ten.
+    """Write a number for people: up to six digits with commas, else a power of ten.
 
     Examples
     --------
@@ -57,153 +115,216 @@ def short_number(value: float) -> str:
     ('12,000', '0.25', '3e8')
     """
     if value == 0.0 or 1e-4 <= abs(value) < 999_999.5:
-        text = f"{value:,.6g}" if abs(value) < 1e5 else f"{value:,.0f}"
-        return text.replace("-", "−")
-    mantissa, exponent = f"{value:.3g}".split("e") if "e" in f"{value:.3g}" else (f"{value:g}", "0")
-    return f"{mantissa}e{int(exponent)}".replace("-", "−")
+        text = f"{value:,.0f}" if abs(value) >= 1e5 else f"{value:,.6g}"
+    else:
+        mantissa, exponent = f"{value:.2e}".split("e")
+        text = f"{float(mantissa):g}e{int(exponent)}"
+    return text.replace("-", "−")
 
 
-def count_text(rows: float) -> str:
+def short_count(rows: float) -> str:
     """Write a number of rows in a few letters.
 
     Examples
     --------
-    >>> count_text(950), count_text(12_300), count_text(4_500_000)
+    >>> short_count(950.0), short_count(12_300.0), short_count(4_500_000.0)
     ('950', '12 k', '4.5 M')
     """
     for unit, size in (("G", 1e9), ("M", 1e6), ("k", 1e3)):
-        if rows >= 0.9995 * size:
+        if rows >= size:
             shown = rows / size
             return f"{shown:.2g} {unit}" if shown < 99.5 else f"{shown:.0f} {unit}"
     return f"{rows:.3g}"
 
 
 def number_ticks(low: float, high: float, most: int = 6) -> Ticks:
-    """Return ticks of a plain number axis.
-
-    Parameters
-    ----------
-    low, high : float
-        Ends of the axis, ascending.
-    most : int
-        Most ticks.
-
-    Returns
-    -------
-    Ticks
-        Numbers of at most six digits; what they would share is in the note.
-    """
-    from matplotlib.ticker import MaxNLocator
-
-    places = MaxNLocator(nbins=most, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high)
-    margin = 1e-9 * (high - low)
-    places = places[(places >= low - margin) & (places <= high + margin)]
-    if places.size < 2:
-        return Ticks([float(one) for one in places], [short_number(float(one)) for one in places])
-    step = float(places[1] - places[0])
-    largest = float(np.abs(places).max())
+    """Return ticks of a plain number axis from `low` to `high`, short even for large numbers."""
+    places = _linear(low, high, most)
+    if len(places) < 2:
+        return Ticks(places, [short_number(place) for place in places], "")
+    step = places[1] - places[0]
+    largest = max(abs(places[0]), abs(places[-1]))
     offset = 0.0
     if largest >= 1e4 and step < 1e-4 * largest:
-        # Only the last digits differ: they are shown, the rest is said once.
+        # Only the last digits differ: they are shown, and the rest is said once.
         unit = 10.0 ** math.ceil(math.log10(high - low))
         offset = math.floor(low / unit) * unit
-    shifted = places - offset
-    largest = float(np.abs(shifted).max())
+        largest = max(abs(places[0] - offset), abs(places[-1] - offset))
     power = 0
-    if not 1e-3 <= largest < 999_999.5:
+    if not 1e-2 <= largest < 999_999.5:
         power = 3 * math.floor(math.log10(largest) / 3.0)
-    decimals = max(0, math.ceil(-math.log10(step / 10.0**power) - 1e-9))
-    # Steps such as 2.5 need one digit more than their size tells.
-    while abs(round(step / 10.0**power, decimals) * 10.0**power - step) > 1e-6 * step:
-        decimals += 1
+    step /= 10.0**power
+    decimals = max(0, -math.floor(math.log10(step) + 1e-9))
+    if not math.isclose(round(step, decimals), step, rel_tol=1e-6):
+        decimals += 1  # steps of 2.5
     texts = []
-    for place in shifted.tolist():
+    for place in places:
         # Adding zero turns a negative zero into zero.
-        value = round(place / 10.0**power, decimals) + 0.0
+        value = round((place - offset) / 10.0**power, decimals) + 0.0
         texts.append(f"{value:,.{decimals}f}".replace("-", "−"))
-    notes = []
+    notes = [f"above {short_number(offset) if offset % 1 else f'{offset:,.0f}'}"] if offset else []
     if power:
-        notes.append("in 10" + str(power).translate(_SUPERSCRIPT))
-    if offset:
-        notes.append(f"{'above' if offset > 0 else 'from'} {_whole(offset)}")
-    return Ticks(places.tolist(), texts, ", ".join(notes))
+        notes.insert(0, f"in 10{str(power).translate(_SUPERSCRIPT)}")
+    return Ticks(places, texts, ", ".join(notes).replace("above -", "above −"))
 
 
-def _whole(value: float) -> str:
-    text = f"{value:,.0f}" if abs(value) < 1e15 and value == round(value) else f"{value:.12g}"
-    return text.replace("-", "−")
+def log_ticks(low: float, high: float, track: Track) -> Ticks:
+    """Return ticks of a logarithmic axis from `low` to `high`: as many round values as fit."""
+    powers = range(math.floor(math.log10(low)), math.ceil(math.log10(high)) + 1)
+    families: list[list[float]] = []
+    if high < _SHORT_LOG_SPAN * low:
+        families += [_linear(low, high, most) for most in (_MOST_TICKS, 5, 3)]
+    for digits in ((1, 2, 3, 4, 5, 6, 7, 8, 9), (1, 2, 5), (1, 3)):
+        families.append([digit * 10.0**power for power in powers for digit in digits])
+    for step in (1, 2, 3, 5, 10, 20, 50, 100):
+        families.append([10.0**power for power in powers if power % step == 0])
+    chosen: list[float] = []
+    for family in families:
+        inside = [value for value in family if low <= value <= high]
+        fitting = track.fitting(inside, short_number)
+        if len(fitting) == len(inside) and len(inside) >= 3:
+            chosen = inside
+            break
+        chosen = max(chosen, fitting, key=len)
+    return Ticks(chosen, [short_number(value) for value in chosen], "")
 
 
-def log_ticks(
-    low: float,
-    high: float,
-    place_of: Callable[[float], float],
-    measure: Measure,
-    per_inch: float,
-    name: Callable[[float], str] = short_number,
+def width_ticks(
+    low: float, high: float, axis: Axis, log: bool, track: Track
 ) -> Ticks:
-    """Return ticks of a logarithmic axis of positive numbers.
+    """Return ticks of a logarithmic axis of bandwidths.
 
     Parameters
     ----------
     low, high : float
-        Ends of the axis.
-    place_of : callable
-        Turns a value into inches along the axis, up to a constant, over `per_inch`.
+        Its ends, on the plan's scale: logarithms of factors where `log`.
+    axis : Axis
+        What x means.
+    log : bool
+        Whether x is on a log scale.
+    track : Track
+        Room along the axis, for values on the plan's scale.
+    """
+    if log:
+        texts = {math.log(factor): f"{factor:.10g}" for factor in _FACTORS}
+    elif axis.kind == "number":
+        return log_ticks(low, high, track)
+    else:
+        texts = {width: axis.width_label(width) for width in _WIDTHS_S}
+    inside = [width for width in texts if low <= width <= high]
+    # Every second label, if need be, rather than an uneven choice.
+    for step in range(1, len(inside) + 1):
+        chosen = inside[::step]
+        if len(track.fitting(chosen, texts.__getitem__)) == len(chosen):
+            return Ticks(chosen, [texts[width] for width in chosen], "")
+    return Ticks([], [], "")
+
+
+def shown_axis(
+    axis: Axis,
+    name: str,
+    unit: str,
+    ends: tuple[float, float],
+    log: bool,
+    length_in: float,
+    measure: Callable[[str], float],
+) -> Shown:
+    """Decide how x is drawn.
+
+    Parameters
+    ----------
+    axis : Axis
+        What x means.
+    name, unit : str
+        Column and unit; the unit may be empty.
+    ends : (float, float)
+        Ends of the axis, in axis floats.
+    log : bool
+        Whether x is on a log scale.
+    length_in : float
+        Length of the axis, inches.
     measure : callable
-        Inches that a text takes.
-    per_inch : float
-        Units of `place_of` in an inch.
-    name : callable
-        Writes a value.
+        How wide a text is, inches.
 
     Returns
     -------
-    Ticks
-        As many round values as fit without touching.
+    Shown
+        Numbers as they are; durations in a unit that suits; times as days since 1970, for
+        matplotlib's dates, or as seconds after the first where the span is too short for these.
     """
-    first, last = math.floor(math.log10(low)), math.ceil(math.log10(high))
-    families: list[list[float]] = []
-    if last - first <= 2:
-        families.append([float(one) for one in number_ticks(low, high, 8).places if one > 0.0])
-    for digits in ((1, 2, 3, 4, 5, 6, 7, 8, 9), (1, 2, 5), (1, 3)):
-        families.append([d * 10.0**k for k in range(first, last + 1) for d in digits])
-    for step in (1, 2, 3, 5, 10, 20, 50):
-        families.append([10.0**k for k in range(first, last + 1) if k % step == 0])
-    inside = [[one for one in family if low <= one <= high] for family in families]
-    # The evenest family of 1, 2, 5 and its kin that fits; plain steps only for short spans.
-    for family in inside[-9:] if last - first > 2 else [*inside[-9:-7], *inside[:1]]:
-        if len(family) >= 3 and fits_side_by_side(family, place_of, measure, per_inch, name):
-            return Ticks(family, [name(one) for one in family])
-    return _thinned(inside[0] or [low, high], place_of, measure, per_inch, name)
+    low, high = ends
+    if log:
+        track = Track(lambda x: length_in * math.log(x / low) / math.log(high / low), measure)
+        return Shown(np.asarray, log_ticks(low, high, track), named(name, unit))
+    if axis.kind in ("timestamp", "date"):
+        days = _days(axis, np.array(ends))
+        in_calendar = _CALENDAR_DAYS[0] < days[0] and days[1] < _CALENDAR_DAYS[1]
+        if in_calendar and high - low >= _SHORTEST_CALENDAR_S:
+            return _calendar(axis, name, days, length_in, measure)
+        ticks = number_ticks(0.0, high - low, _MOST_TICKS)
+        label = named(f"{name}, seconds after {axis.label(low)}", "", ticks.note)
+        return Shown(lambda x: x - low, ticks, label)
+    size = 1.0
+    if axis.kind == "duration":
+        reach = max(abs(low), abs(high))
+        unit, size = next((one for one in WIDTH_UNITS if reach >= 2.0 * one[1]), WIDTH_UNITS[-1])
+    ticks = number_ticks(low / size, high / size, _MOST_TICKS)
+    while len(ticks.places) > 2 and not _fits(ticks, (low / size, high / size), length_in, measure):
+        ticks = number_ticks(low / size, high / size, len(ticks.places) - 2)
+    return Shown(lambda x: x / size, ticks, named(name, unit, ticks.note))
 
 
-def fits_side_by_side(
-    values: Sequence[float],
-    place_of: Callable[[float], float],
-    measure: Measure,
-    per_inch: float,
-    name: Callable[[float], str],
+def _linear(low: float, high: float, most: int) -> list[float]:
+    places = MaxNLocator(nbins=most, steps=_STEPS).tick_values(low, high)
+    margin = 1e-9 * (high - low)
+    return [float(one) for one in places if low - margin <= one <= high + margin]
+
+
+def _fits(
+    ticks: Ticks, ends: tuple[float, float], length_in: float, measure: Callable[[str], float]
 ) -> bool:
-    """Whether the labels of all values keep a gap between them."""
-    ends = -math.inf
-    for value in values:
-        centre, half = place_of(value) / per_inch, 0.5 * measure(name(value))
-        if centre - half < ends + 0.1:
-            return False
-        ends = centre + half
-    return True
+    low, high = ends
+    track = Track(lambda x: (x - low) / (high - low) * length_in, measure)
+    texts = dict(zip(ticks.places, ticks.texts, strict=True))
+    return len(track.fitting(ticks.places, texts.__getitem__)) == len(texts)
 
 
-def _thinned(
-    values: Sequence[float],
-    place_of: Callable[[float], float],
-    measure: Measure,
-    per_inch: float,
-    name: Callable[[float], str],
-) -> Ticks:
-    for step in range(1, len(values) + 1):
-        chosen = values[::step]
-        if fits_side_by_side(chosen, place_of, measure, per_inch, name):
+def _days(axis: Axis, x: Floats) -> Floats:
+    """Days since 1970 (UTC) of axis floats."""
+    ticks = 1 if axis.unit == "day" else TICKS_PER_SECOND[axis.unit] * SECONDS_PER_DAY
+    return axis.origin / ticks + x / SECONDS_PER_DAY
+
+
+def _calendar(
+    axis: Axis, name: str, days: Floats, length_in: float, measure: Callable[[str], float]
+) -> Shown:
+    zone = _zone(axis.zone)
+    first, last = num2date(days, tz=zone)
+    texts: Sequence[str] = []
+    for most in range(_MOST_TICKS, 2, -1):
+        locator = AutoDateLocator(tz=zone, minticks=2, maxticks=most)
+        places = [float(one) for one in locator.tick_values(first, last)]
+        places = [one for one in places if days[0] <= one <= days[1]]
+        writer = ConciseDateFormatter(
+            locator,
+            tz=zone,
+            zero_formats=["", "%Y", "%b", "%d %b", "%H:%M", "%H:%M"],
+            offset_formats=["", "%Y", "%b %Y", "%d %b %Y", "%d %b %Y", "%d %b %Y %H:%M"],
+        )
+        texts = writer.format_ticks(places)
+        ticks = Ticks(places, list(texts), writer.get_offset())
+        if _fits(ticks, (float(days[0]), float(days[1])), length_in, measure):
             break
-    return Ticks(list(chosen), [name(one) for one in chosen])
+    unit = axis.zone or ""
+    return Shown(lambda x: _days(axis, x), ticks, named(name, unit, ticks.note))
+
+
+def _zone(name: str | None) -> tzinfo:
+    """The zone of an Arrow column: a name, or an offset such as +02:00."""
+    if name is None:
+        return UTC
+    if name[0] in "+-":
+        sign = -1 if name[0] == "-" else 1
+        hours, minutes = (int(part) for part in name[1:].split(":"))
+        return timezone(sign * timedelta(hours=hours, minutes=minutes))
+    return ZoneInfo(name)

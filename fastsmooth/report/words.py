@@ -1,0 +1,95 @@
+"""What the picture says: its title, its sentences, its small print."""
+
+from __future__ import annotations
+
+import re
+
+import numpy as np
+
+from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve
+from fastsmooth.report.scales import named
+
+NOT_A_LIMIT = "A mean curve is not a protection limit."
+MOST_CAUTIONS = 3
+ERRORS = {
+    "leave-one-out": "leave-one-out error",
+    "gcv": "generalised cross-validation",
+    "aicc": "corrected information criterion (AICc)",
+    "plug-in": "leave-one-out error",
+}
+
+
+def title(curve: Curve) -> str:
+    """Return the title: y against x, with units."""
+    told = curve.settings
+    return f"{named(told['y'], told['y_unit'])} against {named(told['x'], told['x_unit'])}"
+
+
+def width_text(curve: Curve, width: float) -> str:
+    """Write a bandwidth with the unit of x, where it is a plain number."""
+    text = curve.width_label(width)
+    unit = curve.settings["x_unit"]
+    plain = curve.scale == "linear" and curve.axis.kind == "number"
+    return f"{text} {unit}" if plain and unit else text
+
+
+def subtitle(curve: Curve) -> str:
+    """Return the sentences under the title: rows, estimator, bandwidth, band."""
+    told, rows = curve.settings, curve.trace["rows"]
+    taken = f"{rows['used']:,} rows"
+    if rows["used"] != rows["read"]:
+        taken += f" of {rows['read']:,} read"
+    width = width_text(curve, curve.bandwidth)
+    if told["kernel"] == "gaussian":
+        width += " (standard deviation)"
+    criterion = told["criterion"]
+    chosen = f"chosen by {criterion}"
+    trail = curve.search.trails.get(told["estimator"])
+    if told["bandwidth"] is not None:
+        chosen = "as given"
+        if trail is not None:
+            chosen += f" ({criterion} would choose {width_text(curve, trail.bandwidth)})"
+    sentence = (
+        f"The line is the mean from {taken}: {told['estimator']}, {told['kernel']} kernel, "
+        f"bandwidth {width}, {chosen}."
+    )
+    if not np.isfinite(curve.lower).any():
+        return f"{sentence} No band could be computed."
+    covers = "mean" if told["bias"] == "corrected" else "smoothed mean, its bias ignored"
+    # 99.9 percent must not become 100.
+    return f"{sentence} Around it the pointwise {100.0 * told['level']:.6g} % band for the {covers}."
+
+
+def reading_notes(curve: Curve) -> str:
+    """Explain the line styles that occur."""
+    notes = []
+    if (curve.status == EDGE).any():
+        notes.append("Dotted (edge): the window is cut off by the end of the data.")
+    if (curve.status == THIN).any():
+        least = curve.settings["least_rows"]
+        notes.append(f"Dashed (thin): fewer than {least:g} effective rows.")
+    if (curve.status == OUTSIDE).any():
+        notes.append("No line (outside): no rows near enough on both sides.")
+    return " ".join(notes)
+
+
+def first_sentence(text: str) -> str:
+    """Return a text up to its first full stop that ends a sentence.
+
+    Examples
+    --------
+    >>> first_sentence("The best width 1.35 is the narrowest. Thin the rows.")
+    'The best width 1.35 is the narrowest.'
+    """
+    return re.split(r"(?<=[.!?])\s+(?=\S)", text.strip(), maxsplit=1)[0]
+
+
+def cautions(curve: Curve) -> tuple[str, list[str]]:
+    """Return a heading with the number of cautions, and the first sentences of some."""
+    count = len(curve.cautions)
+    if not count:
+        return "", []
+    sentences = [first_sentence(caution.text) for caution in curve.cautions[:MOST_CAUTIONS]]
+    if count > MOST_CAUTIONS:
+        sentences.append(f"and {count - MOST_CAUTIONS} more")
+    return f"{count} caution{'s' if count > 1 else ''}", sentences
