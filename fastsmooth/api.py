@@ -29,7 +29,7 @@ Floats = NDArray[np.float64]
 _MOST_SEARCHES = 3
 # One curve costs little: finer bins than the search's keep its error down where rows are few.
 _FINER_FOR_CURVE = 4
-_ERROR_MARGIN = 4.0
+_ERROR_MARGIN = 8.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
 
@@ -91,7 +91,9 @@ def make_curve(
     reading = reading or Reading()
     smoothing = smoothing or Smoothing()
     band = band or Band()
-    with open_source(data, Columns(x, y, weight, count), where=reading.where) as source:
+    _criterion(reading, smoothing)
+    extra = () if reading.block is None else (reading.block.column,)
+    with open_source(data, Columns(x, y, weight, count, extra), where=reading.where) as source:
         fixed = _own_bandwidth(source, reading, smoothing)
         places = _own_points(source, reading, band)
         counted, pyramid, found, chosen = _count_and_search(
@@ -141,6 +143,17 @@ def find_shape(name: str) -> Shape:
     return SHAPES[name]
 
 
+def _criterion(reading: Reading, smoothing: Smoothing) -> str:
+    if smoothing.criterion == "leave-block-out" and reading.block is None:
+        raise InputError(
+            "--criterion leave-block-out", "come with --block", "no block is given",
+            "name what makes rows belong together, as in --block logged_at:day",
+        )  # fmt: skip
+    if smoothing.criterion is not None:
+        return smoothing.criterion
+    return "leave-one-out" if reading.block is None else "leave-block-out"
+
+
 def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> float | None:
     """The caller's bandwidth on the plan's scale."""
     if smoothing.bandwidth is None:
@@ -187,7 +200,8 @@ def _count_and_search(
         progress("searching", 0, None)
         pyramid = Pyramid(counted.table)
         found = search_table(
-            counted.table, pyramid, shape, criterion=smoothing.criterion, widths=smoothing.widths,
+            counted.table, pyramid, shape, criterion=_criterion(reading, smoothing),
+            by_block=reading.block is not None, widths=smoothing.widths,
             threads=reading.threads,
         )  # fmt: skip
         chosen = fixed or found.trails[smoothing.estimator].bandwidth
@@ -229,7 +243,7 @@ def _assemble(
     def evaluate(fits: Fits, noise: Noise) -> Points:
         return fit_points(
             places, fits, noise, shape, estimator=smoothing.estimator, reference=plan.reference,
-            level_of_band=band.level, bias=band.bias, least_rows=band.least_rows,
+            band=band, by_block=plan.block is not None,
             extent=(low, high), occupied=occupied,
         )  # fmt: skip
 
@@ -248,9 +262,9 @@ def _assemble(
         "count": plan.columns.count, "x_unit": source.x_unit, "y_unit": source.y_unit,
         "where": reading.where, "range": _plain_range(reading), "scale": plan.scale,
         "estimator": smoothing.estimator, "kernel": smoothing.kernel,
-        "criterion": smoothing.criterion,
+        "criterion": found.criterion, "block": plan.block,
         "bandwidth": None if smoothing.bandwidth is None else _in_axis(bandwidth, log),
-        "widths": smoothing.widths, "level": band.level, "bias": band.bias, "noise": band.noise,
+        "widths": smoothing.widths, "level": band.level, "band": band.kind, "bias": band.bias, "noise": band.noise,
         "least_rows": band.least_rows, "folds": plan.folds,
     }  # fmt: skip
     engine = {

@@ -29,6 +29,8 @@ class ArrowReader(Reader):
         records: list[FileRecord] = []
         tasks: list[Task] = []
         self._own: list[pa.Schema] = []
+        # Files whose values can be used where they are mapped, since they are not compressed.
+        self._mapped: set[int] = set()
         # Place and record batches of each task; None for a stream.
         self._stretches: list[tuple[int, range | None]] = []
         for place, record in enumerate(identify(paths)):
@@ -38,6 +40,8 @@ class ArrowReader(Reader):
                 if _has_footer(path):
                     with pa.memory_map(path) as mapped, ipc.open_file(mapped) as file:
                         schema, count = file.schema, file.num_record_batches
+                        if count and _is_mapped(file.get_batch(0), mapped):
+                            self._mapped.add(place)
                     rows = ds.dataset(path, format="ipc").count_rows()
                     stretches = _cut(count, rows)
                 else:
@@ -74,9 +78,12 @@ class ArrowReader(Reader):
     def _read(
         self, place: int, stretch: range | None, stored: Sequence[str]
     ) -> Iterator[pa.RecordBatch]:
-        numbers = sorted(self._own[place].get_field_index(name) for name in stored)
-        # An empty list means every field; one field is enough to tell the number of rows.
-        options = ipc.IpcReadOptions(included_fields=numbers or [0], use_threads=False)
+        options = ipc.IpcReadOptions(use_threads=False)
+        if place not in self._mapped:
+            # Naming the fields saves decompressing the others, but copies what is mapped. An empty
+            # list means every field; one is enough to tell the number of rows.
+            numbers = sorted(self._own[place].get_field_index(name) for name in stored)
+            options = ipc.IpcReadOptions(included_fields=numbers or [0], use_threads=False)
         with pa.memory_map(self.places[place]) as mapped:
             if stretch is None:
                 with ipc.open_stream(mapped, options=options) as stream:
@@ -98,6 +105,18 @@ def _cut(count: int, rows: int) -> list[range | None]:
         return []
     step = max(1, round(ROWS_PER_TASK * count / rows))
     return [range(start, min(start + step, count)) for start in range(0, count, step)]
+
+
+def _is_mapped(batch: pa.RecordBatch, mapped: pa.MemoryMappedFile) -> bool:
+    """Tell whether every buffer of a batch lies in the mapped file."""
+    mapped.seek(0)
+    whole = mapped.read_buffer()
+    buffers = [buffer for column in batch.columns for buffer in column.buffers() if buffer]
+    return all(
+        whole.address <= buffer.address <= whole.address + whole.size
+        for buffer in buffers
+        if buffer.size
+    )
 
 
 def _has_footer(path: str) -> bool:

@@ -100,7 +100,10 @@ class Axis:
         values = np.asarray(x, dtype=np.float64)
         if self.kind == "number":
             return pa.array(values, mask=np.isnan(values))
-        ticks = np.rint(values / SECONDS_PER_DAY if self.unit == "day" else values * self._ticks())
+        # What overflows is beyond the limit below, and null.
+        with np.errstate(over="ignore"):
+            scaled = values / SECONDS_PER_DAY if self.unit == "day" else values * self._ticks()
+        ticks = np.rint(scaled)
         limit = float(2**31 if self.unit == "day" else 2**63) - abs(self.origin)
         # The last float below the limit is the largest that the integer type surely holds.
         held = np.abs(ticks) < limit

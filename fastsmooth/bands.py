@@ -8,9 +8,20 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.bintable import Level
+from fastsmooth.critical import arc_length_of, pointwise_value, simultaneous_value
 from fastsmooth.curve import EDGE, OK, OUTSIDE, THIN
-from fastsmooth.smoother import Fits, kernel_sums, least_spread
+from fastsmooth.jackknife import leave_out_folds
+from fastsmooth.localweights import (
+    CONSTANT,
+    LINE,
+    PARABOLA,
+    PointSums,
+    slope_of,
+    sums_at,
+    weights_of,
+)
+from fastsmooth.settings import Band
+from fastsmooth.smoother import Fits, kernel_sums
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -21,6 +32,11 @@ Floats = NDArray[np.float64]
 _VARIANCE_MULTIPLES = (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0, 12.0, 16.0)
 _VARIANCE_GROUPS = 8
 _VARIANCE_BINS_PER_BANDWIDTH = 16
+# A window that meets fewer folds of blocks is thin, however many rows it holds.
+FEWEST_FOLDS = 12
+# Chords between the weights of neighbouring points follow their path this closely.
+_POINTS_PER_BANDWIDTH = 10
+_MOST_POINTS = 2000
 
 
 @dataclass(frozen=True)
@@ -204,9 +220,8 @@ def fit_points(
     *,
     estimator: str,
     reference: float,
-    level_of_band: float,
-    bias: str,
-    least_rows: float,
+    band: Band,
+    by_block: bool,
     extent: tuple[float, float],
     occupied: Occupied,
 ) -> Points:
@@ -229,102 +244,110 @@ def fit_points(
         ``local-linear`` or ``local-constant``.
     reference : float
         The plan's reference, added to the values.
-    level_of_band : float
-        Confidence level.
-    bias : str
-        ``corrected`` or ``ignored``.
-    least_rows : float
-        Fewer effective rows are ``thin``.
+    band : Band
+        What the band shall be.
+    by_block : bool
+        Whether folds are made of blocks: standard errors then come from leaving out folds.
     extent : (float, float)
         Lowest and highest x of the data, on the scale.
     occupied : Occupied
         Which bins of the finest level hold rows.
     """
-    from fastsmooth.kernels import binned
-    from scipy.special import stdtrit
-
-    level = fits.level
-    h = fits.bandwidth_bins
+    level, h = fits.level, fits.bandwidth_bins
     places = (x - level.origin) / level.width
-    moments = np.ascontiguousarray(level.first[0:3])
-    sums = np.empty((binned.POINT_ROWS, x.shape[0]))
-    binned.point_sums(
-        shape.code, h, np.ascontiguousarray(places), moments, level.response,
-        moments * noise.variance, level.squares, sums,
-    )  # fmt: skip
-    s, t = sums[binned.S : binned.S + 5], sums[binned.T : binned.T + 3]
-    v, u = sums[binned.V : binned.V + 5], sums[binned.U : binned.U + 5]
-    reach = shape.reach * fits.bandwidth_bins * level.width
-    status = _support(x, reach, extent, occupied)
+    sums = _all_sums(places, fits, noise, shape)
+    own = CONSTANT if estimator == "local-constant" else LINE
+    centred = PARABOLA if band.bias == "corrected" else own
+    used, middle = weights_of(sums.s, h, own), weights_of(sums.s, h, centred)
+    status = _support(x, shape.reach * h * level.width, extent, occupied)
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
-        constant = _Weights((np.ones_like(s[0]),), s[0])
-        line = _Weights((s[2], -s[1]), s[0] * s[2] - s[1] ** 2)
-        parabola = _quadratic(s)
-        flat = ~(line.scale > np.maximum(1e-6 * s[0] * s[2], least_spread(h) * s[0] ** 2))
-        used = constant if estimator == "local-constant" else line.or_else(constant, flat)
-        estimate = used.apply(t)
-        slope_of_line = np.where(flat, np.nan, (s[0] * t[1] - s[1] * t[0]) / line.scale) / h
-        if estimator == "local-constant":
-            ds, dt = sums[binned.DS], sums[binned.DT]
-            slope = -(dt * s[0] - t[0] * ds) / s[0] ** 2 / h
-            if shape.smoothness == 0:
-                slope = np.full_like(slope, np.nan)
+        estimate, centre = used.apply(sums.t), middle.apply(sums.t)
+        effective = 1.0 / used.variance(sums.u)
+        centres = np.arange(level.bins) + 0.5
+        spread = np.sqrt(np.interp(places, centres, noise.variance))
+        if by_block:
+            left_out = leave_out_folds(places, level, shape, h, centred)
+            std_error, degrees = left_out.std_error, left_out.degrees
         else:
-            slope = slope_of_line
-        effective = 1.0 / used.variance(u)
-        if bias == "corrected":
-            bent = parabola.scale > 1e-6 * s[0] * s[2] * s[4]
-            centre = np.where(bent, parabola.apply(t), np.nan)
-            variance = np.where(bent, parabola.variance(v), np.nan)
-        else:
-            centre, variance = estimate, used.variance(v)
-        std_error = np.sqrt(variance)
-    centres = np.arange(level.bins) + 0.5
-    degrees = np.interp(places, centres, noise.degrees)
-    spread = np.sqrt(np.interp(places, centres, noise.variance))
-    half = stdtrit(degrees, 0.5 + 0.5 * level_of_band) * std_error
+            std_error = np.sqrt(middle.variance(sums.v))
+            degrees = np.interp(places, centres, noise.degrees)
     status[~np.isfinite(estimate)] = OUTSIDE
-    status[(status != OUTSIDE) & ~(effective >= least_rows)] = THIN
-    out = status == OUTSIDE
-    columns = [estimate + reference, slope / level.width, std_error]
+    thin = ~(effective >= band.least_rows)
+    if by_block:
+        thin |= left_out.folds_met < FEWEST_FOLDS
+    status[(status != OUTSIDE) & thin] = THIN
+    value = pointwise_value(band.level, degrees)
+    if band.kind == "simultaneous":
+        value = _value_for_all(x, status, degrees, fits, noise, shape, centred, band, by_block)
+    with np.errstate(invalid="ignore"):
+        half = value * std_error
+    slope = slope_of(sums, shape, h, estimator) / level.width
+    columns = [estimate + reference, slope, std_error]
     columns += [centre - half + reference, centre + half + reference, effective, spread]
+    out = status == OUTSIDE
     return Points(*(np.where(out, np.nan, column) for column in columns), status=status)
 
 
-class _Weights(NamedTuple):
-    """Linear weights w K (c_0 + c_1 u + ...) / scale, for many points at once."""
-
-    coefficients: tuple[Floats, ...]
-    scale: Floats
-
-    def apply(self, t: Floats) -> Floats:
-        return sum(c * t[j] for j, c in enumerate(self.coefficients)) / self.scale  # type: ignore[return-value]
-
-    def variance(self, v: Floats) -> Floats:
-        total = np.zeros_like(self.scale)
-        for i, a in enumerate(self.coefficients):
-            for j, b in enumerate(self.coefficients):
-                total += a * b * v[i + j]
-        # Rounding can leave a hair below zero where the true value is zero.
-        return np.clip(total, 0.0, None) / self.scale**2
-
-    def or_else(self, other: _Weights, where: NDArray[np.bool_]) -> _Weights:
-        """Take the other weights at some points."""
-        padded = other.coefficients + (np.zeros_like(self.scale),) * (
-            len(self.coefficients) - len(other.coefficients)
-        )
-        pairs = zip(self.coefficients, padded, strict=True)
-        return _Weights(
-            tuple(np.where(where, b, a) for a, b in pairs), np.where(where, other.scale, self.scale)
-        )
+def _all_sums(places: Floats, fits: Fits, noise: Noise, shape: Shape) -> PointSums:
+    level = fits.level
+    weight = level.first[0:3]
+    return sums_at(
+        places, weight, level.response, shape, fits.bandwidth_bins, weight * noise.variance,
+        level.squares,
+    )  # fmt: skip
 
 
-def _quadratic(s: Floats) -> _Weights:
-    """Weights of the local quadratic value (Fan & Gijbels 1996, section 3.1)."""
-    c0 = s[2] * s[4] - s[3] ** 2
-    c1 = s[2] * s[3] - s[1] * s[4]
-    c2 = s[1] * s[3] - s[2] ** 2
-    return _Weights((c0, c1, c2), s[0] * c0 + s[1] * c1 + s[2] * c2)
+def _value_for_all(
+    x: Floats,
+    status: NDArray[np.int64],
+    degrees: Floats,
+    fits: Fits,
+    noise: Noise,
+    shape: Shape,
+    kind: str,
+    band: Band,
+    by_block: bool,
+) -> Floats:
+    """Critical values with which the band covers all supported stretches at once.
+
+    The band claims nothing beyond the points of status ``ok`` and ``edge``.
+    """
+    level, h = fits.level, fits.bandwidth_bins
+    good = (status == OK) | (status == EDGE)
+    ends = np.flatnonzero(np.diff(np.concatenate(([0], good.astype(int), [0])))).reshape(-1, 2)
+    length, sharpness = 0.0, []
+    for start, stop in ends.tolist():
+        low, high = ((x[i] - level.origin) / level.width for i in (start, stop - 1))
+        steps = int(np.clip(np.ceil((high - low) / h * _POINTS_PER_BANDWIDTH), 1, _MOST_POINTS))
+        places = np.linspace(low, high, steps + 1)
+        if by_block:
+            length += arc_length_of(leave_out_folds(places, level, shape, h, kind).moved)
+        else:
+            length += _arc_length(places, fits, noise, shape, kind)
+        sharpness.append(degrees[start:stop])
+    if not sharpness:
+        return pointwise_value(band.level, degrees)
+    typical = float(np.median(np.concatenate(sharpness)))
+    value = simultaneous_value(band.level, length, len(sharpness), typical, own_scale=by_block)
+    # Points with fewer degrees of freedom get the value of equal tail probability.
+    from scipy.stats import t
+
+    return pointwise_value(1.0 - 2.0 * float(t.sf(value, typical)), degrees)
+
+
+def _arc_length(places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: str) -> float:
+    from fastsmooth.kernels import arcs
+
+    weights = weights_of(_all_sums(places, fits, noise, shape).s, fits.bandwidth_bins, kind)
+    coefficients = np.zeros((3, places.shape[0]))
+    for j, c in enumerate(weights.coefficients):
+        coefficients[j] = c / weights.scale
+    chords = np.empty(max(places.shape[0] - 1, 0))
+    arcs.weight_chords(
+        shape.code, fits.bandwidth_bins, places, coefficients,
+        fits.level.first[0] * noise.variance, chords,
+    )  # fmt: skip
+    return float(np.nansum(chords))
 
 
 @dataclass(frozen=True)

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from fastsmooth.blocks import Dealer, merge_keys
 from fastsmooth.errors import InputError
 from fastsmooth.plan import Plan
 
@@ -92,6 +93,8 @@ class BinTable:
         Lowest and highest x accepted, on the plan's scale; (infinity, -infinity) when empty.
     tally : Tally
         What became of the rows.
+    blocks : set
+        Keys of the blocks met, up to a limit; empty without blocks.
 
     Examples
     --------
@@ -108,40 +111,57 @@ class BinTable:
         self.sums: dict[int, Floats] = {}
         self.extent = np.array([np.inf, -np.inf])
         self.tally = Tally()
+        self.blocks: set[Any] = set()
 
     @property
     def slots(self) -> int:
         """Sums per bin, padding included."""
         return 16 if self.plan.columns.weight is not None else 8
 
-    def update(self, chunk: Chunk, task_index: int, row_in_task: int) -> None:
-        """Add the rows of one chunk, each to the fold of its run.
+    def update(
+        self, chunk: Chunk, task_index: int, row_in_task: int, dealer: Dealer | None = None
+    ) -> None:
+        """Add the rows of one chunk, each to the fold of its block or else of its run.
 
         Parameters
         ----------
         chunk : Chunk
-            Rows in the file's own order.
+            Rows in the file's own order; with a dealer, its first extra column is the block.
         task_index : int
             Place of the chunk's task among all tasks.
         row_in_task : int
             Rows of the task, after filters, that came before the chunk.
+        dealer : Dealer or None
+            Deals blocks to folds; None deals runs of consecutive rows.
         """
         self.tally.add(Tally(chunk.rows, chunk.filtered, dict(chunk.refused)))
-        plan = self.plan
-        start = 0
-        while start < chunk.x.shape[0]:
-            run, within = divmod(row_in_task + start, plan.rows_per_run)
-            stop = min(chunk.x.shape[0], start + plan.rows_per_run - within)
-            rows = slice(start, stop)
-            self.add_rows(
-                plan.fold_of_run(task_index, run),
-                chunk.x[rows],
-                chunk.y[rows],
-                None if chunk.weight is None else chunk.weight[rows],
-                None if chunk.count is None else chunk.count[rows],
-                tallied=True,
-            )
-            start = stop
+        arrays = (chunk.x, chunk.y, chunk.weight, chunk.count)
+        rows = chunk.x.shape[0]
+        if dealer is None:
+            plan = self.plan
+            first = row_in_task // plan.rows_per_run
+            last = (row_in_task + max(rows, 1) - 1) // plan.rows_per_run
+            runs = np.arange(first, last + 1)
+            starts = np.clip(runs * plan.rows_per_run - row_in_task, 0, rows)
+            folds = np.array([plan.fold_of_run(task_index, run) for run in runs.tolist()])
+        else:
+            per_row, keys = dealer.deal(chunk.extra[0])
+            self.blocks = merge_keys(self.blocks, keys)
+            starts = np.concatenate(([0], np.flatnonzero(np.diff(per_row)) + 1))
+            if starts.shape[0] > max(4 * self.plan.folds, 8):
+                # Blocks interleaved row by row: sorted by fold, each fold is one stretch.
+                order = np.argsort(per_row, kind="stable")
+                per_row = per_row[order]
+                arrays = tuple(None if one is None else one[order] for one in arrays)
+                starts = np.concatenate(([0], np.flatnonzero(np.diff(per_row)) + 1))
+            folds = per_row[starts] if rows else np.empty(0, np.int64)
+        stops = np.append(starts[1:], rows)
+        for fold, start, stop in zip(folds.tolist(), starts.tolist(), stops.tolist(), strict=False):
+            if fold < 0:
+                self.tally.refuse("block null", stop - start)
+            elif start < stop:
+                x, y, weight, count = (None if one is None else one[start:stop] for one in arrays)
+                self.add_rows(fold, x, y, weight, count, tallied=True)
 
     def add_rows(
         self,
@@ -213,6 +233,7 @@ class BinTable:
                 "make both from the same plan",
             )
         self.tally.add(other.tally)
+        self.blocks = merge_keys(self.blocks, other.blocks)
         low, high = other.extent
         self.extent = np.array([min(self.extent[0], low), max(self.extent[1], high)])
         if low > high:
@@ -376,8 +397,8 @@ class Pyramid:
     ----------
     table : BinTable
         Finished table; it is not changed.
-    keep : (bins,) bool or None
-        Bins of the finest level whose rows take part; None means all.
+    keep : (bins,) or (folds, bins) bool or None
+        Bins of the finest level (of each fold with rows) whose rows take part; None means all.
     """
 
     def __init__(self, table: BinTable, keep: NDArray[np.bool_] | None = None) -> None:
@@ -410,14 +431,12 @@ def _finest(table: BinTable, keep: NDArray[np.bool_] | None) -> Level:
     count = np.zeros(plan.bins)
     for place, fold in enumerate(used):
         sums = table.sums[fold]
+        if keep is not None:
+            sums = sums * (keep[place] if keep.ndim == 2 else keep)[:, np.newaxis]
         folds[place] = sums[:, _FIRST].T
         if table.slots == 16:
             second += sums[:, _SECOND].T
             count += sums[:, 8]
-    if keep is not None:
-        folds *= keep
-        second *= keep[: second.shape[1]]
-        count *= keep
     first = np.zeros((7, plan.bins))
     for fold in range(folds.shape[0]):
         first += folds[fold]

@@ -55,52 +55,6 @@ class Values:
     valid: NDArray[np.bool_] | None
 
 
-def plain_type(data_type: pa.DataType) -> pa.DataType:
-    """Return the type of the values inside dictionaries, runs and extensions.
-
-    Parameters
-    ----------
-    data_type : pyarrow.DataType
-        Type of a column.
-
-    Returns
-    -------
-    pyarrow.DataType
-        Type of its values.
-    """
-    while True:
-        if isinstance(data_type, pa.BaseExtensionType):
-            data_type = data_type.storage_type
-        elif pt.is_dictionary(data_type) or pt.is_run_end_encoded(data_type):
-            data_type = data_type.value_type
-        else:
-            return data_type
-
-
-def plain_array(array: pa.Array) -> pa.Array:
-    """Return the values inside dictionaries, runs and extensions.
-
-    Parameters
-    ----------
-    array : pyarrow.Array
-        A column.
-
-    Returns
-    -------
-    pyarrow.Array
-        Its values; the same array if it is plain.
-    """
-    while True:
-        if isinstance(array.type, pa.BaseExtensionType):
-            array = array.storage
-        elif pt.is_dictionary(array.type):
-            array = array.dictionary_decode()
-        elif pt.is_run_end_encoded(array.type):
-            array = pc.run_end_decode(array)
-        else:
-            return array
-
-
 def filterable_type(data_type: pa.DataType) -> pa.DataType:
     """Return the type in which Arrow can filter a column.
 
@@ -119,6 +73,54 @@ def filterable_type(data_type: pa.DataType) -> pa.DataType:
     if pt.is_binary_view(data_type):
         return pa.large_binary()
     return data_type
+
+
+def plain_type(data_type: pa.DataType) -> pa.DataType:
+    """Return the type of the values inside dictionaries, runs and extensions, without views.
+
+    Parameters
+    ----------
+    data_type : pyarrow.DataType
+        Type of a column.
+
+    Returns
+    -------
+    pyarrow.DataType
+        Type of its values.
+    """
+    while True:
+        if isinstance(data_type, pa.BaseExtensionType):
+            data_type = data_type.storage_type
+        elif pt.is_dictionary(data_type) or pt.is_run_end_encoded(data_type):
+            data_type = data_type.value_type
+        else:
+            return filterable_type(data_type)
+
+
+def plain_array(array: pa.Array) -> pa.Array:
+    """Return the values inside dictionaries, runs and extensions, without views.
+
+    Parameters
+    ----------
+    array : pyarrow.Array
+        A column.
+
+    Returns
+    -------
+    pyarrow.Array
+        Its values; the same array if it is plain.
+    """
+    while True:
+        if isinstance(array.type, pa.BaseExtensionType):
+            array = array.storage
+        elif pt.is_dictionary(array.type):
+            values = array.dictionary.cast(filterable_type(array.type.value_type))
+            array = pa.DictionaryArray.from_arrays(array.indices, values).dictionary_decode()
+        elif pt.is_run_end_encoded(array.type):
+            array = pc.run_end_decode(array)
+        else:
+            to = filterable_type(array.type)
+            return array if array.type == to else array.cast(to)
 
 
 def is_number(data_type: pa.DataType) -> bool:

@@ -71,14 +71,10 @@ def open_frame(data: Any) -> Reader:
     if module in IN_MEMORY:
         with _streaming("the frame"):
             return TableReader(pa.RecordBatchReader.from_stream(data).read_all(), "the frame")
-    return StreamReader(lambda _: pa.RecordBatchReader.from_stream(data), _schema_of(data))
-
-
-def _schema_of(data: Any) -> pa.Schema:
     with _streaming("the stream"):
-        if hasattr(data, "__arrow_c_schema__"):
-            return pa.schema(data)
-        return pa.RecordBatchReader.from_stream(data).schema
+        first = pa.RecordBatchReader.from_stream(data)
+    schema = pa.schema(data) if hasattr(data, "__arrow_c_schema__") else first.schema
+    return StreamReader(lambda _: pa.RecordBatchReader.from_stream(data), schema, first)
 
 
 @contextmanager
@@ -99,11 +95,19 @@ class StreamReader(Reader):
     """A source of Arrow streams that is asked for a fresh one on each pass."""
 
     def __init__(
-        self, open_stream: Callable[[Sequence[str]], pa.RecordBatchReader], schema: pa.Schema
+        self,
+        open_stream: Callable[[Sequence[str]], pa.RecordBatchReader],
+        schema: pa.Schema,
+        first: pa.RecordBatchReader | None = None,
     ) -> None:
-        """Keep `open_stream`, which takes the columns wanted and may deliver more."""
+        """Keep `open_stream`, which takes the columns wanted and may deliver more.
+
+        `first` is a stream that is open already, for the first pass.
+        """
         self._open = open_stream
+        self._first = first
         self._rows: int | None = None
+        self._seen = 0
         self.places = ("the stream",)
         self.schemas = (schema,)
         self.tasks = (Task(0, "the stream", None),)
@@ -112,15 +116,20 @@ class StreamReader(Reader):
     def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
         """Deliver a fresh stream; its length must be that of the pass before."""
         delivered = 0
-        with _streaming("the stream"), self._open(columns) as stream:
-            for batch in rebatch((pick(batch, columns) for batch in stream), rows):
-                delivered += batch.num_rows
-                yield self._retyped(batch)
-        if self._rows is not None and delivered != self._rows:
+        with _streaming("the stream"):
+            first, self._first = self._first, None
+            with self._open(columns) if first is None else first as stream:
+                for batch in rebatch((pick(batch, columns) for batch in stream), rows):
+                    delivered += batch.num_rows
+                    # A pass that is not read to its end still tells that so many rows exist.
+                    self._seen = max(self._seen, delivered)
+                    yield self._retyped(batch)
+        before = self._seen if self._rows is None else self._rows
+        if delivered < before or (self._rows is not None and delivered != before):
             raise ReadError(
                 "DATA",
                 "deliver the same rows on each pass",
-                f"the stream gave {self._rows} rows first and {delivered} rows then",
+                f"the stream gave {before} rows first and {delivered} rows then",
                 "write it to a Parquet file and name that",
             )
         self._rows = delivered

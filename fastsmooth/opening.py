@@ -310,7 +310,9 @@ def _with_origin(axis: Axis, reader: Reader, role: Role) -> Axis:
     ]
     first = min(lows) if lows else _first_ticks(axis, reader, role)
     day = 1 if axis.unit == "day" else SECONDS_PER_DAY * TICKS_PER_SECOND[axis.unit]
-    return Axis(axis.kind, axis.arrow_type, axis.unit, axis.zone, first // day * day)
+    # The first day that 64-bit counts reach is not whole.
+    origin = max(first // day * day, -(2**63))
+    return Axis(axis.kind, axis.arrow_type, axis.unit, axis.zone, origin)
 
 
 def _first_ticks(axis: Axis, reader: Reader, role: Role) -> int:

@@ -54,6 +54,10 @@ class ParquetReader(Reader):
                     self._groups.append((place, group))
         self.tasks = tuple(tasks)
         self.place_of = tuple(place for place, _ in self._groups)
+        # Task and row group of each file's tasks.
+        self._of_place: list[list[tuple[int, int]]] = [[] for _ in paths]
+        for index, (place, group) in enumerate(self._groups):
+            self._of_place[place].append((index, group))
 
     def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
         """Read one row group, a chunk at a time."""
@@ -83,11 +87,7 @@ class ParquetReader(Reader):
             )
             kept = fragment.subset(condition, schema=self.schemas[place]).row_groups
         kept_groups = {group.id for group in kept}
-        return {
-            index
-            for index, (of_place, group) in enumerate(self._groups)
-            if of_place == place and group not in kept_groups
-        }
+        return {index for index, group in self._of_place[place] if group not in kept_groups}
 
     def extent(self, index: int, column: str) -> Extent | None:
         """Return a row group's statistics of a column."""

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from fastsmooth.bintable import BinTable
+from fastsmooth.blocks import Block, Dealer
 from fastsmooth.curve import Caution
 from fastsmooth.errors import InputError
 from fastsmooth.plan import (
@@ -63,19 +64,22 @@ class Counted:
     passes: int
 
 
-def count_pass(source: Source, plan: Plan, threads: int, progress: Progress = silent) -> BinTable:
+def count_pass(
+    source: Source, plan: Plan, reading: Reading, progress: Progress = silent
+) -> BinTable:
     """Read all rows once into a table of the plan.
 
     Each task sums into a table of its own; tables are merged in task order, so the result is the
     same to the last bit for any number of threads.
     """
     done = 0
+    dealer = None if reading.block is None else Dealer(_block(reading), plan.folds)
 
     def count(task: Task, chunks: Iterator[Chunk]) -> BinTable:
         table = BinTable(plan)
         row = 0
         for chunk in chunks:
-            table.update(chunk, task.index, row)
+            table.update(chunk, task.index, row, dealer)
             row += chunk.x.shape[0]
         return table
 
@@ -85,9 +89,19 @@ def count_pass(source: Source, plan: Plan, threads: int, progress: Progress = si
         progress("reading", done, source.rows_expected)
 
     total = BinTable(plan)
-    for part in source.map_tasks(count, threads, progress=report):
+    for part in source.map_tasks(count, reading.threads, progress=report):
         total.merge(part)
     return total
+
+
+def _block(reading: Reading) -> Block:
+    assert isinstance(reading.block, Block)  # Reading has parsed any text
+    return reading.block
+
+
+def block_words(reading: Reading) -> str | None:
+    """Return the block of a reading in words."""
+    return None if reading.block is None else str(reading.block)
 
 
 def count_rows(source: Source, reading: Reading, progress: Progress = silent) -> Counted:
@@ -110,8 +124,10 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
         bounds = _plausible_bounds(bounds, sample)
         trimmed = bounds != full
     for passes in range(1, _MOST_PASSES + 1):
-        plan = make_plan(source, sample, bounds, scale=scale, folds=reading.folds)
-        table = count_pass(source, plan, reading.threads, progress)
+        plan = make_plan(
+            source, sample, bounds, scale=scale, block=block_words(reading), folds=reading.folds
+        )
+        table = count_pass(source, plan, reading, progress)
         check_rows(table, source, reading)
         if reading.range is not None or passes == _MOST_PASSES:
             break
@@ -139,9 +155,10 @@ def count_finer(
     if reading.range is not None or _rows_outside(table):
         low, high = plan.origin, plan.high
     finer = make_plan(
-        source, counted.sample, (low, high), scale=plan.scale, bins=bins, folds=plan.folds
-    )
-    again = count_pass(source, finer, reading.threads, progress)
+        source, counted.sample, (low, high), scale=plan.scale, block=plan.block, bins=bins,
+        folds=plan.folds,
+    )  # fmt: skip
+    again = count_pass(source, finer, reading, progress)
     return replace(counted, table=again, passes=counted.passes + 1)
 
 

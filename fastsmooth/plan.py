@@ -47,6 +47,8 @@ class Plan:
         ``linear``, or ``log``: bins, widths and windows in log x.
     where : str or None
         Row filter.
+    block : str or None
+        What makes rows belong together, in words; None deals runs of rows to the folds.
     origin, width : float
         Left end of the first bin and width of the bins, on the scale.
     bins : int
@@ -73,6 +75,7 @@ class Plan:
     axis: Axis
     scale: str
     where: str | None
+    block: str | None
     origin: float
     width: float
     bins: int
@@ -87,7 +90,7 @@ class Plan:
         """Return a plan for a number axis without a pilot."""
         return cls(
             Columns("x", "y"), Axis("number", "double", "", None, 0), "linear", None,
-            low, bin_width(low, high, bins), bins, folds, _LONGEST_RUN_ROWS, folds, 0.0, (0.0,),
+            None, low, bin_width(low, high, bins), bins, folds, _LONGEST_RUN_ROWS, folds, 0.0, (0.0,),
         )  # fmt: skip
 
     @property
@@ -303,6 +306,7 @@ def make_plan(
     bounds: tuple[float, float],
     *,
     scale: str,
+    block: str | None = None,
     bins: int = BINS,
     folds: int = FOLDS,
 ) -> Plan:
@@ -318,6 +322,8 @@ def make_plan(
         Range of x, on the scale.
     scale : str
         ``linear`` or ``log``.
+    block : str or None
+        What makes rows belong together, in words.
     bins, folds : int
         Number of bins and folds.
 
@@ -345,7 +351,7 @@ def make_plan(
         run = min(_LONGEST_RUN_ROWS, max(1, rows // (4 * folds)))
     few = tasks >= _TASKS_FOR_FEW_FOLDS and folds > _FEW_FOLDS
     plan = Plan(
-        source.columns, source.axis, scale, source.where, low, width, bins, folds,
+        source.columns, source.axis, scale, source.where, block, low, width, bins, folds,
         run, _FEW_FOLDS if few else folds, reference, pilot,
     )  # fmt: skip
     return _shorten_runs(plan, sample)

@@ -185,7 +185,7 @@ def plug_in_bandwidth(pyramid: Pyramid, shape: Shape, estimator: str) -> float:
     >>> noise = np.random.default_rng(1).normal(size=5000)
     >>> table.add_rows(0, x, 20.0 + np.sin(x) + 0.3 * noise)
     >>> h = plug_in_bandwidth(Pyramid(table), SHAPES["epanechnikov"], "local-linear")
-    >>> 0.4 < h < 0.8
+    >>> 0.3 < h < 0.4
     True
     """
     one_of("--estimator", estimator, ESTIMATORS)
@@ -302,8 +302,7 @@ def _data(pyramid: Pyramid) -> _Data:
         )
     gap = max(float(np.median(np.diff(x))), finest.width)
     weight = float(finest.first[0].sum())
-    narrowest = min(_MEDIAN_GAPS * gap, half)
-    return _Data(pyramid, middle, half, narrowest, rows, weight)
+    return _Data(pyramid, middle, half, _MEDIAN_GAPS * gap, rows, weight)
 
 
 def _mean_places(level: Level, used: NDArray[np.int64]) -> Floats:

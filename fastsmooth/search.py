@@ -18,7 +18,10 @@ from fastsmooth.smoother import (
     Scores,
     fit_level,
     fold_sums,
+    kernel_sums,
     least_weight,
+    left_out_fold_scores,
+    others,
     score_level,
 )
 
@@ -36,6 +39,9 @@ _COARSEST_BINS_PER_BANDWIDTH = 8
 _SHARE_SUPPORTED = 0.95
 _PLACES_PER_WINDOW = 4
 _REFINED = 1e-3  # of log h
+_REFINED_BY_FOLD = 1e-2
+# Where the other folds' rows lie this far to one side, a fold's row asks for extrapolation.
+_MOST_LOPSIDED = 0.5
 # A local minimum this close to the best rivals it.
 _RIVAL_SHARE = 0.1
 _GOLDEN = (math.sqrt(5.0) - 1.0) / 2.0
@@ -53,14 +59,20 @@ class Trail:
         The grid, ascending, on the plan's scale.
     leave_one_out, gcv, aicc : (k,) float64
         Criteria at the grid; infinite where undefined.
+    leave_block_out : (k,) or (0,) float64
+        Mean squared error of predicting each fold from the others; empty without blocks.
     excess : (k,) float64
-        Mean leave-one-out criterion less the chosen bandwidth's, paired row by row.
+        Mean criterion (leave-one-out or leave-block-out) less the chosen bandwidth's, paired row
+        by row.
     excess_std_error : (k,) float64
         Its standard error from folds.
     bandwidth : float
         The criterion's choice, refined between grid points.
+    leave_one_out_bandwidth : float
+        What leave-one-out would choose.
     score : float
-        Leave-one-out criterion at the choice.
+        Mean squared error of predicting left-out rows at the choice: leave-block-out if that was
+        the criterion, else leave-one-out.
     trace : float
         Sum of leverages at the choice (equivalent number of parameters).
     flat_zone : (float, float)
@@ -74,9 +86,11 @@ class Trail:
     leave_one_out: Floats
     gcv: Floats
     aicc: Floats
+    leave_block_out: Floats
     excess: Floats
     excess_std_error: Floats
     bandwidth: float
+    leave_one_out_bandwidth: float
     score: float
     trace: float
     flat_zone: tuple[float, float]
@@ -84,7 +98,8 @@ class Trail:
 
     def values(self, criterion: str) -> Floats:
         """Return the criterion's values at the grid (leave-one-out for the plug-in rule)."""
-        return {"gcv": self.gcv, "aicc": self.aicc}.get(criterion, self.leave_one_out)
+        own = {"gcv": self.gcv, "aicc": self.aicc, "leave-block-out": self.leave_block_out}
+        return own.get(criterion, self.leave_one_out)
 
     @property
     def at_low_end(self) -> bool:
@@ -159,7 +174,9 @@ class Search:
         """
         import pyarrow as pa
 
-        names = ("leave_one_out", "gcv", "aicc", "excess", "excess_std_error")
+        names = ["leave_one_out", "gcv", "aicc", "excess", "excess_std_error"]
+        if all(trail.leave_block_out.size for trail in self.trails.values()):
+            names.insert(1, "leave_block_out")
         parts = []
         for name, trail in self.trails.items():
             columns: dict[str, Any] = {"estimator": [name] * trail.bandwidths.shape[0]}
@@ -231,6 +248,7 @@ def search_table(
     shape: Shape,
     *,
     criterion: str = "leave-one-out",
+    by_block: bool = False,
     widths: int = WIDTHS,
     bounds: tuple[float, float] | None = None,
     threads: int = 1,
@@ -247,6 +265,8 @@ def search_table(
         Kernel function.
     criterion : str
         One of `fastsmooth.settings.CRITERIA`.
+    by_block : bool
+        Whether to leave out folds too; needed for the criterion ``leave-block-out``.
     widths : int
         Bandwidths in the grid, evenly spaced in log h.
     bounds : (float, float) or None
@@ -269,13 +289,20 @@ def search_table(
     empty = least_weight(pyramid, shape)
     keep, rows_alone = _voters(pyramid, shape, low, empty)
     scored = pyramid if keep is None else Pyramid(table, keep)
-    job = _Job(pyramid, scored, shape, empty)
+    left_out = None
+    if by_block:
+        keep_folds, rows_alone = _fold_voters(pyramid, shape, low, empty)
+        left_out = Pyramid(table, keep_folds)
+    job = _Job(pyramid, shape, empty, scored, left_out)
     with ThreadPoolExecutor(threads) as pool:
         points = list(pool.map(job.scores, grid.tolist()))
+        by_fold = list(pool.map(job.left_out_scores, grid.tolist())) if by_block else []
         trails = dict(
             zip(
                 ESTIMATORS,
-                pool.map(lambda name: _trail(job, name, grid, points, criterion), ESTIMATORS),
+                pool.map(
+                    lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS
+                ),
                 strict=True,
             )
         )
@@ -314,45 +341,88 @@ def _voters(
     return np.repeat(keep, finest.bins // level.bins), float(level.count[lost].sum())
 
 
+def _fold_voters(
+    pyramid: Pyramid, shape: Shape, narrowest: float, empty: float
+) -> tuple[NDArray[np.bool_], float]:
+    """Bins of each fold whose rows the other folds predict at the narrowest width.
+
+    Not only must the others have rows in the window, they must lie on both sides: a row that
+    only one stretch of days has seen asks the others to extrapolate, and would judge every width
+    by that.
+    """
+    finest = pyramid.levels[0]
+    level = pyramid.levels[pyramid.level_for(narrowest, shape.bins_per_bandwidth)]
+    h = narrowest / level.width
+    parts = [kernel_sums(fold[0:3], shape, h, 2, squared=False) for fold in level.folds]
+    s = others(np.array(parts))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        keep = (s[:, 0] > empty) & (np.abs(s[:, 1] / s[:, 0]) < _MOST_LOPSIDED * shape.reach)
+    lost = float(level.folds[:, 0][~keep].sum())
+    return np.repeat(keep, finest.bins // level.bins, axis=1), lost
+
+
 class _Job:
     """Scores of both estimators at any bandwidth."""
 
-    def __init__(self, pyramid: Pyramid, scored: Pyramid, shape: Shape, empty: float) -> None:
+    def __init__(
+        self, pyramid: Pyramid, shape: Shape, empty: float, scored: Pyramid, left_out: Pyramid | None
+    ) -> None:
         self.pyramid = pyramid
-        self.scored = scored
         self.shape = shape
         self.empty = empty
-        top = scored.levels[-1]
-        self.rows = float(top.count.sum())
-        self.weight = float(top.first[0].sum())
+        # Rows that vote on leave-one-out and, where blocks are left out, on that.
+        self.scored = scored
+        self.left_out = left_out
 
     def level(self, bandwidth: float) -> int:
         return self.pyramid.level_for(bandwidth, self.shape.bins_per_bandwidth)
 
     def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
+        """Score every row against the others."""
         index = self.level(bandwidth) if level is None else level
         fits = fit_level(self.pyramid.levels[index], self.shape, bandwidth, self.empty)
         scored = self.scored.levels[index]
         points = {}
         for name in ESTIMATORS:
             scores = score_level(fits, name, scored)
-            points[name] = self._point(bandwidth, scores, fold_sums(scored, scores), scored)
+            points[name] = _point_of(bandwidth, scores, fold_sums(scored, scores), scored)
         return points
 
-    def _point(self, bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
-        n = self.rows
-        # A width at which a voter has no prediction cannot be compared with the others.
-        loo = scores.score / self.weight if scores.lost == 0.0 else math.inf
-        variance = scores.residual / self.weight
-        room = 1.0 - scores.trace / n
-        gcv = variance / room**2 if room > 0.0 else math.inf
-        aicc = math.inf
-        if n - scores.trace - 2.0 > 0.0 and variance > 0.0:
-            aicc = math.log(variance) + 1.0 + 2.0 * (scores.trace + 1.0) / (n - scores.trace - 2.0)
-        return _Point(
-            bandwidth, {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}, scores.trace,
-            folds / self.weight, scored.folds[:, 0].sum(axis=1) / self.weight,
-        )  # fmt: skip
+    def left_out_scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
+        """Score every fold against the others."""
+        assert self.left_out is not None
+        # Half the bins do: a fold's absence moves the fit far more than binning does.
+        fewer = max(8, self.shape.bins_per_bandwidth // 2)
+        index = self.pyramid.level_for(bandwidth, fewer) if level is None else level
+        scored = self.left_out.levels[index]
+        weight = float(scored.first[0].sum())
+        found = left_out_fold_scores(
+            self.pyramid.levels[index], scored, self.shape, bandwidth, self.empty
+        )
+        shares = scored.folds[:, 0].sum(axis=1) / weight
+        points = {}
+        for name, (folds, lost) in found.items():
+            value = float(folds.sum()) / weight if lost == 0.0 else math.inf
+            points[name] = _Point(
+                bandwidth, {"leave-block-out": value}, math.nan, folds / weight, shares
+            )
+        return points
+
+
+def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
+    n, weight = float(scored.count.sum()), float(scored.first[0].sum())
+    # A width at which a voter has no prediction cannot be compared with the others.
+    loo = scores.score / weight if scores.lost == 0.0 else math.inf
+    variance = scores.residual / weight
+    room = 1.0 - scores.trace / n
+    gcv = variance / room**2 if room > 0.0 else math.inf
+    aicc = math.inf
+    if n - scores.trace - 2.0 > 0.0 and variance > 0.0:
+        aicc = math.log(variance) + 1.0 + 2.0 * (scores.trace + 1.0) / (n - scores.trace - 2.0)
+    return _Point(
+        bandwidth, {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}, scores.trace,
+        folds / weight, scored.folds[:, 0].sum(axis=1) / weight,
+    )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -365,7 +435,12 @@ class _Point:
 
 
 def _trail(
-    job: _Job, name: str, grid: Floats, points: list[dict[str, _Point]], criterion: str
+    job: _Job,
+    name: str,
+    grid: Floats,
+    points: list[dict[str, _Point]],
+    left_out: list[dict[str, _Point]],
+    criterion: str,
 ) -> Trail:
     mine = [point[name] for point in points]
     if criterion == "plug-in":
@@ -373,41 +448,56 @@ def _trail(
 
         bandwidth = float(np.clip(plug_in_bandwidth(job.pyramid, job.shape, name), grid[0], grid[-1]))
         best = job.scores(bandwidth)[name]
-        values = [point.criteria["leave-one-out"] for point in mine]
     else:
-        values = [point.criteria[criterion] for point in mine]
-        if not any(math.isfinite(value) for value in values):
-            raise InputError(
-                "DATA",
-                "leave some width at which rows can be predicted from others",
-                "no width between the narrowest and the widest does",
-                "give more rows or --bandwidth",
-            )
-        best = _refine(job, name, grid, values, criterion)
-    excess = np.array([p.criteria["leave-one-out"] - best.criteria["leave-one-out"] for p in mine])
-    errors = np.array([_paired_error(p, best) for p in mine])
+        by_fold = criterion == "leave-block-out"
+        choosing = [point[name] for point in left_out] if by_fold else mine
+        best = _refine(job, name, grid, [point.criteria[criterion] for point in choosing], criterion)
+    by_row = best if criterion == "leave-one-out" else None
+    if by_row is None:
+        values = [point.criteria["leave-one-out"] for point in mine]
+        by_row = _refine(job, name, grid, values, "leave-one-out")
+    # The flat zone compares widths by the criterion that chose, or by leave-one-out where that
+    # criterion has no sum over rows.
+    judge = "leave-block-out" if criterion == "leave-block-out" else "leave-one-out"
+    judged = [point[name] for point in left_out] if judge == "leave-block-out" else mine
+    excess = np.array([p.criteria[judge] - best.criteria[judge] for p in judged])
+    errors = np.array([_paired_error(p, best) for p in judged])
     zone = _flat_zone(grid, excess, errors, best.bandwidth)
+    at_best = best if judge == "leave-one-out" else job.scores(best.bandwidth)[name]
+    shown = np.array([p.criteria[criterion if criterion in p.criteria else judge] for p in judged])
     return Trail(
         name,
         grid,
         *(np.array([p.criteria[c] for p in mine]) for c in ("leave-one-out", "gcv", "aicc")),
+        leave_block_out=np.array([p[name].criteria["leave-block-out"] for p in left_out]),
         excess=excess,
         excess_std_error=errors,
         bandwidth=best.bandwidth,
-        score=best.criteria["leave-one-out"],
-        trace=best.trace,
+        leave_one_out_bandwidth=by_row.bandwidth,
+        score=best.criteria[judge],
+        trace=at_best.trace,
         flat_zone=zone,
-        minima=_deep_minima(np.exp(values) if criterion == "aicc" else np.array(values), errors),
+        minima=_deep_minima(np.exp(shown) if criterion == "aicc" else shown, errors),
     )
 
 
 def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: str) -> _Point:
     """Golden section between the neighbours of the best grid point, on one level throughout."""
+    if not any(math.isfinite(value) for value in values):
+        raise InputError(
+            "DATA",
+            "leave some width at which rows can be predicted from others",
+            "no width between the narrowest and the widest does",
+            "give more rows or --bandwidth",
+        )
     place = int(np.argmin(values))
-    level = job.level(float(grid[place]))
+    by_fold = criterion == "leave-block-out"
+    scores = job.left_out_scores if by_fold else job.scores
+    close = _REFINED_BY_FOLD if by_fold else _REFINED
+    level: int | None = None if by_fold else job.level(float(grid[place]))
 
     def at(log_h: float) -> tuple[float, _Point]:
-        point = job.scores(math.exp(log_h), level)[name]
+        point = scores(math.exp(log_h), level)[name]
         return point.criteria[criterion], point
 
     low = math.log(grid[max(place - 1, 0)])
@@ -415,7 +505,7 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
     best = at(math.log(grid[place]))
     left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_left, at_right = at(left), at(right)
-    while high - low > _REFINED:
+    while high - low > close:
         if at_left[0] <= at_right[0]:
             high, right, at_right = right, left, at_left
             left = high - _GOLDEN * (high - low)

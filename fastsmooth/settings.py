@@ -5,17 +5,23 @@ from __future__ import annotations
 import os
 from dataclasses import dataclass, field
 
+from typing import TYPE_CHECKING
+
 from fastsmooth.errors import InputError
 from fastsmooth.near import advise
+
+if TYPE_CHECKING:
+    from fastsmooth.blocks import Block
 
 ESTIMATORS = ("local-linear", "local-constant")
 KERNELS = (
     "biweight", "epanechnikov", "uniform", "triangular", "triweight", "tricube", "gaussian",
 )  # fmt: skip
-CRITERIA = ("leave-one-out", "gcv", "aicc", "plug-in")
+CRITERIA = ("leave-one-out", "leave-block-out", "gcv", "aicc", "plug-in")
 SCALES = ("linear", "log")
 NOISES = ("local", "constant")
 BIASES = ("corrected", "ignored")
+BANDS = ("pointwise", "simultaneous")
 
 
 def usable_cores() -> int:
@@ -50,7 +56,10 @@ class Reading:
     threads : int
         Row groups read at a time. Results do not depend on it.
     folds : int
-        Parts into which the rows are dealt for standard errors of the criterion.
+        Parts into which the rows are dealt for standard errors.
+    block : Block or str or None
+        Which rows may depend on each other: a column, or a time column with a unit
+        (``logged_at:day``). None deals runs of consecutive rows to the folds.
     """
 
     where: str | None = None
@@ -59,8 +68,13 @@ class Reading:
     strict: bool = False
     threads: int = field(default_factory=usable_cores)
     folds: int = 32
+    block: Block | str | None = None
 
     def __post_init__(self) -> None:
+        if isinstance(self.block, str):
+            from fastsmooth.blocks import Block
+
+            object.__setattr__(self, "block", Block.parse(self.block))
         one_of("--scale", self.scale, SCALES)
         if self.threads < 1:
             raise InputError("--threads", "be at least 1", f"it is {self.threads}", "leave it out")
@@ -83,8 +97,9 @@ class Smoothing:
     bandwidth : object or None
         Half-width of the window (standard deviation of the Gaussian) in the column's terms, a
         factor above 1 on a log scale; None lets the criterion choose.
-    criterion : str
-        ``leave-one-out``, ``gcv``, ``aicc`` or ``plug-in``.
+    criterion : str or None
+        One of `CRITERIA`; None means ``leave-block-out`` where a block is given, else
+        ``leave-one-out``.
     widths : int
         Bandwidths in the search grid.
     """
@@ -92,13 +107,14 @@ class Smoothing:
     estimator: str = "local-linear"
     kernel: str = "biweight"
     bandwidth: object | None = None
-    criterion: str = "leave-one-out"
+    criterion: str | None = None
     widths: int = 48
 
     def __post_init__(self) -> None:
         one_of("--estimator", self.estimator, ESTIMATORS)
         one_of("--kernel", self.kernel, KERNELS)
-        one_of("--criterion", self.criterion, CRITERIA)
+        if self.criterion is not None:
+            one_of("--criterion", self.criterion, CRITERIA)
         if not 8 <= self.widths <= 1000:
             raise InputError(
                 "--widths", "be between 8 and 1000", f"it is {self.widths}", "leave it out"
@@ -112,13 +128,16 @@ class Band:
     Parameters
     ----------
     level : float
-        Confidence level of the pointwise band.
+        Confidence level of the band.
+    kind : str
+        ``pointwise`` covers each point with that confidence, ``simultaneous`` the whole curve.
     bias : str
         ``corrected`` covers the mean; ``ignored`` covers the smoothed mean.
     noise : str
         ``local`` lets the residual variance change with x; ``constant`` does not.
     least_rows : float
-        Points with fewer effective rows are ``thin``.
+        Points with fewer effective rows are ``thin``; with a block also those whose window
+        meets fewer than twelve folds.
     points : int
         Evenly spaced points from the lowest to the highest x (in log x on a log scale).
     at : sequence or None
@@ -126,6 +145,7 @@ class Band:
     """
 
     level: float = 0.95
+    kind: str = "pointwise"
     bias: str = "corrected"
     noise: str = "local"
     least_rows: float = 30.0
@@ -133,6 +153,7 @@ class Band:
     at: tuple[object, ...] | None = None
 
     def __post_init__(self) -> None:
+        one_of("--band", self.kind, BANDS)
         one_of("--bias", self.bias, BIASES)
         one_of("--noise", self.noise, NOISES)
         if not 0.0 < self.level < 1.0:

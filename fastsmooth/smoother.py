@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.bintable import Level, Pyramid
+from fastsmooth.settings import ESTIMATORS
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -164,4 +165,69 @@ def fold_sums(scored: Level, scores: Scores) -> Floats:
 
     out = np.empty(scored.folds.shape[0])
     localfit.fold_scores(scored.folds, scores.coefficients, out)
+    return out
+
+
+def others(parts: Floats) -> Floats:
+    """Return for each part the sum of all the others, without subtraction.
+
+    Parameters
+    ----------
+    parts : (k, ...) float64
+        Summed along the first axis.
+    """
+    out = np.zeros_like(parts)
+    if parts.shape[0] > 1:
+        out[1:] = np.cumsum(parts[:-1], axis=0)
+        out[:-1] += np.cumsum(parts[:0:-1], axis=0)[::-1]
+    return out
+
+
+def left_out_fold_scores(
+    level: Level, scored: Level, shape: Shape, bandwidth: float, empty: float
+) -> dict[str, tuple[Floats, float]]:
+    """Score the rows of each fold against fits to all other folds.
+
+    Parameters
+    ----------
+    level, scored : Level
+        Rows that make the fits, and rows that are scored; same bins, same folds.
+    shape : Shape
+        Kernel function.
+    bandwidth : float
+        h on the plan's scale.
+    empty : float
+        See `least_weight`.
+
+    Returns
+    -------
+    dict
+        Per estimator: sum of w (y - m_without_fold)^2 per fold, and the weight of rows that the
+        other folds cannot predict.
+    """
+    from fastsmooth.kernels import localfit
+
+    folds, h = level.folds.shape[0], bandwidth / level.width
+    s, t = np.empty((folds, 3, level.bins)), np.empty((folds, 2, level.bins))
+    for fold in range(folds):
+        sums = level.folds[fold]
+        response = np.ascontiguousarray(sums[3:6] + level.pilot * sums[0:3])
+        s[fold] = kernel_sums(sums[0:3], shape, h, 3, squared=False)
+        t[fold] = kernel_sums(response, shape, h, 2, squared=False)
+    s, t = others(s), others(t)
+    out = {name: (np.empty(folds), 0.0) for name in ESTIMATORS}
+    fit, slope = np.empty((6, level.bins)), np.empty(level.bins)
+    coefficients, sums_of_score = np.empty((7, level.bins)), np.empty(4)
+    none, no_leverage = np.empty((6, 0)), np.zeros(level.bins)
+    for fold in range(folds):
+        localfit.fit_bins(s[fold], t[fold], shape.at_zero, empty, least_spread(h), fit)
+        for row, name in ((0, "local-constant"), (3, "local-linear")):
+            localfit.curve_slopes(fit[row], fit[row + 1], h, slope)
+            localfit.score_bins(
+                scored.folds[fold], none, scored.pilot, fit[row], slope, no_leverage, coefficients,
+                sums_of_score,
+            )  # fmt: skip
+            scores, lost = out[name]
+            scores[fold] = sums_of_score[0]
+            out[name] = (scores, lost + float(sums_of_score[3]))
     return out

@@ -200,8 +200,6 @@ def loaded_type(name: str, stored: pa.DataType) -> tuple[str, pa.DataType]:
         return kind, pa.float64()
     if pt.is_float16(plain):
         return kind, pa.float32()
-    if pt.is_string_view(plain):
-        return kind, pa.string()
     return kind, plain
 
 

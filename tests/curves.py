@@ -114,6 +114,7 @@ def build(
 def valley(
     estimator: str, best: float, *, low: float, high: float, depth: float = 0.02,
     floor: float = 100.0, log: bool = False, share: float = 0.1,
+    blocks: bool = False,
 ) -> Trail:  # fmt: skip
     """Return a criterion like floor (1 + depth (4/5 best/h + 1/5 (h/best)^4)), least at `best`.
 
@@ -135,10 +136,21 @@ def valley(
         return np.exp(width) if log else width
 
     return Trail(
-        estimator, shown(grid), values, values * 1.001, logs, rise(grid),
-        np.full(grid.size, share * floor * depth), float(shown(best)), floor * (1.0 + depth),
-        12.0, (float(shown(ends[0])), float(shown(ends[1]))), 1,
-    )  # fmt: skip
+        estimator=estimator,
+        bandwidths=shown(grid),
+        leave_one_out=values,
+        gcv=values * 1.001,
+        aicc=logs,
+        leave_block_out=values * 1.1 if blocks else np.empty(0),
+        excess=rise(grid),
+        excess_std_error=np.full(grid.size, share * floor * depth),
+        bandwidth=float(shown(best)),
+        leave_one_out_bandwidth=float(shown(best)),
+        score=floor * (1.0 + depth),
+        trace=12.0,
+        flat_zone=(float(shown(ends[0])), float(shown(ends[1]))),
+        minima=1,
+    )
 
 
 def cooling(x: np.ndarray, noise: float = 6.0, seed: int = 3) -> np.ndarray:

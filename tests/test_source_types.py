@@ -73,9 +73,9 @@ def test_statistics_of_typed_columns_give_the_range(tmp_path):
 def test_integers_beyond_2_to_the_53_are_refused(value, as_dictionary):
     column = pa.array([1, value, None])
     column = column.dictionary_encode() if as_dictionary else column
-    with open_source(pa.table({"x": [1, 2, 3], "y": column}), XY) as source:
-        with pytest.raises(InputError) as caught:
-            gather(source)
+    table = pa.table({"x": [1, 2, 3], "y": column})
+    with open_source(table, XY) as source, pytest.raises(InputError) as caught:
+        gather(source)
     assert str(caught.value) == (
         "--y must hold integers of at most 2^53 (9007199254740992), which a float64 keeps "
         f"exactly, but 'y' has {value}; subtract an offset from the column, or divide it, first."
@@ -190,10 +190,13 @@ def test_times_become_seconds_since_the_first_day(tmp_path, unit, zone, place):
     )
     assert got.x.tolist() == [late, early]
     assert got.refused == {"x null": 1}
+    # Parquet has no unit of seconds.
+    unit = "ms" if (unit, place) == ("s", "file") else unit
     assert (axis.kind, axis.unit, axis.zone) == ("timestamp", unit, zone)
-    assert axis.arrow_type == str(column.type)
-    assert axis.to_arrow(got.x).to_pylist() == column.drop_null().to_pylist()
-    assert axis.to_arrow(got.x).type == column.type
+    assert axis.arrow_type == str(pa.timestamp(unit, zone))
+    back = axis.to_arrow(got.x)
+    assert back.type == pa.timestamp(unit, zone)
+    assert back.to_pylist() == column.drop_null().to_pylist()
     assert source.x_range == ((early, late) if place == "file" else None)
     assert Axis.from_dict(json.loads(json.dumps(axis.to_dict()))) == axis
 
@@ -277,9 +280,13 @@ def test_times_that_the_finest_unit_cannot_hold_are_refused(tmp_path):
 
 def test_times_too_far_apart_are_refused():
     column = pa.array([-(2**63) + 1, 2**63 - 1]).cast(pa.timestamp("ns"))
-    with open_source(pa.table({"x": column, "y": [1, 1]}), XY) as source:
-        with pytest.raises(InputError, match="lie within 64-bit counts of each other"):
-            gather(source)
+    table = pa.table({"x": column, "y": [1, 1]})
+    with open_source(table, XY) as source, pytest.raises(InputError) as caught:
+        gather(source)
+    assert str(caught.value) == (
+        "--x must hold times that lie within 64-bit counts of each other, but 'x' spans more; "
+        "filter the far ones away with --where."
+    )
 
 
 ZONED = Axis("timestamp", "timestamp[us, tz=Europe/Madrid]", "us", "Europe/Madrid", 0)
@@ -324,7 +331,7 @@ def test_values_from_the_user(axis, value, wanted):
 @pytest.mark.parametrize(
     ("axis", "value", "sentence"),
     [
-        (NUMBER, "warm", "be a finite number, but 'warm' was given; write a number"),
+        (NUMBER, "warm", "be a number, but 'warm' was given; write a number"),
         (NUMBER, "nan", "be a finite number, but 'nan' was given; write a number"),
         (NUMBER, True, "be a finite number, but True was given; write a number"),
         (
@@ -342,8 +349,7 @@ def test_values_from_the_user(axis, value, wanted):
         (
             SPELLS,
             "2 weeks",
-            "be a finite number, but '2 weeks' was given; write seconds, or a width such as "
-            "'2 h 10 min'",
+            "be a number, but '2 weeks' was given; write seconds, or a width such as '2 h 10 min'",
         ),
     ],
     ids=str,

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import itertools
+import math
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -12,6 +14,8 @@ from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties
 from numpy.typing import NDArray
 
+# A text closer than this to what it names needs no tie.
+_CLOSE_IN = 0.13
 # After a separator a long name may be broken.
 _BREAKS = re.compile(r"(?<=[_\-./])")
 
@@ -35,6 +39,12 @@ class Box(NamedTuple):
         """Return the box with a margin on all sides."""
         return Box(self.left - by, self.bottom - by, self.right + by, self.top + by)
 
+    def holds(self, points: NDArray[np.float64]) -> int:
+        """Count the points, (n, 2), inside the box."""
+        x, y = points[:, 0], points[:, 1]
+        inside = (x > self.left) & (x < self.right) & (y > self.bottom) & (y < self.top)
+        return int(np.count_nonzero(inside))
+
     def within(self, other: Box) -> bool:
         """Whether the box lies in another."""
         return (
@@ -44,15 +54,10 @@ class Box(NamedTuple):
 
 
 class Ruler:
-    """Measures text as the picture will draw it.
-
-    Parameters
-    ----------
-    figure : Figure
-        Its resolution counts, because glyphs are fitted to pixels.
-    """
+    """Measures text as the picture will draw it."""
 
     def __init__(self, figure: Figure) -> None:
+        """Measure for a figure: its resolution counts, because glyphs are fitted to pixels."""
         self._dpi = figure.dpi
         self._renderer = FigureCanvasAgg(figure).get_renderer()
 
@@ -127,11 +132,48 @@ class Ruler:
 
 
 class Spot(NamedTuple):
-    """Where a label may stand: its lower left corner in inches, and how welcome it is there."""
+    """Where a label may stand: its lower left corner in inches, and what that costs."""
 
     left: float
     bottom: float
     cost: float
+
+
+class Label(NamedTuple):
+    """A text to be placed.
+
+    Attributes
+    ----------
+    width, height : float
+        Inches.
+    anchor : (float, float) or None
+        What it names; a label far from it is tied to it by a line.
+    spots : list of Spot
+        Where it may stand.
+    """
+
+    width: float
+    height: float
+    anchor: tuple[float, float] | None
+    spots: list[Spot]
+
+    def box(self, spot: Spot) -> Box:
+        """Return the room that the text takes at a spot."""
+        return Box(spot.left, spot.bottom, spot.left + self.width, spot.bottom + self.height)
+
+    def tie(self, spot: Spot) -> NDArray[np.float64] | None:
+        """Return the ends of the line to the anchor, (2, 2); None where the text is close by."""
+        if self.anchor is None:
+            return None
+        x, y = self.anchor
+        box = self.box(spot)
+        near = (min(max(x, box.left), box.right), min(max(y, box.bottom), box.top))
+        if np.hypot(near[0] - x, near[1] - y) <= _CLOSE_IN:
+            return None
+        # Towards a letter, not a corner.
+        inset = min(0.15, 0.5 * self.width)
+        start = min(max(x, box.left + inset), box.right - inset)
+        return np.array([[start, near[1]], [x, y]])
 
 
 def around(x: float, y: float, width: float, height: float) -> list[Spot]:
@@ -142,54 +184,92 @@ def around(x: float, y: float, width: float, height: float) -> list[Spot]:
             spots.append(Spot(x - shift * width, y + rise, cost + 0.5 * step))
     for left in (x + 0.1, x - 0.1 - width):
         spots.append(Spot(left, y - 0.5 * height, 0.2))
-        spots.append(Spot(left, y - height - 0.06, 0.5))
-    spots.append(Spot(x - 0.5 * width, y - height - 0.1, 0.6))
     return spots
 
 
-def best_spot(
-    spots: Iterable[Spot],
-    size: tuple[float, float],
+def scattered(room: Box, width: float, height: float) -> list[Spot]:
+    """Return spots all over a room, from its top down."""
+    lefts = np.linspace(room.left, max(room.right - width, room.left), 12).tolist()
+    rows = int((room.top - room.bottom) / height)
+    return [
+        Spot(left, room.top - (row + 1) * height, 0.2 * row)
+        for row in range(rows)
+        for left in lefts
+    ]
+
+
+def place_labels(
+    labels: Sequence[Label],
     room: Box,
     taken: Sequence[Box],
     lines: Sequence[NDArray[np.float64]],
-) -> Spot:
-    """Choose the spot that covers least.
+) -> list[Spot]:
+    """Choose spots that together cover least.
 
     Parameters
     ----------
-    spots : iterable of Spot
-        Candidates.
-    size : (float, float)
-        Width and height of the label, inches.
+    labels : sequence of Label
+        Two or three at most: all combinations may be looked at.
     room : Box
-        The label should lie within.
+        The labels should lie within.
     taken : sequence of Box
-        Other labels.
+        What is there already.
     lines : sequence of (n, 2) float64
         Points along drawn lines, inches, closely spaced.
 
     Returns
     -------
-    Spot
-        The best, moved into the room sideways where needed.
+    list of Spot
+        One per label, moved into the room sideways where needed.
     """
-    width, height = size
+    choices = []
+    for label in labels:
+        judged = [_judge(label, spot, room, taken, lines) for spot in label.spots]
+        choices.append(sorted(judged, key=lambda spot: spot.cost))
+    best, least = [judged[0] for judged in choices], math.inf
+    combinations = itertools.product(*choices)
+    for chosen in sorted(combinations, key=lambda spots: sum(spot.cost for spot in spots)):
+        alone = sum(spot.cost for spot in chosen)
+        if alone >= least:
+            break  # conflicts only add to it
+        total = alone + _conflicts(labels, chosen)
+        if total < least:
+            best, least = list(chosen), total
+    return best
 
-    def judged(spot: Spot) -> tuple[float, Spot]:
-        left = min(max(spot.left, room.left), max(room.right - width, room.left))
-        moved = Spot(left, spot.bottom, spot.cost + 2.0 * abs(left - spot.left))
-        box = Box(left, spot.bottom, left + width, spot.bottom + height).grown(0.02)
-        cost = moved.cost
-        cost += 100.0 * sum(box.meets(other) for other in taken)
-        cost += 0.0 if box.within(room.grown(0.03)) else 50.0
-        for line in lines:
-            inside = (line[:, 0] > box.left) & (line[:, 0] < box.right)
-            inside &= (line[:, 1] > box.bottom) & (line[:, 1] < box.top)
-            cost += 3.0 * bool(inside.any()) + 0.02 * float(np.count_nonzero(inside))
-        return cost, moved
 
-    return min((judged(spot) for spot in spots), key=lambda pair: pair[0])[1]
+def _judge(
+    label: Label,
+    spot: Spot,
+    room: Box,
+    taken: Sequence[Box],
+    lines: Sequence[NDArray[np.float64]],
+) -> Spot:
+    left = min(max(spot.left, room.left), max(room.right - label.width, room.left))
+    cost = spot.cost + 2.0 * abs(left - spot.left)
+    moved = Spot(left, spot.bottom, cost)
+    box = label.box(moved).grown(0.02)
+    cost += 100.0 * sum(box.meets(other) for other in taken)
+    cost += 0.0 if box.within(room.grown(0.03)) else 50.0
+    for line in lines:
+        covered = box.holds(line)
+        cost += 5.0 * bool(covered) + 0.02 * covered
+    return moved._replace(cost=cost)
+
+
+def _conflicts(labels: Sequence[Label], spots: Sequence[Spot]) -> float:
+    """The cost of texts over each other, and of ties through texts."""
+    cost = 0.0
+    boxes = [label.box(spot).grown(0.02) for label, spot in zip(labels, spots, strict=True)]
+    for place, (label, spot) in enumerate(zip(labels, spots, strict=True)):
+        tie = label.tie(spot)
+        along = None if tie is None else dense(tie)
+        for other, box in enumerate(boxes):
+            if other == place:
+                continue
+            cost += 50.0 * boxes[place].meets(box)
+            cost += 0.0 if along is None else 20.0 * bool(box.holds(along))
+    return cost
 
 
 def dense(points: NDArray[np.float64], step: float = 0.02) -> NDArray[np.float64]:
@@ -203,7 +283,7 @@ def dense(points: NDArray[np.float64], step: float = 0.02) -> NDArray[np.float64
         Spacing, same unit.
     """
     out = [points[np.isfinite(points).all(axis=1)]]
-    for start, stop in zip(points[:-1], points[1:], strict=True):
+    for start, stop in itertools.pairwise(points):
         length = float(np.hypot(*(stop - start)))
         if np.isfinite(length) and length > step:
             # A line that leaves the picture far away needs no point for every inch of its way.

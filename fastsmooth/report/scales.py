@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+import itertools
 import math
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
-from datetime import UTC, timedelta, timezone, tzinfo
+from datetime import UTC, datetime, timedelta, timezone, tzinfo
 from typing import NamedTuple
 from zoneinfo import ZoneInfo
 
 import numpy as np
-from matplotlib.dates import AutoDateLocator, ConciseDateFormatter, num2date
+from matplotlib.dates import AutoDateLocator, num2date
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
@@ -18,6 +19,8 @@ from fastsmooth.axis import SECONDS_PER_DAY, TICKS_PER_SECOND, WIDTH_UNITS, Axis
 
 Floats = NDArray[np.float64]
 
+_MINUS = "\N{MINUS SIGN}"
+_MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 _STEPS = [1, 2, 2.5, 5, 10]
 _MOST_TICKS = 8
@@ -119,7 +122,7 @@ def short_number(value: float) -> str:
     else:
         mantissa, exponent = f"{value:.2e}".split("e")
         text = f"{float(mantissa):g}e{int(exponent)}"
-    return text.replace("-", "−")
+    return text.replace("-", _MINUS)
 
 
 def short_count(rows: float) -> str:
@@ -161,11 +164,12 @@ def number_ticks(low: float, high: float, most: int = 6) -> Ticks:
     for place in places:
         # Adding zero turns a negative zero into zero.
         value = round((place - offset) / 10.0**power, decimals) + 0.0
-        texts.append(f"{value:,.{decimals}f}".replace("-", "−"))
-    notes = [f"above {short_number(offset) if offset % 1 else f'{offset:,.0f}'}"] if offset else []
-    if power:
-        notes.insert(0, f"in 10{str(power).translate(_SUPERSCRIPT)}")
-    return Ticks(places, texts, ", ".join(notes).replace("above -", "above −"))
+        texts.append(f"{value:,.{decimals}f}".replace("-", _MINUS))
+    notes = [f"in 10{str(power).translate(_SUPERSCRIPT)}"] if power else []
+    if offset:
+        whole = f"{offset:,.0f}" if offset % 1.0 == 0.0 and abs(offset) < 1e15 else f"{offset:.12g}"
+        notes.append(f"above {whole.replace('-', _MINUS)}")
+    return Ticks(places, texts, ", ".join(notes))
 
 
 def log_ticks(low: float, high: float, track: Track) -> Ticks:
@@ -189,9 +193,7 @@ def log_ticks(low: float, high: float, track: Track) -> Ticks:
     return Ticks(chosen, [short_number(value) for value in chosen], "")
 
 
-def width_ticks(
-    low: float, high: float, axis: Axis, log: bool, track: Track
-) -> Ticks:
+def width_ticks(low: float, high: float, axis: Axis, log: bool, track: Track) -> Ticks:
     """Return ticks of a logarithmic axis of bandwidths.
 
     Parameters
@@ -300,23 +302,46 @@ def _calendar(
 ) -> Shown:
     zone = _zone(axis.zone)
     first, last = num2date(days, tz=zone)
-    texts: Sequence[str] = []
     for most in range(_MOST_TICKS, 2, -1):
         locator = AutoDateLocator(tz=zone, minticks=2, maxticks=most)
         places = [float(one) for one in locator.tick_values(first, last)]
         places = [one for one in places if days[0] <= one <= days[1]]
-        writer = ConciseDateFormatter(
-            locator,
-            tz=zone,
-            zero_formats=["", "%Y", "%b", "%d %b", "%H:%M", "%H:%M"],
-            offset_formats=["", "%Y", "%b %Y", "%d %b %Y", "%d %b %Y", "%d %b %Y %H:%M"],
-        )
-        texts = writer.format_ticks(places)
-        ticks = Ticks(places, list(texts), writer.get_offset())
+        moments = num2date(places, tz=zone)
+        ticks = Ticks(places, *_moment_texts(moments, (first, last)))
         if _fits(ticks, (float(days[0]), float(days[1])), length_in, measure):
             break
     unit = axis.zone or ""
     return Shown(lambda x: _days(axis, x), ticks, named(name, unit, ticks.note))
+
+
+def _moment_texts(
+    moments: list[datetime], ends: tuple[datetime, datetime]
+) -> tuple[list[str], str]:
+    """What changes between ticks goes into their texts, what does not into the note."""
+    steps = [(b - a).total_seconds() for a, b in itertools.pairwise(moments)]
+    step = min(steps, default=0.0)
+    day = float(SECONDS_PER_DAY)
+    if step > 360 * day:
+        return [str(moment.year) for moment in moments], ""
+    if step > 27 * day:
+        texts = [_MONTHS[moment.month - 1] for moment in moments]
+        for place, moment in enumerate(moments):
+            if place == 0 or moment.year != moments[place - 1].year:
+                texts[place] += f" {moment.year}"
+        return texts, ""
+    # An hour's difference may come from summer time.
+    if step > day - 2 * 3600:
+        years = sorted({end.year for end in ends})
+        texts = [f"{moment.day} {_MONTHS[moment.month - 1]}" for moment in moments]
+        return texts, " to ".join(map(str, years))
+    texts = []
+    for moment in moments:
+        text = f"{moment:%H:%M}" if step >= 60.0 else f"{moment:%H:%M:%S}"
+        if ends[0].date() != ends[1].date() and moment.hour == moment.minute == moment.second == 0:
+            text = f"{moment.day} {_MONTHS[moment.month - 1]}"
+        texts.append(text)
+    dates = dict.fromkeys(f"{end.day} {_MONTHS[end.month - 1]} {end.year}" for end in ends)
+    return texts, " to ".join(dates)
 
 
 def _zone(name: str | None) -> tzinfo:

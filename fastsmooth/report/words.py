@@ -9,14 +9,11 @@ import numpy as np
 from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve
 from fastsmooth.report.scales import named
 
+HOW_TO_READ_CRITERIA = (
+    "Lower is better. Bars: the flat zone, within one standard error of the best."
+)
 NOT_A_LIMIT = "A mean curve is not a protection limit."
 MOST_CAUTIONS = 3
-ERRORS = {
-    "leave-one-out": "leave-one-out error",
-    "gcv": "generalised cross-validation",
-    "aicc": "corrected information criterion (AICc)",
-    "plug-in": "leave-one-out error",
-}
 
 
 def title(curve: Curve) -> str:
@@ -31,6 +28,13 @@ def width_text(curve: Curve, width: float) -> str:
     unit = curve.settings["x_unit"]
     plain = curve.scale == "linear" and curve.axis.kind == "number"
     return f"{text} {unit}" if plain and unit else text
+
+
+def range_text(curve: Curve, low: float, high: float) -> str:
+    """Write an interval of bandwidths, what both ends share only once."""
+    if curve.scale == "log":
+        return f"factor {low:.4g} to {high:.4g}"
+    return f"{curve.width_label(low)} to {width_text(curve, high)}"
 
 
 def subtitle(curve: Curve) -> str:
@@ -49,25 +53,50 @@ def subtitle(curve: Curve) -> str:
         chosen = "as given"
         if trail is not None:
             chosen += f" ({criterion} would choose {width_text(curve, trail.bandwidth)})"
-    sentence = (
-        f"The line is the mean from {taken}: {told['estimator']}, {told['kernel']} kernel, "
-        f"bandwidth {width}, {chosen}."
-    )
+    fit = f"{told['estimator']}, {told['kernel']} kernel, bandwidth {width}, {chosen}."
+    if not np.isfinite(curve.estimate).any():
+        return f"There is no line: no point has rows near enough. {taken}, {fit}"
+    sentence = f"The line is the mean from {taken}: {fit}"
     if not np.isfinite(curve.lower).any():
         return f"{sentence} No band could be computed."
     covers = "mean" if told["bias"] == "corrected" else "smoothed mean, its bias ignored"
     # 99.9 percent must not become 100.
-    return f"{sentence} Around it the pointwise {100.0 * told['level']:.6g} % band for the {covers}."
+    return (
+        f"{sentence} Around it the pointwise {100.0 * told['level']:.6g} % band for the {covers}."
+    )
 
 
-def reading_notes(curve: Curve) -> str:
-    """Explain the line styles that occur."""
+def criterion(curve: Curve) -> tuple[str, str]:
+    """Return the name and the unit of what the lower panel shows."""
+    unit = curve.settings["y_unit"]
+    squared = f"{unit}²" if unit else ""
+    if curve.search.criterion == "gcv":
+        return "generalised cross-validation", squared
+    if curve.search.criterion == "aicc":
+        return "corrected information criterion (AICc)", ""
+    if curve.search.criterion == "leave-block-out":
+        return "leave-block-out error", squared
+    return "leave-one-out error", squared
+
+
+def width_axis(curve: Curve) -> str:
+    """Return the name of the bandwidth axis."""
+    if curve.scale == "log":
+        return "bandwidth (factor)"
+    unit = curve.settings["x_unit"] if curve.axis.kind == "number" else ""
+    return named("bandwidth", unit)
+
+
+def reading_notes(curve: Curve, coarse_cells: bool) -> str:
+    """Explain the line styles that occur, and the lack of cells."""
     notes = []
     if (curve.status == EDGE).any():
         notes.append("Dotted (edge): the window is cut off by the end of the data.")
     if (curve.status == THIN).any():
         least = curve.settings["least_rows"]
         notes.append(f"Dashed (thin): fewer than {least:g} effective rows.")
+    if coarse_cells:
+        notes.append("Rows are not shown: far values of y make their cells too coarse.")
     if (curve.status == OUTSIDE).any():
         notes.append("No line (outside): no rows near enough on both sides.")
     return " ".join(notes)
@@ -84,12 +113,11 @@ def first_sentence(text: str) -> str:
     return re.split(r"(?<=[.!?])\s+(?=\S)", text.strip(), maxsplit=1)[0]
 
 
-def cautions(curve: Curve) -> tuple[str, list[str]]:
-    """Return a heading with the number of cautions, and the first sentences of some."""
+def cautions(curve: Curve) -> tuple[str, list[str], str]:
+    """Return a heading with the number of cautions, the first ones in short, and how many more."""
     count = len(curve.cautions)
     if not count:
-        return "", []
+        return "", [], ""
     sentences = [first_sentence(caution.text) for caution in curve.cautions[:MOST_CAUTIONS]]
-    if count > MOST_CAUTIONS:
-        sentences.append(f"and {count - MOST_CAUTIONS} more")
-    return f"{count} caution{'s' if count > 1 else ''}", sentences
+    rest = f"and {count - MOST_CAUTIONS} more" if count > MOST_CAUTIONS else ""
+    return f"{count} caution{'s' if count > 1 else ''}", sentences, rest

@@ -52,8 +52,10 @@ def window(x, here, reach):
 
 
 def second_derivative(x, y, w, kernel, support, g, here):
-    """Second derivative of a local cubic at one place."""
+    """Second derivative of a local cubic at one place; NaN in windows of fewer than four places."""
     rows = window(x, here, support * g)
+    if len(np.unique(x[rows])) < 4:
+        return np.nan
     u = (x[rows] - here) / g
     k = w[rows] * kernel(u)
     design = np.array([u**0, u, u**2, u**3])
@@ -66,6 +68,8 @@ def line_weights(x, w, kernel, support, h, i):
     rows = window(x, x[i], support * h)
     u = (x[rows] - x[i]) / h
     k = w[rows] * kernel(u)
+    if not u.any():
+        return rows, k / k.sum()
     s0, s1, s2 = k.sum(), (k * u).sum(), (k * u**2).sum()
     return rows, k * (s2 - s1 * u) / (s0 * s2 - s1**2)
 
@@ -104,7 +108,8 @@ def plug_in(x, y, name, w=None, every=1):
     c2 = c2_negative if theta24 < 0 else c2_positive
     g = c2 * (variance * width / (abs(theta24) * total)) ** (1 / 7)
     taken = np.flatnonzero(inner)[::every]
-    curvature = [second_derivative(x, y, w, kernel, support, g, x[i]) for i in taken]
+    curvature = np.array([second_derivative(x, y, w, kernel, support, g, x[i]) for i in taken])
+    curvature = np.where(np.isnan(curvature), second[taken], curvature)
     theta22_local = np.average(np.square(curvature), weights=w[taken]) * w[inner].sum() / total
 
     lam = c3 * (variance**2 * width / (theta22 * total) ** 2) ** (1 / 9)

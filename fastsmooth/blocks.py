@@ -1,0 +1,254 @@
+"""Blocks: rows that belong together, and the fold that each block goes to.
+
+Rows of one block (a day, a batch) may depend on each other; blocks are taken as independent. Every
+row of a block goes to the same fold, whichever file it stands in, so "all but one fold" leaves out
+whole blocks.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.errors import InputError
+from fastsmooth.near import advise
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+UNITS = ("hour", "day", "week", "month")
+# More keys than this are counted no further; so many blocks need no counting.
+_MOST_KEYS = 100_000
+_SECONDS = {"s": 1, "ms": 1_000, "us": 1_000_000, "ns": 1_000_000_000}
+_MASK = (1 << 64) - 1
+
+
+@dataclass(frozen=True)
+class Block:
+    """What makes rows belong together.
+
+    Parameters
+    ----------
+    column : str
+        A column of any type; its distinct values are the blocks.
+    unit : str or None
+        For a time column: ``hour``, ``day``, ``week`` (from Monday) or ``month``.
+    zone : str or None
+        Time zone in which units begin; None means the column's own (UTC if it has none).
+    key : callable or None
+        Takes the column as an Arrow array and returns an array of keys to use in its place.
+
+    Examples
+    --------
+    >>> Block.parse("logged_at:day@Europe/Madrid")
+    Block(column='logged_at', unit='day', zone='Europe/Madrid', key=None)
+    """
+
+    column: str
+    unit: str | None = None
+    zone: str | None = None
+    key: Callable[[Any], Any] | None = None
+
+    def __post_init__(self) -> None:
+        if self.unit is not None and self.unit not in UNITS:
+            raise InputError(
+                "--block", "name a column, or a time column with a unit as in logged_at:day",
+                f"'{self.unit}' is no unit", advise(self.unit, UNITS),
+            )  # fmt: skip
+        if self.zone is not None:
+            import zoneinfo
+
+            try:
+                zoneinfo.ZoneInfo(self.zone)
+            except (zoneinfo.ZoneInfoNotFoundError, ValueError):
+                raise InputError(
+                    "--block", "name a known time zone after @", f"'{self.zone}' is none",
+                    "write it as in Europe/Madrid",
+                ) from None  # fmt: skip
+
+    @classmethod
+    def parse(cls, text: str) -> Block:
+        """Read ``COLUMN``, ``COLUMN:unit`` or ``COLUMN:unit@zone``."""
+        column, colon, rest = text.rpartition(":")
+        if not colon or not column:
+            return cls(text)
+        unit, _, zone = rest.partition("@")
+        return cls(column, unit, zone or None)
+
+    def __str__(self) -> str:
+        text = self.column
+        if self.unit:
+            text += f":{self.unit}"
+        if self.zone:
+            text += f"@{self.zone}"
+        if self.key is not None:
+            text += f" by {getattr(self.key, '__name__', 'a function')}"
+        return text
+
+
+class Dealer:
+    """Deals blocks to folds.
+
+    Parameters
+    ----------
+    block : Block
+        What makes rows belong together.
+    folds : int
+        Number of folds.
+    """
+
+    def __init__(self, block: Block, folds: int) -> None:
+        self.block = block
+        self.folds = folds
+
+    def deal(self, column: pa.Array) -> tuple[NDArray[np.int64], set[Any]]:
+        """Return the fold of every row (-1 where the block is null), and the keys met.
+
+        Parameters
+        ----------
+        column : pyarrow.Array
+            The block column.
+
+        Raises
+        ------
+        InputError
+            A unit was given for a column that holds no times.
+        """
+        if self.block.key is not None:
+            column = self.block.key(column)
+        if self.block.unit is not None:
+            return self._deal_times(column)
+        return self._deal_values(column)
+
+    def _deal_values(self, column: pa.Array) -> tuple[NDArray[np.int64], set[Any]]:
+        import pyarrow as pa
+        import pyarrow.compute as pc
+
+        coded = column if pa.types.is_dictionary(column.type) else pc.dictionary_encode(column)
+        values = coded.dictionary.to_pylist()
+        folds = np.array([fold_of_key(value, self.folds) for value in values] + [-1], np.int64)
+        codes = pc.fill_null(coded.indices.cast(pa.int64()), len(values)).to_numpy()
+        used = np.unique(codes)
+        keys = {values[code] for code in used.tolist() if code < len(values)}
+        return folds[codes], keys
+
+    def _deal_times(self, column: pa.Array) -> tuple[NDArray[np.int64], set[Any]]:
+        import pyarrow as pa
+
+        kind = column.type
+        if pa.types.is_date(kind):
+            column = column.cast(pa.timestamp("ms" if pa.types.is_date64(kind) else "s"))
+            kind = column.type
+        if not pa.types.is_timestamp(kind):
+            raise InputError(
+                "--block", "name a time column when a unit is given",
+                f"'{self.block.column}' holds {kind}", f"write --block {self.block.column}",
+            )  # fmt: skip
+        valid = None
+        if column.null_count:
+            valid = column.is_valid().to_numpy(zero_copy_only=False)
+            if not valid.any():
+                return np.full(len(column), -1, np.int64), set()
+            column = column.fill_null(column.drop_null()[0])
+        ticks = column.cast(pa.int64()).to_numpy()
+        if not ticks.size:
+            return np.empty(0, np.int64), set()
+        starts, keys = _unit_starts(
+            int(ticks.min()), int(ticks.max()), kind.unit, self.block.unit or "day",
+            self.block.zone or kind.tz or "UTC", kind.tz is not None,
+        )  # fmt: skip
+        of_key = np.array([fold_of_number(key, self.folds) for key in keys.tolist()], np.int64)
+        if starts.size == 1:
+            folds = np.full(ticks.size, of_key[0])
+            met = set(keys.tolist())
+        else:
+            # Logs are in time order more often than not; then a few cuts do for all rows.
+            if bool((ticks[1:] >= ticks[:-1]).all()):
+                cuts = np.searchsorted(ticks, starts[1:])
+                lengths = np.diff(np.concatenate(([0], cuts, [ticks.size])))
+                folds = np.repeat(of_key, lengths)
+                met = set(keys[lengths > 0].tolist())
+            else:
+                place = np.searchsorted(starts, ticks, side="right") - 1
+                folds = of_key[place]
+                met = set(keys[np.unique(place)].tolist())
+        if valid is not None:
+            folds = np.where(valid, folds, -1)
+        return folds, met
+
+
+def merge_keys(mine: set[Any], other: set[Any]) -> set[Any]:
+    """Return the union of two sets of block keys, counted up to a limit."""
+    return mine if len(mine) >= _MOST_KEYS else mine | other
+
+
+def _unit_starts(
+    low: int, high: int, tick: str, unit: str, zone: str, zoned: bool
+) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Starts of all units that touch [low, high], in ticks, and the number of each unit."""
+    per_second = _SECONDS[tick]
+    margin = 2 * 86_400
+    seconds = np.array([low // per_second - margin, high // per_second + margin])
+    code = {"hour": "h", "day": "D", "week": "D", "month": "M"}[unit]
+    ends = seconds.astype("datetime64[s]").astype(f"datetime64[{code}]")
+    locals_ = np.arange(ends[0], ends[1] + 1)
+    numbers = locals_.astype(np.int64)
+    if unit == "week":
+        # 1970-01-01 was a Thursday: day numbers of Mondays leave 4 when divided by 7.
+        mondays = numbers % 7 == 4
+        locals_, numbers = locals_[mondays], numbers[mondays] // 7
+    starts = locals_.astype("datetime64[s]").astype(np.int64)
+    # Hours are absolute; days, weeks and months begin at local midnight.
+    if zoned and unit != "hour":
+        import pyarrow as pa
+        import pyarrow.compute as pc
+
+        plain = pa.array(starts).cast(pa.timestamp("s"))
+        moved = pc.assume_timezone(plain, zone, ambiguous="earliest", nonexistent="latest")
+        starts = moved.cast(pa.int64()).to_numpy()
+    starts = starts * per_second
+    first = int(np.searchsorted(starts, low, side="right")) - 1
+    last = int(np.searchsorted(starts, high, side="right")) - 1
+    return starts[first : last + 1], numbers[first : last + 1]
+
+
+def fold_of_key(key: Any, folds: int) -> int:
+    """Return the fold of a block named by a value: the same in every file, run and version."""
+    if key is None:
+        return -1
+    if isinstance(key, int) and not isinstance(key, bool):
+        return fold_of_number(key, folds)
+    digest = hashlib.blake2b(str(key).encode(), digest_size=8).digest()
+    return int.from_bytes(digest, "little") % folds
+
+
+def fold_of_number(number: int, folds: int) -> int:
+    """Return the fold of a numbered block.
+
+    Every `folds` consecutive numbers are dealt to all folds, in an order of their own: folds stay
+    of equal size, and none follows a cycle in the numbers (weekdays, shifts).
+    """
+    group, place = divmod(number, folds)
+    return _shuffled(group & _MASK, folds)[place]
+
+
+@lru_cache(maxsize=4096)
+def _shuffled(seed: int, n: int) -> tuple[int, ...]:
+    """A fixed shuffle of range(n): Fisher-Yates with SplitMix64 (Steele, Lea & Flood 2014)."""
+    order = list(range(n))
+    state = seed
+    for last in range(n - 1, 0, -1):
+        state = (state + 0x9E3779B97F4A7C15) & _MASK
+        mixed = state
+        mixed = ((mixed ^ (mixed >> 30)) * 0xBF58476D1CE4E5B9) & _MASK
+        mixed = ((mixed ^ (mixed >> 27)) * 0x94D049BB133111EB) & _MASK
+        mixed ^= mixed >> 31
+        other = mixed % (last + 1)
+        order[last], order[other] = order[other], order[last]
+    return tuple(order)
