@@ -25,7 +25,7 @@ _TABLE = (
     "pyramid",
     *(search_name(widths, t) for widths in (48, 64) for t in dict.fromkeys((1, _CORES))),
     "pyramid and search, 64 widths",
-    "curve and band at 256 points",
+    "curve and band",
     "curve read off",
 )
 

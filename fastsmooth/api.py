@@ -12,11 +12,17 @@ from numpy.typing import NDArray
 
 from fastsmooth.bands import Noise, Occupied, Points, estimate_noise, fit_points
 from fastsmooth.bintable import BinTable, Pyramid
-from fastsmooth.cautions import about_curve, about_rows, about_search
+from fastsmooth.cautions import (
+    about_curve,
+    about_rows,
+    about_search,
+    standardised_residuals,
+)
 from fastsmooth.curve import Curve, Density
 from fastsmooth.errors import InputError
 from fastsmooth.passes import Counted, Progress, bins_for, count_finer, count_rows, silent
 from fastsmooth.search import Search, Trail, search_table
+from fastsmooth.serial import serial_facts
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.smoother import Fits, fit_level, least_weight
 from fastsmooth.source import Columns, Source, open_source
@@ -92,8 +98,9 @@ def make_curve(
     smoothing = smoothing or Smoothing()
     band = band or Band()
     _criterion(reading, smoothing)
-    extra = () if reading.block is None else (reading.block.column,)
-    with open_source(data, Columns(x, y, weight, count, extra), where=reading.where) as source:
+    block = None if reading.blocks is None else reading.blocks.column
+    columns = Columns(x, y, weight, count, block=block)
+    with open_source(data, columns, where=reading.where) as source:
         fixed = _own_bandwidth(source, reading, smoothing)
         places = _own_points(source, reading, band)
         counted, pyramid, found, chosen = _count_and_search(
@@ -277,6 +284,7 @@ def _assemble(
     trace = {
         "settings": settings,
         "rows": table.tally.to_dict(),
+        "blocks": len(table.blocks) if plan.block is not None else None,
         "files": [asdict(record) for record in source.files],
         "engine": {k: _finite(v) for k, v in engine.items()},
         "plan": plan.to_dict(),
@@ -289,12 +297,14 @@ def _assemble(
         bandwidth=_in_axis(bandwidth, log), axis=plan.axis, density=density,
         search=_search_in_axis(found, log), cautions=counted.cautions, trace=trace,
     )  # fmt: skip
-    sample = counted.sample
+    sample = counted.sample._replace(x=np.exp(counted.sample.x) if log else counted.sample.x)
+    residuals = standardised_residuals(made, sample)
+    trace["serial"] = serial_facts(residuals, sample, table.tally.used)
     cautions = (
         *counted.cautions,
         *about_rows(table, source),
         *about_search(made),
-        *about_curve(made, sample._replace(x=np.exp(sample.x) if log else sample.x)),
+        *about_curve(made, sample, residuals),
     )
     return replace(made, cautions=cautions)
 
@@ -353,16 +363,19 @@ def _density(counted: Counted, pyramid: Pyramid, log: bool) -> Density:
     # A bin's rows go to the stretch that holds their mean.
     mean = finest.origin + finest.width * (used + 0.5 + finest.first[1, used] / finest.first[0, used])
     rows, _ = np.histogram(np.clip(mean, low, high), edges, weights=finest.count[used])
-    sample = counted.sample
-    inside = (sample.x >= low) & (sample.x <= high)
-    if inside.any():
-        y = sample.y[inside]
+    x, y = counted.shown
+    inside = np.isfinite(x) & np.isfinite(y) & ((x > 0.0) | (not log))
+    x, y = x[inside], y[inside]
+    x = np.log(x) if log else x
+    inside = (x >= low) & (x <= high)
+    x, y = x[inside], y[inside]
+    if y.size:
         bottom, top = (float(q) for q in np.quantile(y, (0.002, 0.998)))
     else:
-        y, bottom, top = np.empty(0), plan.reference, plan.reference
+        bottom = top = plan.reference
     margin = 0.05 * (top - bottom) or max(abs(top), 1.0) * 0.01
     steps = np.linspace(bottom - margin, top + margin, _DENSITY_STEPS + 1)
-    sampled, _, _ = np.histogram2d(sample.x[inside], y, (edges, steps))
+    sampled, _, _ = np.histogram2d(x, y, (edges, steps))
     return Density(np.exp(edges) if log else edges, rows, steps, sampled)
 
 

@@ -127,7 +127,7 @@ def estimate_noise(fits: Fits, estimator: str, shape: Shape, kind: str) -> Noise
 def _squared_residuals(fits: Fits, estimator: str, shape: Shape) -> tuple[Floats, Floats]:
     """Sums of w r^2 and their expectations over sigma^2, per group of folds and bin."""
     level = fits.level
-    value, slope = fits.values[estimator], fits.slopes[estimator]
+    value, slope, _ = fits.chords[estimator]
     v = kernel_sums(level.first[0:3], shape, fits.bandwidth_bins, 3, squared=True)
     s = fits.sums
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -285,7 +285,7 @@ def fit_points(
     columns = [estimate + reference, slope, std_error]
     columns += [centre - half + reference, centre + half + reference, effective, spread]
     out = status == OUTSIDE
-    return Points(*(np.where(out, np.nan, column) for column in columns), status=status)
+    return Points(*(np.where(out, np.nan, column) for column in columns), status)
 
 
 def _all_sums(places: Floats, fits: Fits, noise: Noise, shape: Shape) -> PointSums:

@@ -135,7 +135,7 @@ class BinTable:
             Deals blocks to folds; None deals runs of consecutive rows.
         """
         self.tally.add(Tally(chunk.rows, chunk.filtered, dict(chunk.refused)))
-        arrays = (chunk.x, chunk.y, chunk.weight, chunk.count)
+        x, y, weight, count = chunk.x, chunk.y, chunk.weight, chunk.count
         rows = chunk.x.shape[0]
         if dealer is None:
             plan = self.plan
@@ -152,7 +152,9 @@ class BinTable:
                 # Blocks interleaved row by row: sorted by fold, each fold is one stretch.
                 order = np.argsort(per_row, kind="stable")
                 per_row = per_row[order]
-                arrays = tuple(None if one is None else one[order] for one in arrays)
+                x, y = x[order], y[order]
+                weight = None if weight is None else weight[order]
+                count = None if count is None else count[order]
                 starts = np.concatenate(([0], np.flatnonzero(np.diff(per_row)) + 1))
             folds = per_row[starts] if rows else np.empty(0, np.int64)
         stops = np.append(starts[1:], rows)
@@ -160,8 +162,11 @@ class BinTable:
             if fold < 0:
                 self.tally.refuse("block null", stop - start)
             elif start < stop:
-                x, y, weight, count = (None if one is None else one[start:stop] for one in arrays)
-                self.add_rows(fold, x, y, weight, count, tallied=True)
+                self.add_rows(
+                    fold, x[start:stop], y[start:stop],
+                    None if weight is None else weight[start:stop],
+                    None if count is None else count[start:stop], tallied=True,
+                )  # fmt: skip
 
     def add_rows(
         self,
@@ -361,7 +366,7 @@ class Level:
     @property
     def centres(self) -> Floats:
         """Bin centres on the plan's scale."""
-        return self.origin + self.width * (np.arange(self.bins) + 0.5)
+        return np.asarray(self.origin + self.width * (np.arange(self.bins) + 0.5))
 
     @property
     def squares(self) -> Floats:

@@ -7,6 +7,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
+from fastsmooth.bands import FEWEST_FOLDS
 from fastsmooth.bintable import BinTable
 from fastsmooth.curve import OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
@@ -14,10 +15,10 @@ from fastsmooth.source import Source
 
 _MANY_REFUSED = 0.05
 _MANY_ALIKE = 0.0001
-_MANY_ALONE = 0.001
+# At the narrowest width one row in a hundred may be alone by chance.
+_MANY_ALONE = 0.02
 _HEAVY_FOLD = 0.5
 _CORRELATION_WORTH_TELLING = 0.1
-_PAIRS_ENOUGH = 100
 _FAR_OUT_SD = 10.0
 
 
@@ -33,6 +34,12 @@ def about_rows(table: BinTable, source: Source) -> Iterator[Caution]:
             "many rows refused",
             f"{share:.0%} of the rows could not be used ({counts}). Find out why before you trust "
             f"what is left.",
+        )
+    if table.plan.block is not None and len(table.blocks) < FEWEST_FOLDS:
+        yield Caution(
+            "few blocks",
+            f"There are only {len(table.blocks)} blocks by {table.plan.block}: fewer than "
+            f"{FEWEST_FOLDS} say little about how much blocks differ, so every point is thin.",
         )
     weights = np.array([float(sums[:, 0].sum()) for sums in table.sums.values()])
     if weights.size > 1 and weights.max() > _HEAVY_FOLD * weights.sum():
@@ -92,15 +99,16 @@ def about_search(made: Curve) -> Iterator[Caution]:
         )
 
 
-def about_curve(made: Curve, sample: Sample) -> Iterator[Caution]:
-    """Yield cautions about the curve itself; `sample` has x in axis floats."""
+def about_curve(made: Curve, sample: Sample, residuals: np.ndarray) -> Iterator[Caution]:
+    """Yield cautions about the curve itself; `residuals` are the sample's, standardised."""
     engine = made.trace["engine"]
     if engine["bins_per_bandwidth"] < 0.99 * engine["fewest_bins_per_bandwidth"]:
+        error = engine["error_in_noise_sd"]
+        told = "cannot be told" if error is None else f"is about {error:.1g} residual deviations"
         yield Caution(
             "coarse bins",
             f"The bandwidth spans only {engine['bins_per_bandwidth']:.1f} bins within the memory "
-            f"cap; the curve's binning error is estimated as {engine['error_in_noise_sd']:.1g} "
-            f"residual standard deviations. Narrow --range for finer bins.",
+            f"cap; the curve's binning error {told}. Narrow --range for finer bins.",
         )
     unsupported = np.mean((made.status == THIN) | (made.status == OUTSIDE))
     if unsupported > 0.5:
@@ -108,11 +116,12 @@ def about_curve(made: Curve, sample: Sample) -> Iterator[Caution]:
             "mostly thin",
             f"{unsupported:.0%} of the points have too few rows; the curve says little there.",
         )
-    yield from _about_correlation(made, sample)
-    yield from _about_spikes(made, sample)
+    yield from _about_correlation(made)
+    yield from _about_spikes(made, sample, residuals)
 
 
-def _standardised(made: Curve, sample: Sample) -> np.ndarray:
+def standardised_residuals(made: Curve, sample: Sample) -> np.ndarray:
+    """Return residuals of the sample's rows over the residual spread at their x."""
     spread = made.residual_sd
     known = np.isfinite(spread) & (spread > 0.0)
     if not known.any():
@@ -121,33 +130,25 @@ def _standardised(made: Curve, sample: Sample) -> np.ndarray:
     return (sample.y - made.at(sample.x)) / sd
 
 
-def _about_correlation(made: Curve, sample: Sample) -> Iterator[Caution]:
-    """Lag-one correlation of residuals over neighbouring rows of the sample."""
-    z = np.clip(_standardised(made, sample), -5.0, 5.0)
-    pairs = (sample.run[1:] == sample.run[:-1]) & ~sample.gap[1:]
-    pairs &= np.isfinite(z[1:]) & np.isfinite(z[:-1])
-    if np.count_nonzero(pairs) < _PAIRS_ENOUGH:
+def _about_correlation(made: Curve) -> Iterator[Caution]:
+    """Tell of correlated rows, unless blocks take care of them."""
+    found = made.trace["serial"]
+    if found is None or made.trace["settings"]["block"] is not None:
         return
-    first, second = z[:-1][pairs], z[1:][pairs]
-    variance = 0.5 * float(np.mean(first**2) + np.mean(second**2))
-    if variance <= 0.0:
+    first = found["lag_one"]
+    if first <= max(_CORRELATION_WORTH_TELLING, 3.0 / math.sqrt(found["pairs"])):
         return
-    correlation = min(float(np.mean(first * second)) / variance, 0.9999)
-    if correlation <= max(_CORRELATION_WORTH_TELLING, 3.0 / math.sqrt(first.size)):
-        return
-    worth = (1.0 + correlation) / (1.0 - correlation)
     yield Caution(
         "neighbouring rows alike",
-        f"Residuals of neighbouring rows are correlated ({correlation:.2f} over {first.size} "
-        f"sampled pairs), so about {worth:.3g} rows carry the news of one, the band is too narrow "
-        f"and {made.search.criterion} may choose too narrow a width. Average over time first, or "
-        f"take every so many rows.",
+        f"Residuals of neighbouring rows are correlated ({first:.2f}; it takes "
+        f"{found['reach_rows']} rows to fade), so {made.trace['rows']['used']:,} rows are worth "
+        f"about {found['worth_rows']:,.0f} independent ones: {made.search.criterion} chooses too "
+        f"narrow a width and the band is too narrow. Give --block, as in --block logged_at:day.",
     )
 
 
-def _about_spikes(made: Curve, sample: Sample) -> Iterator[Caution]:
+def _about_spikes(made: Curve, sample: Sample, z: np.ndarray) -> Iterator[Caution]:
     """One far value of y repeated over and over is a code for missing, not a reading."""
-    z = _standardised(made, sample)
     far = np.flatnonzero(np.abs(z) > _FAR_OUT_SD)
     # Far values inflate the residual spread that they are measured by; compare with the bulk too.
     middle = np.median(sample.y) if sample.y.size else 0.0

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from fastsmooth.errors import EXIT_INTERRUPTED, EXIT_OK, EXIT_REFUSED, FastsmoothError
-from fastsmooth.settings import BIASES, CRITERIA, ESTIMATORS, KERNELS, NOISES, SCALES
+from fastsmooth.settings import BANDS, BIASES, CRITERIA, ESTIMATORS, KERNELS, NOISES, SCALES
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -83,20 +83,26 @@ _DATA_OPTIONS = _with(
     click.option("--strict", is_flag=True, help="Refuse the data if any row is unusable."),
     click.option("--threads", type=int, metavar="N", help="Default: all processors."),
     click.option("--folds", type=int, default=32, show_default=True, metavar="N",
-                 help="Parts of the data for standard errors of the criterion."),
+                 help="Parts of the data for standard errors."),
+    click.option("--block", metavar="COLUMN[:UNIT]",
+                 help="Rows that may depend on each other: a column, or a time column with hour, "
+                 "day, week or month, as in logged_at:day."),
 )  # fmt: skip
 _SMOOTHING_OPTIONS = _with(
     _choice("--estimator", ESTIMATORS, "Estimator"),
     _choice("--kernel", KERNELS, "Kernel"),
     click.option("--bandwidth", metavar="WIDTH",
                  help="Your own width in units of x (a factor with --scale log)."),
-    _choice("--criterion", CRITERIA, "What chooses the width"),
+    click.option("--criterion", metavar="WORD", help=(
+        f"What chooses the width: {', '.join(CRITERIA)}. Default: leave-block-out with --block, "
+        "else leave-one-out.")),
     click.option("--widths", type=int, default=48, show_default=True, metavar="N",
                  help="Widths in the search grid."),
 )  # fmt: skip
 _BAND_OPTIONS = _with(
     click.option("--level", type=float, default=0.95, show_default=True, metavar="SHARE",
                  help="Confidence level of the band."),
+    _choice("--band", BANDS, "What the band covers: each point, or the whole curve"),
     _choice("--bias", BIASES, "Bias of the band's centre"),
     _choice("--noise", NOISES, "Residual variance along x"),
     click.option("--least-rows", type=float, default=30.0, show_default=True, metavar="N",
@@ -113,15 +119,16 @@ _VOICE_OPTIONS = _with(
 
 def _reading(
     where: str | None, range_: tuple[str, str] | None, scale: str, strict: bool,
-    threads: int | None, folds: int,
+    threads: int | None, folds: int, block: str | None,
 ) -> Reading:  # fmt: skip
     from fastsmooth.settings import Reading, usable_cores
 
-    return Reading(where, range_, scale, strict, usable_cores() if threads is None else threads, folds)
+    threads = usable_cores() if threads is None else threads
+    return Reading(where, range_, scale, strict, threads, folds, block)
 
 
 def _smoothing(
-    estimator: str, kernel: str, bandwidth: str | None, criterion: str, widths: int
+    estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int
 ) -> Smoothing:
     from fastsmooth.settings import Smoothing
 
@@ -129,12 +136,12 @@ def _smoothing(
 
 
 def _band(
-    level: float, bias: str, noise: str, least_rows: float, points: int, at: str | None
+    level: float, band: str, bias: str, noise: str, least_rows: float, points: int, at: str | None
 ) -> Band:
     from fastsmooth.settings import Band
 
     places = None if at is None else tuple(one.strip() for one in at.split(",") if one.strip())
-    return Band(level, bias, noise, least_rows, points, places)
+    return Band(level, band, bias, noise, least_rows, points, places)
 
 
 def _take(options: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
@@ -146,12 +153,12 @@ def _make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) ->
     from fastsmooth.api import make_curve
 
     reading = _reading(
-        **_take(options, ("where", "range_", "scale", "strict", "threads", "folds"))
+        **_take(options, ("where", "range_", "scale", "strict", "threads", "folds", "block"))
     )
     smoothing = _smoothing(
         **_take(options, ("estimator", "kernel", "bandwidth", "criterion", "widths"))
     )
-    names = ("level", "bias", "noise", "least_rows", "points", "at")
+    names = ("level", "band", "bias", "noise", "least_rows", "points", "at")
     band = _band(**_take(options, names)) if "level" in options else None
     return make_curve(
         data[0] if len(data) == 1 else list(data),

@@ -22,7 +22,9 @@ if TYPE_CHECKING:
 PEEK_ROWS = 65_536
 
 
-def check_present(reader: Reader, roles: Sequence[Role], extra: Sequence[str]) -> None:
+def check_present(
+    reader: Reader, roles: Sequence[Role], extra: Sequence[str], block: str | None
+) -> None:
     """Refuse a column that a file lacks, or has several times.
 
     Parameters
@@ -33,13 +35,17 @@ def check_present(reader: Reader, roles: Sequence[Role], extra: Sequence[str]) -
         Columns and their parts.
     extra : sequence of str
         Further columns.
+    block : str or None
+        The one of them that holds blocks.
 
     Raises
     ------
     InputError
         Names near ones, or the file that lacks the column.
     """
-    wanted = [(role.argument, role.column) for role in roles] + [("DATA", name) for name in extra]
+    wanted = [(role.argument, role.column) for role in roles] + [
+        ("--block" if name == block else "DATA", name) for name in extra
+    ]
     known = list(dict.fromkeys(name for schema in reader.schemas for name in schema.names))
     for argument, column in wanted:
         requirement = "name a column of DATA" if argument != "DATA" else "hold each named column"

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fastsmooth.bintable import BinTable
-from fastsmooth.blocks import Block, Dealer
+from fastsmooth.blocks import Dealer
 from fastsmooth.curve import Caution
 from fastsmooth.errors import InputError
 from fastsmooth.plan import (
@@ -34,6 +35,11 @@ _TRIM_GAIN = 8.0
 _ABSURD_RANGE = 1e4
 _SAMPLE_ENOUGH = 1000
 _MOST_PASSES = 4
+_SHOWN_ROWS = 50_000
+_FEW_GROUPS = 24
+_MANY_GROUPS = 64
+
+Floats = NDArray[np.float64]
 
 Progress = Callable[[str, int, int | None], None]
 
@@ -52,6 +58,8 @@ class Counted:
         Finished.
     sample : Sample
         Some of the rows.
+    shown : (2, n) float64
+        x and y of a thin selection of all rows, for pictures.
     cautions : tuple of Caution
         About range and rows.
     passes : int
@@ -60,43 +68,58 @@ class Counted:
 
     table: BinTable
     sample: Sample
+    shown: Floats
     cautions: tuple[Caution, ...]
     passes: int
 
 
 def count_pass(
     source: Source, plan: Plan, reading: Reading, progress: Progress = silent
-) -> BinTable:
-    """Read all rows once into a table of the plan.
+) -> tuple[BinTable, Floats]:
+    """Read all rows once into a table of the plan; also give a thin selection of rows, (2, n).
 
-    Each task sums into a table of its own; tables are merged in task order, so the result is the
-    same to the last bit for any number of threads.
+    Each task (or fixed group of tasks) sums into a table of its own; tables are merged in a fixed
+    order, so the result is the same to the last bit for any number of threads.
     """
     done = 0
-    dealer = None if reading.block is None else Dealer(_block(reading), plan.folds)
+    dealer = None if reading.blocks is None else Dealer(reading.blocks, plan.folds)
+    stride = max(1, (source.rows_expected or _SHOWN_ROWS * 64) // _SHOWN_ROWS)
 
-    def count(task: Task, chunks: Iterator[Chunk]) -> BinTable:
-        table = BinTable(plan)
-        row = 0
-        for chunk in chunks:
-            table.update(chunk, task.index, row, dealer)
-            row += chunk.x.shape[0]
-        return table
+    def count(parts: Iterator[tuple[Task, Iterator[Chunk]]]) -> tuple[BinTable, Floats]:
+        table, shown = BinTable(plan), []
+        for task, chunks in parts:
+            row = 0
+            for chunk in chunks:
+                table.update(chunk, task.index, row, dealer)
+                row += chunk.x.shape[0]
+                shown.append(np.stack((chunk.x[::stride], chunk.y[::stride])))
+        return table, np.concatenate(shown, axis=1) if shown else np.empty((2, 0))
 
     def report(rows: int) -> None:
         nonlocal done
         done += rows
         progress("reading", done, source.rows_expected)
 
-    total = BinTable(plan)
-    for part in source.map_tasks(count, reading.threads, progress=report):
+    total, shown = BinTable(plan), []
+    groups = _groups(source.tasks, plan)
+    for part, few in source.map_groups(count, groups, reading.threads, progress=report):
         total.merge(part)
-    return total
+        shown.append(few)
+    rows = np.concatenate(shown, axis=1) if shown else np.empty((2, 0))
+    return total, rows[:, :: max(1, rows.shape[1] // (2 * _SHOWN_ROWS))]
 
 
-def _block(reading: Reading) -> Block:
-    assert isinstance(reading.block, Block)  # Reading has parsed any text
-    return reading.block
+def _groups(tasks: Sequence[Task], plan: Plan) -> list[Sequence[Task]]:
+    """Tasks that are summed into one table: their number does not depend on the threads.
+
+    A table with all folds costs as much to merge as some hundred thousand rows to read, so that
+    tasks which meet all folds are summed in a few groups. Every so many tasks form a group: then
+    all groups take equally long where rows differ along the data.
+    """
+    if plan.folds_per_task < plan.folds and plan.block is None:
+        return [(task,) for task in tasks]
+    groups = max(_FEW_GROUPS, min(_MANY_GROUPS, len(tasks) // 8))
+    return [tasks[start::groups] for start in range(min(groups, len(tasks)))]
 
 
 def block_words(reading: Reading) -> str | None:
@@ -127,9 +150,15 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
         plan = make_plan(
             source, sample, bounds, scale=scale, block=block_words(reading), folds=reading.folds
         )
-        table = count_pass(source, plan, reading, progress)
+        table, shown = count_pass(source, plan, reading, progress)
         check_rows(table, source, reading)
-        if reading.range is not None or passes == _MOST_PASSES:
+        if passes == _MOST_PASSES:
+            break
+        if _mostly_empty(table):
+            low, high = table.extent.tolist()
+            bounds = low, high
+            continue
+        if reading.range is not None:
             break
         if trimmed and _rows_outside(table) > _TRIMMED_SHARE * (table.tally.used + _rows_outside(table)):
             # The sample missed too much: give the range back.
@@ -142,24 +171,21 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
     cautions = []
     if trimmed and _rows_outside(table):
         cautions.append(_trim_caution(table, source))
-    return Counted(table, sample, tuple(cautions), passes)
+    return Counted(table, sample, shown, tuple(cautions), passes)
 
 
 def count_finer(
     source: Source, counted: Counted, reading: Reading, bins: int, progress: Progress = silent
 ) -> Counted:
     """Read again with more bins over the range that holds rows."""
-    table = counted.table
-    low, high = table.extent.tolist()
-    plan = table.plan
-    if reading.range is not None or _rows_outside(table):
-        low, high = plan.origin, plan.high
+    plan = counted.table.plan
+    low, high = counted.table.extent.tolist()
     finer = make_plan(
         source, counted.sample, (low, high), scale=plan.scale, block=plan.block, bins=bins,
         folds=plan.folds,
     )  # fmt: skip
-    again = count_pass(source, finer, reading, progress)
-    return replace(counted, table=again, passes=counted.passes + 1)
+    again, shown = count_pass(source, finer, reading, progress)
+    return replace(counted, table=again, shown=shown, passes=counted.passes + 1)
 
 
 def bins_for(table: BinTable, bandwidth: float, bins_per_bandwidth: float, threads: int) -> int:
@@ -197,6 +223,17 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
             f"every row was filtered or refused ({table.tally.filtered} filtered, {counts})",
             "check --where, --range and the columns",
         )  # fmt: skip
+    if not np.isfinite(table.total()).all():
+        raise InputError(
+            "--y", "stay below 1e150 in size", f"squares of '{source.columns.y}' overflow",
+            f"leave such rows out with --where '{source.columns.y} < 1e150'",
+        )  # fmt: skip
+    if reading.block is not None and len(table.sums) < 2:
+        raise InputError(
+            "--block", "tell at least two blocks apart",
+            f"'{reading.block}' is the same in all {table.tally.used} rows",
+            "name a finer block, or leave it out",
+        )  # fmt: skip
     if reading.strict and refused:
         counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
         raise InputError(
@@ -229,6 +266,12 @@ def _plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[floa
 def _rows_outside(table: BinTable) -> int:
     refused = table.tally.refused
     return refused.get("x below range", 0) + refused.get("x above range", 0)
+
+
+def _mostly_empty(table: BinTable) -> bool:
+    """Whether the rows use less than half of the bins' range: a range given, or a filter."""
+    low, high = table.extent.tolist()
+    return bool(0.0 < 2.0 * (high - low) < table.plan.high - table.plan.origin)
 
 
 def _trimmed_bounds(table: BinTable) -> tuple[float, float] | None:

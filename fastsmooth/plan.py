@@ -143,14 +143,14 @@ class Sample(NamedTuple):
         Usable rows, x on the plan's scale.
     run : (rows,) int64
         Which run a row belongs to; rows of a run are in the file's own order.
-    gap : (rows,) bool
-        Whether rows were dropped between this row and the one before it in its run.
+    place : (rows,) int64
+        Place among all rows of the run, the dropped ones counted.
     """
 
     x: Floats
     y: Floats
     run: NDArray[np.int64]
-    gap: NDArray[np.bool_]
+    place: NDArray[np.int64]
 
 
 def bin_width(low: float, high: float, bins: int) -> float:
@@ -184,27 +184,26 @@ def draw_sample(source: Source, scale: str) -> Sample:
     """
     tasks = source.tasks
     if not tasks:
-        return Sample(np.empty(0), np.empty(0), np.empty(0, np.int64), np.empty(0, np.bool_))
+        return Sample(np.empty(0), np.empty(0), np.empty(0, np.int64), np.empty(0, np.int64))
     chosen = np.unique(np.linspace(0, len(tasks) - 1, min(_SAMPLE_TASKS, len(tasks))).astype(int))
     # Few tasks: longer runs of each, so that a single file is sampled as deeply as a fleet.
     rows = _SAMPLE_ROWS * (_SAMPLE_TASKS // chosen.shape[0])
-    xs, ys, runs, gaps = [], [], [], []
+    xs, ys, runs, places = [], [], [], []
     for number, index in enumerate(chosen.tolist()):
         # A chunk may be empty after the filter; a few more are tried.
         for chunk in _first_chunks(source, tasks[index], rows):
             x, y, usable = _on_scale(chunk.x, chunk.y, scale)
             kept = np.flatnonzero(usable)
             if kept.size:
-                whole = chunk.filtered == 0 and not chunk.refused
                 xs.append(x[kept])
                 ys.append(y[kept])
                 runs.append(np.full(kept.size, number))
-                gaps.append(np.diff(kept, prepend=kept[0]) > 1 if whole else np.ones(kept.size, bool))
+                places.append(kept if chunk.positions is None else chunk.positions[kept])
                 break
     if not xs:
-        return Sample(np.empty(0), np.empty(0), np.empty(0, np.int64), np.empty(0, np.bool_))
+        return Sample(np.empty(0), np.empty(0), np.empty(0, np.int64), np.empty(0, np.int64))
     return Sample(
-        np.concatenate(xs), np.concatenate(ys), np.concatenate(runs), np.concatenate(gaps)
+        np.concatenate(xs), np.concatenate(ys), np.concatenate(runs), np.concatenate(places)
     )
 
 
@@ -334,7 +333,7 @@ def make_plan(
     """
     low, high = bounds
     width = bin_width(low, high, bins)
-    if not high > low or not width > 0.0 or not math.isfinite(width) or low + width == low:
+    if not (high > low and 0.0 < width < math.inf and math.isfinite(1.0 / width)):
         raise InputError(
             "--x",
             "name a column that varies",
@@ -366,10 +365,13 @@ def _pilot(sample: Sample, low: float, high: float) -> tuple[float, tuple[float,
     if not sample.x.size:
         return 0.0, (0.0,)
     # Single precision keeps the numbers short, so that subtracting them is exact more often.
-    reference = float(np.float32(np.median(sample.y)))
+    with np.errstate(over="ignore"):
+        reference = float(np.float32(np.median(sample.y)))
     if not math.isfinite(reference):
         reference = 0.0
-    cell = np.clip(((sample.x - low) / (high - low) * _PILOT_NODES).astype(int), 0, _PILOT_NODES - 1)
+    # Clipped as floats: a far outlier of x has no integer cell.
+    cell = np.clip((sample.x - low) / (high - low) * _PILOT_NODES, 0.0, _PILOT_NODES - 1.0)
+    cell = cell.astype(int)
     order = np.argsort(cell, kind="stable")
     ends = np.searchsorted(cell[order], np.arange(_PILOT_NODES + 1))
     medians = np.full(_PILOT_NODES, np.nan)

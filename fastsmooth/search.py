@@ -285,7 +285,9 @@ def search_table(
         Too few distinct x.
     """
     low, high = bounds or _interval(table)
-    grid = np.geomspace(low, high, widths)
+    # Logarithms are of widths in bins: then x times a power of two gives h times it, to the bit.
+    unit = table.plan.width
+    grid = np.geomspace(low / unit, high / unit, widths) * unit
     empty = least_weight(pyramid, shape)
     keep, rows_alone = _voters(pyramid, shape, low, empty)
     scored = pyramid if keep is None else Pyramid(table, keep)
@@ -332,7 +334,7 @@ def _voters(
         mean_weight = np.where(level.first[0] > 0.0, level.first[0] / level.count, 0.0)
     keep = np.ones(level.bins, bool)
     for name in ESTIMATORS:
-        leverage = fits.unit_leverages[name] * mean_weight
+        leverage = fits.chords[name][2] * mean_weight
         # Beyond this, room is a difference of nearly equal binned sums.
         keep &= leverage < 1.0 - 1e-6
     lost = (level.first[0] > 0.0) & ~keep
@@ -399,10 +401,11 @@ class _Job:
         found = left_out_fold_scores(
             self.pyramid.levels[index], scored, self.shape, bandwidth, self.empty
         )
-        shares = scored.folds[:, 0].sum(axis=1) / weight
+        with np.errstate(invalid="ignore", divide="ignore"):
+            shares = scored.folds[:, 0].sum(axis=1) / weight
         points = {}
         for name, (folds, lost) in found.items():
-            value = float(folds.sum()) / weight if lost == 0.0 else math.inf
+            value = float(folds.sum()) / weight if lost == 0.0 and weight > 0.0 else math.inf
             points[name] = _Point(
                 bandwidth, {"leave-block-out": value}, math.nan, folds / weight, shares
             )
@@ -462,13 +465,18 @@ def _trail(
     judged = [point[name] for point in left_out] if judge == "leave-block-out" else mine
     excess = np.array([p.criteria[judge] - best.criteria[judge] for p in judged])
     errors = np.array([_paired_error(p, best) for p in judged])
-    zone = _flat_zone(grid, excess, errors, best.bandwidth)
+    zone = _flat_zone(grid, excess, errors, best.bandwidth, job.pyramid.plan.width)
     at_best = best if judge == "leave-one-out" else job.scores(best.bandwidth)[name]
     shown = np.array([p.criteria[criterion if criterion in p.criteria else judge] for p in judged])
+    by_row_values = {
+        c: np.array([p.criteria[c] for p in mine]) for c in ("leave-one-out", "gcv", "aicc")
+    }
     return Trail(
-        name,
-        grid,
-        *(np.array([p.criteria[c] for p in mine]) for c in ("leave-one-out", "gcv", "aicc")),
+        estimator=name,
+        bandwidths=grid,
+        leave_one_out=by_row_values["leave-one-out"],
+        gcv=by_row_values["gcv"],
+        aicc=by_row_values["aicc"],
         leave_block_out=np.array([p[name].criteria["leave-block-out"] for p in left_out]),
         excess=excess,
         excess_std_error=errors,
@@ -490,19 +498,22 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
             "no width between the narrowest and the widest does",
             "give more rows or --bandwidth",
         )
-    place = int(np.argmin(values))
+    # Of equals (y does not vary, say) the widest.
+    place = int(np.flatnonzero(np.array(values) == min(values))[-1])
     by_fold = criterion == "leave-block-out"
     scores = job.left_out_scores if by_fold else job.scores
     close = _REFINED_BY_FOLD if by_fold else _REFINED
     level: int | None = None if by_fold else job.level(float(grid[place]))
 
+    unit = job.pyramid.plan.width
+
     def at(log_h: float) -> tuple[float, _Point]:
-        point = scores(math.exp(log_h), level)[name]
+        point = scores(math.exp(log_h) * unit, level)[name]
         return point.criteria[criterion], point
 
-    low = math.log(grid[max(place - 1, 0)])
-    high = math.log(grid[min(place + 1, grid.shape[0] - 1)])
-    best = at(math.log(grid[place]))
+    logs = np.log(grid / unit)
+    low, high = logs[max(place - 1, 0)], logs[min(place + 1, grid.shape[0] - 1)]
+    best = at(logs[place])
     left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_left, at_right = at(left), at(right)
     while high - low > close:
@@ -514,7 +525,7 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
             low, left, at_left = left, right, at_right
             right = low + _GOLDEN * (high - low)
             at_right = at(right)
-    return min((at_left, at_right, best), key=lambda pair: pair[0])[1]
+    return min((best, at_left, at_right), key=lambda pair: pair[0])[1]
 
 
 def _paired_error(point: _Point, best: _Point) -> float:
@@ -531,22 +542,25 @@ def _paired_error(point: _Point, best: _Point) -> float:
     return math.sqrt(folds / (folds - 1.0) * float(away @ away))
 
 
-def _flat_zone(grid: Floats, excess: Floats, errors: Floats, best: float) -> tuple[float, float]:
+def _flat_zone(
+    grid: Floats, excess: Floats, errors: Floats, best: float, unit: float
+) -> tuple[float, float]:
     """The interval around the best within one standard error, ends between grid points."""
     # Positive outside the zone. Where the criterion is undefined, so is membership: outside.
     over = np.where(np.isfinite(excess), excess - errors, math.inf)
-    logs = np.log(grid)
+    logs, best_log = np.log(grid / unit), math.log(best / unit)
 
     def end(places: Iterable[int]) -> float:
-        former_log, former_over = math.log(best), -1.0
+        former_log, former_over = best_log, -1.0
         for place in places:
             if over[place] > 0.0:
                 if not math.isfinite(over[place]) or former_over >= 0.0:
-                    return math.exp(former_log)
-                share = former_over / (former_over - over[place]) if former_log != math.log(best) else 0.5
-                return math.exp(former_log + share * (logs[place] - former_log))
+                    break
+                share = former_over / (former_over - over[place]) if former_log != best_log else 0.5
+                former_log += share * (logs[place] - former_log)
+                break
             former_log, former_over = float(logs[place]), float(over[place])
-        return math.exp(former_log)
+        return math.exp(former_log) * unit
 
     below = [i for i in range(grid.shape[0] - 1, -1, -1) if grid[i] < best]
     above = [i for i in range(grid.shape[0]) if grid[i] > best]

@@ -83,6 +83,12 @@ class Reading:
                 "--folds", "be between 2 and 1024", f"it is {self.folds}", "leave it out"
             )
 
+    @property
+    def blocks(self) -> Block | None:
+        """The block, parsed."""
+        assert not isinstance(self.block, str)
+        return self.block
+
 
 @dataclass(frozen=True)
 class Smoothing:
@@ -168,5 +174,5 @@ class Band:
             raise InputError(
                 "--points", "be between 2 and 1000000", f"it is {self.points}", "leave it out"
             )
-        if self.at is not None and not self.at:
+        if self.at is not None and not len(self.at):
             raise InputError("--at", "hold a point", "it is empty", "give points or leave it out")

@@ -35,8 +35,9 @@ class Fits:
         h in bins of the level.
     values : dict of str to (bins,)
         Fitted mean less the plan's reference, per estimator; NaN in empty windows.
-    slopes : dict of str to (bins,)
-        Slope of the fitted curve, per bin.
+    chords : dict of str to (3, bins)
+        Value, slope per bin and unit leverage of the line that stands for the curve among the
+        rows of each bin.
     unit_leverages : dict of str to (bins,)
         Leverage of a row of weight 1 at the bin's centre.
     sums : (3, bins)
@@ -46,7 +47,7 @@ class Fits:
     level: Level
     bandwidth_bins: float
     values: dict[str, Floats]
-    slopes: dict[str, Floats]
+    chords: dict[str, Floats]
     unit_leverages: dict[str, Floats]
     sums: Floats
 
@@ -139,11 +140,26 @@ def fit_level(level: Level, shape: Shape, bandwidth: float, empty: float) -> Fit
     out = np.empty((6, level.bins))
     localfit.fit_bins(s, t, shape.at_zero, empty, least_spread(h), out)
     values = {"local-constant": out[0], "local-linear": out[3]}
-    slopes = {}
-    for row, name in ((1, "local-constant"), (4, "local-linear")):
-        slopes[name] = np.empty(level.bins)
-        localfit.curve_slopes(values[name], out[row], h, slopes[name])
-    return Fits(level, h, values, slopes, {"local-constant": out[2], "local-linear": out[5]}, s)
+    leverages = {"local-constant": out[2], "local-linear": out[5]}
+    chords = {name: chords_of(level, values[name], leverages[name]) for name in ESTIMATORS}
+    return Fits(level, h, values, chords, leverages, s)
+
+
+def chords_of(level: Level, value: Floats, unit_leverage: Floats) -> Floats:
+    """Return value, slope per bin and unit leverage among the rows of each bin, (3, bins).
+
+    Parameters
+    ----------
+    level : Level
+        Where its rows lie.
+    value, unit_leverage : (bins,) float64
+        Fit at the bin centres.
+    """
+    from fastsmooth.kernels import localfit
+
+    out = np.empty((3, level.bins))
+    localfit.chords(level.first, value, unit_leverage, out)
+    return out
 
 
 def score_level(fits: Fits, estimator: str, scored: Level) -> Scores:
@@ -153,8 +169,7 @@ def score_level(fits: Fits, estimator: str, scored: Level) -> Scores:
     coefficients = np.empty((7, scored.bins))
     out = np.empty(4)
     localfit.score_bins(
-        scored.first, scored.second, scored.pilot, fits.values[estimator],
-        fits.slopes[estimator], fits.unit_leverages[estimator], coefficients, out,
+        scored.first, scored.second, scored.pilot, *fits.chords[estimator], coefficients, out,
     )  # fmt: skip
     return Scores(float(out[0]), float(out[1]), float(out[2]), float(out[3]), coefficients)
 
@@ -216,16 +231,15 @@ def left_out_fold_scores(
         t[fold] = kernel_sums(response, shape, h, 2, squared=False)
     s, t = others(s), others(t)
     out = {name: (np.empty(folds), 0.0) for name in ESTIMATORS}
-    fit, slope = np.empty((6, level.bins)), np.empty(level.bins)
+    fit = np.empty((6, level.bins))
     coefficients, sums_of_score = np.empty((7, level.bins)), np.empty(4)
     none, no_leverage = np.empty((6, 0)), np.zeros(level.bins)
     for fold in range(folds):
         localfit.fit_bins(s[fold], t[fold], shape.at_zero, empty, least_spread(h), fit)
         for row, name in ((0, "local-constant"), (3, "local-linear")):
-            localfit.curve_slopes(fit[row], fit[row + 1], h, slope)
             localfit.score_bins(
-                scored.folds[fold], none, scored.pilot, fit[row], slope, no_leverage, coefficients,
-                sums_of_score,
+                scored.folds[fold], none, scored.pilot, *chords_of(level, fit[row], no_leverage),
+                coefficients, sums_of_score,
             )  # fmt: skip
             scores, lost = out[name]
             scores[fold] = sums_of_score[0]

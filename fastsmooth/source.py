@@ -45,6 +45,8 @@ class Columns:
         Weight of each row.
     count : str or None
         Number of readings that each row stands for.
+    block : str or None
+        What makes rows belong together; delivered as the first of the extra columns.
     extra : tuple of str
         Further columns, delivered as they are.
     """
@@ -54,6 +56,11 @@ class Columns:
     weight: str | None = None
     count: str | None = None
     extra: tuple[str, ...] = ()
+    block: str | None = None
+
+    def __post_init__(self) -> None:
+        if self.block is not None and self.block not in self.extra[:1]:
+            object.__setattr__(self, "extra", (self.block, *self.extra))
 
 
 @dataclass
@@ -76,6 +83,8 @@ class Chunk:
     refused : dict of str to int
         Rows with a null, by the first of ``x null``, ``y null``, ``weight null``, ``count null``
         that applies.
+    positions : (n,) int64 or None
+        Place of each row among the rows read; None when none was dropped.
     """
 
     x: NDArray[np.float64]
@@ -86,6 +95,7 @@ class Chunk:
     rows: int
     filtered: int
     refused: dict[str, int] = field(default_factory=dict)
+    positions: NDArray[np.int64] | None = None
 
 
 class Source:
@@ -136,7 +146,7 @@ class Source:
         self.columns = columns
         self.where = where
         self._roles = _roles_of(columns)
-        check_present(reader, self._roles, columns.extra)
+        check_present(reader, self._roles, columns.extra, columns.block)
         self._filters = parse_filters(reader, where)
         used = [role.column for role in self._roles] + list(columns.extra)
         used += [name for one in self._filters for name in one.columns]
@@ -256,8 +266,45 @@ class Source:
         Exception
             What reading or `function` raised first in task order; the other tasks are stopped.
         """
+        return self.map_groups(
+            lambda parts: next(function(task, chunks) for task, chunks in parts),
+            [(task,) for task in self.tasks],
+            threads,
+            chunk_rows,
+            progress,
+        )
+
+    def map_groups(
+        self,
+        function: Callable[[Iterator[tuple[Task, Iterator[Chunk]]]], T],
+        groups: Sequence[Sequence[Task]],
+        threads: int,
+        chunk_rows: int = CHUNK_ROWS,
+        progress: Callable[[int], None] | None = None,
+    ) -> Iterator[T]:
+        """Apply a function to groups of tasks, several groups at a time; results in group order.
+
+        Parameters
+        ----------
+        function : callable
+            Takes an iterator of tasks with their chunks, and returns a result.
+        groups : sequence of sequences of Task
+            Tasks of one group are read one after the other.
+        threads, chunk_rows, progress
+            As for `map_tasks`.
+        """
         if threads < 1:
             raise InputError("--threads", "be at least 1", f"it is {threads}", "leave it out")
+        return self._map_groups(function, groups, threads, chunk_rows, progress)
+
+    def _map_groups(
+        self,
+        function: Callable[[Iterator[tuple[Task, Iterator[Chunk]]]], T],
+        groups: Sequence[Sequence[Task]],
+        threads: int,
+        chunk_rows: int,
+        progress: Callable[[int], None] | None,
+    ) -> Iterator[T]:
         stop = Event()
         lock = Lock()
 
@@ -270,19 +317,19 @@ class Source:
                         progress(chunk.rows)
                 yield chunk
 
-        def run(task: Task) -> T:
-            return function(task, feed(task))
+        def run(group: Sequence[Task]) -> T:
+            return function((task, feed(task)) for task in group)
 
         if threads == 1:
-            yield from map(run, self.tasks)
+            yield from map(run, groups)
             return
         pool = ThreadPoolExecutor(threads, thread_name_prefix="fastsmooth")
         pending: deque[Future[T]] = deque()
         try:
-            for task in self.tasks:
+            for group in groups:
                 if len(pending) >= PENDING_PER_THREAD * threads:
                     yield pending.popleft().result()
-                pending.append(pool.submit(run, task))
+                pending.append(pool.submit(run, group))
             while pending:
                 yield pending.popleft().result()
         finally:
@@ -298,6 +345,7 @@ class Source:
         from fastsmooth.casts import filterable_type, plain_array
 
         rows = kept = batch.num_rows
+        positions: NDArray[np.int64] | None = None
         column = dict(zip(self._needed, batch.columns, strict=True))
         for name in self.columns.extra:
             column[name] = column[name].cast(filterable_type(column[name].type))
@@ -305,6 +353,7 @@ class Source:
             mask = filter_.mask(batch)
             kept = mask.true_count
             if kept < rows:
+                positions = np.flatnonzero(mask.fill_null(False).to_numpy(zero_copy_only=False))
                 # Columns that only the filter reads are done with. Runs cannot be filtered.
                 plain = {role.column: plain_array(column[role.column]) for role in self._roles}
                 extra_columns = {name: column[name] for name in self.columns.extra}
@@ -326,6 +375,7 @@ class Source:
 
             mask = pa.array(keep)
             floats = [values[keep] for values in floats]
+            positions = np.flatnonzero(keep) if positions is None else positions[keep]
             extra = tuple(array.filter(mask) for array in extra)
         named = {role.name: values for role, values in zip(self._roles, floats, strict=True)}
         return Chunk(
@@ -337,6 +387,7 @@ class Source:
             rows,
             rows - kept,
             {reason: number for reason, number in refused.items() if number},
+            positions,
         )
 
     def _empty_chunk(self, task: Task) -> Chunk:

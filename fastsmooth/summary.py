@@ -23,10 +23,16 @@ def curve_lines(made: Curve) -> list[str]:
     """Return what a person should read first about a curve, one fact a line."""
     settings, engine = made.settings, made.trace["engine"]
     lines = [f"{settings['y']} against {settings['x']}", *_row_lines(made)]
+    if settings["block"] is not None:
+        blocks = made.trace["blocks"]
+        lines.append(
+            f"blocks     {blocks:,} by {settings['block']}, dealt to {settings['folds']} folds; "
+            f"width and band rest on leaving out folds"
+        )
     lines += _width_lines(made)
     kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(
-        f"band       pointwise {100 * settings['level']:g} %, {kind}; rows scatter around the "
+        f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around the "
         f"curve by {engine['residual_sd']:.4g} (residual sd)"
     )
     counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
@@ -140,6 +146,14 @@ def _width_lines(made: Curve) -> list[str]:
     if settings["bandwidth"] is not None:
         lines.append(f"           {made.search.criterion} would choose {label(mine.bandwidth)}")
     lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
+    by_row = mine.leave_one_out_bandwidth
+    if made.search.criterion == "leave-block-out" and not 0.95 < by_row / mine.bandwidth < 1.05:
+        lines.append(
+            f"           leave-one-out would choose {label(by_row)}: rows of one block resemble each "
+            f"other, so it takes their common wander for signal"
+            if by_row < low
+            else f"           leave-one-out would choose {label(by_row)}"
+        )
     if mine.score > 0.0 and math.isfinite(other.score):
         away = other.score / mine.score - 1.0
         size = "about the same" if abs(away) < 5e-5 else f"{abs(away):.2%} "

@@ -8,7 +8,7 @@ slope = (S_0 T_1 - S_1 T_0) / (h D), a = S_2 / D. The leverage of row i is w_i K
 
 import numpy as np
 
-from .compiled import READ_1D, READ_2D, WRITE_1D, WRITE_2D, kernel, sum_kernel, types
+from .compiled import READ_1D, READ_2D, WRITE_1D, WRITE_2D, helper, kernel, sum_kernel, types
 
 # Rows of the output of `fit_bins`, once per estimator.
 VALUE, SLOPE, UNIT_LEVERAGE = 0, 1, 2
@@ -16,6 +16,8 @@ VALUE, SLOPE, UNIT_LEVERAGE = 0, 1, 2
 SCORE, RESIDUAL, TRACE, LOST = 0, 1, 2, 3
 # Without this much room (1 - leverage) a row has no leave-one-out prediction.
 _LEAST_ROOM = 1e-10
+# Share of a bin's sums of squares that a residual must have to be told from rounding.
+_LEAST_RESIDUAL = 1e-14
 
 
 @kernel(types.void(READ_2D, READ_2D, types.float64, types.float64, types.float64, WRITE_2D))
@@ -47,28 +49,66 @@ def fit_bins(s, t, at_zero, least_weight, least_spread, out):
             out[5, b] = out[2, b]
 
 
-@kernel(types.void(READ_1D, READ_1D, types.float64, WRITE_1D))
-def curve_slopes(value, slope, bandwidth, out):
-    """Slope of the fitted curve at bin centres, per bin width: by central differences.
+@helper
+def _parabola(values, b):
+    """Slope and half the second derivative at bin b, per bin: through three neighbouring centres.
 
-    Not the local slope coefficient, which estimates the derivative of the truth; rows inside a
-    bin sit on the fitted curve. At the ends and beside empty windows: one-sided, or the local
-    slope (`slope`, per bandwidth, `bandwidth` in bins), or 0 where there is none.
+    At the ends and beside empty windows through the three on one side; a line where only two are
+    known, (0, 0) where there is none but b.
+    """
+    bins = values.shape[0]
+    middle = values[b]
+    left = values[b - 1] if b > 0 else np.nan
+    right = values[b + 1] if b + 1 < bins else np.nan
+    if np.isfinite(left) and np.isfinite(right):
+        return 0.5 * (right - left), 0.5 * (left - 2.0 * middle + right)
+    if np.isfinite(right):
+        further = values[b + 2] if b + 2 < bins else np.nan
+        bend = 0.5 * (middle - 2.0 * right + further) if np.isfinite(further) else 0.0
+        return right - middle - bend, bend
+    if np.isfinite(left):
+        further = values[b - 2] if b > 1 else np.nan
+        bend = 0.5 * (middle - 2.0 * left + further) if np.isfinite(further) else 0.0
+        return middle - left + bend, bend
+    return 0.0, 0.0
+
+
+@kernel(types.void(READ_2D, READ_1D, READ_1D, WRITE_2D))
+def chords(first, value, unit_leverage, out):
+    """The line, and the leverage, that stand for the fitted curve among the rows of each bin.
+
+    Around a bin's centre the curve is a + g v + c v^2. Rows with mean place v0 and variance s^2
+    see the line with slope g + 2 c v0 whose mean over them is the curve's: value at the centre
+    a + c (s^2 - v0^2). It is the curve itself for rows at one place, and errs by terms of third
+    order otherwise. The slope is the curve's own, not the local line's, which estimates the
+    derivative of the truth. Leverage: its parabola's mean over the rows, kept between the
+    neighbouring centres' values.
+
+    Parameters: `first` (7, bins) with sums of w (1, v, v^2); `value`, `unit_leverage` (bins,) at
+    the centres. `out` (3, bins): value, slope per bin, unit leverage; NaN in empty windows.
     """
     bins = value.shape[0]
     for b in range(bins):
-        left = value[b - 1] if b > 0 else np.nan
-        right = value[b + 1] if b + 1 < bins else np.nan
-        if np.isfinite(left) and np.isfinite(right):
-            out[b] = 0.5 * (right - left)
-        elif np.isfinite(slope[b]):
-            out[b] = slope[b] / bandwidth
-        elif np.isfinite(right):
-            out[b] = right - value[b]
-        elif np.isfinite(left):
-            out[b] = value[b] - left
-        else:
-            out[b] = 0.0
+        n = first[0, b]
+        place = first[1, b] / n if n > 0.0 else 0.0
+        # Rounding may leave a hair below zero where all rows are at one place.
+        spread = max(first[2, b] / n - place * place, 0.0) if n > 0.0 else 0.0
+        slope, bend = _parabola(value, b)
+        out[0, b] = value[b] + bend * (spread - place * place)
+        out[1, b] = slope + 2.0 * bend * place
+        slope, bend = _parabola(unit_leverage, b)
+        leverage = unit_leverage[b] + slope * place + bend * (spread + place * place)
+        low = unit_leverage[b]
+        high = low
+        for other in range(max(b - 1, 0), min(b + 2, bins)):
+            # Comparisons with NaN are false: empty neighbours do not count.
+            if unit_leverage[other] < low:
+                low = unit_leverage[other]
+            if unit_leverage[other] > high:
+                high = unit_leverage[other]
+        if b > 0 and b + 1 < bins:
+            leverage = min(max(leverage, low), high)
+        out[2, b] = leverage
 
 
 @kernel(
@@ -106,6 +146,9 @@ def score_bins(first, second, pilot, value, slope, unit_leverage, coefficients, 
             first[6, b] - 2.0 * r * first[3, b] - 2.0 * g * first[4, b]
             + r * r * n + 2.0 * r * g * first[1, b] + g * g * first[2, b]
         )  # fmt: skip
+        # What rounding leaves of rows that all lie on the curve is no residual.
+        if residual < _LEAST_RESIDUAL * (first[6, b] + r * r * n):
+            residual = 0.0
         leverage = unit_leverage[b]
         out[TRACE] += leverage * n
         out[RESIDUAL] += residual

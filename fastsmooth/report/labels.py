@@ -177,11 +177,16 @@ class Label(NamedTuple):
 
 
 def around(x: float, y: float, width: float, height: float) -> list[Spot]:
-    """Return spots around a marker: above it first, then to the sides, then farther up."""
+    """Return spots around a marker: right above it first, then ever farther away."""
     spots = []
-    for step, rise in enumerate((0.09, 0.2, 0.34, 0.5, 0.68, 0.88)):
-        for shift, cost in ((0.5, 0.0), (0.0, 0.3), (1.0, 0.3), (-0.25, 0.6), (1.25, 0.6)):
-            spots.append(Spot(x - shift * width, y + rise, cost + 0.5 * step))
+    for step in range(8):
+        rise = 0.09 + 0.9 * step * height
+        for aside in (0.5, 0.0, 1.0, -0.2, 1.2, -0.5, 1.5, -0.8, 1.8):
+            # From a word's width aside on, the tie grows long.
+            away = max(abs(aside - 0.5) - 0.5, 0.0)
+            spots.append(
+                Spot(x - aside * width, y + rise, 0.6 * abs(aside - 0.5) + away + 0.4 * step)
+            )
     for left in (x + 0.1, x - 0.1 - width):
         spots.append(Spot(left, y - 0.5 * height, 0.2))
     return spots
@@ -253,7 +258,12 @@ def _judge(
     cost += 0.0 if box.within(room.grown(0.03)) else 50.0
     for line in lines:
         covered = box.holds(line)
-        cost += 5.0 * bool(covered) + 0.02 * covered
+        cost += 8.0 * bool(covered) + 0.1 * covered
+    tie = label.tie(moved)
+    if tie is not None:
+        across, up = np.abs(tie[1] - tie[0]).tolist()
+        # A flat tie would run along the flat bottom of a curve.
+        cost += 1.5 * math.hypot(across, up) + 3.0 * (up < 0.6 * across)
     return moved._replace(cost=cost)
 
 

@@ -20,7 +20,7 @@ from fastsmooth.report.scales import Ticks
 # and in a grey print.
 CURVE = "#b23a0e"
 BAND = "#ee9a5d"
-OTHER = "#5b7f9d"
+OTHER = "#4d7190"
 OTHER_PALE = "#ccd8e2"
 ROWS = "#8fa5b8"
 INK = "#1d2b38"

@@ -24,7 +24,14 @@ from fastsmooth.report.look import (
     plain_style,
     write,
 )  # fmt: skip
-from fastsmooth.report.rows import cells_are_coarse, draw_counts, draw_ribbon, draw_rows, x_ends
+from fastsmooth.report.rows import (
+    cells_are_coarse,
+    draw_counts,
+    draw_ribbon,
+    draw_rows,
+    has_unsampled_rows,
+    x_ends,
+)
 from fastsmooth.report.scales import named, shown_axis
 
 # All in inches.
@@ -138,7 +145,7 @@ def _heading(curve: Curve, ruler: Ruler) -> list[_Line]:
     style = {"fontsize": TEXT_PT, "gid": "subtitle"}
     for text in ruler.wrap(words.subtitle(curve), room, TEXT_PT, most=4):
         lines.append(_Line(_MARGIN, text, _TEXT_LINE, style))
-    notes = words.reading_notes(curve, cells_are_coarse(curve))
+    notes = words.reading_notes(curve, cells_are_coarse(curve), has_unsampled_rows(curve))
     style = {"fontsize": SMALL_PT, "color": MUTED, "gid": "notes"}
     for text in ruler.wrap(notes, room, SMALL_PT) if notes else []:
         lines.append(_Line(_MARGIN, text, _SMALL_LINE, style))

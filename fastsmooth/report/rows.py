@@ -40,6 +40,7 @@ _MARGIN = 0.06
 _ROUNDING = 1e-10
 _DECADES_FOR_LOG = 100.0
 _FEW_POINTS = 40
+_UNSAMPLED_SHARE = 0.05
 # A name farther from its stretch than this would seem to belong elsewhere.
 _FARTHEST_NAME_IN = 0.4
 
@@ -121,6 +122,13 @@ def _bulk(curve: Curve) -> Floats:
     if last - first + 1 < min(_LEAST_BULK_CELLS, per_cell.size) and known:
         return np.empty(0)
     return edges[[first, last + 1]]
+
+
+def has_unsampled_rows(curve: Curve) -> bool:
+    """Whether the cells miss a part of x that holds more than a few of the rows."""
+    rows = curve.density.rows
+    unseen = rows[curve.density.sampled.sum(axis=1) == 0.0].sum()
+    return bool(unseen > _UNSAMPLED_SHARE * rows.sum())
 
 
 def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:

@@ -148,7 +148,7 @@ def number_ticks(low: float, high: float, most: int = 6) -> Ticks:
     step = places[1] - places[0]
     largest = max(abs(places[0]), abs(places[-1]))
     offset = 0.0
-    if largest >= 1e4 and step < 1e-4 * largest:
+    if step < (1e-4 if largest >= 1e4 else 1e-5) * largest:
         # Only the last digits differ: they are shown, and the rest is said once.
         unit = 10.0 ** math.ceil(math.log10(high - low))
         offset = math.floor(low / unit) * unit
@@ -270,9 +270,10 @@ def shown_axis(
     if axis.kind == "duration":
         reach = max(abs(low), abs(high))
         unit, size = next((one for one in WIDTH_UNITS if reach >= 2.0 * one[1]), WIDTH_UNITS[-1])
-    ticks = number_ticks(low / size, high / size, _MOST_TICKS)
-    while len(ticks.places) > 2 and not _fits(ticks, (low / size, high / size), length_in, measure):
-        ticks = number_ticks(low / size, high / size, len(ticks.places) - 2)
+    for most in range(_MOST_TICKS, 0, -1):
+        ticks = number_ticks(low / size, high / size, most)
+        if _fits(ticks, (low / size, high / size), length_in, measure):
+            break
     return Shown(lambda x: x / size, ticks, named(name, unit, ticks.note))
 
 
@@ -303,7 +304,7 @@ def _calendar(
     zone = _zone(axis.zone)
     first, last = num2date(days, tz=zone)
     for most in range(_MOST_TICKS, 2, -1):
-        locator = AutoDateLocator(tz=zone, minticks=2, maxticks=most)
+        locator = AutoDateLocator(tz=zone, minticks=3, maxticks=most)
         places = [float(one) for one in locator.tick_values(first, last)]
         places = [one for one in places if days[0] <= one <= days[1]]
         moments = num2date(places, tz=zone)

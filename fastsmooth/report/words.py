@@ -87,8 +87,8 @@ def width_axis(curve: Curve) -> str:
     return named("bandwidth", unit)
 
 
-def reading_notes(curve: Curve, coarse_cells: bool) -> str:
-    """Explain the line styles that occur, and the lack of cells."""
+def reading_notes(curve: Curve, coarse_cells: bool, unsampled: bool) -> str:
+    """Explain the line styles that occur, and what the shading lacks."""
     notes = []
     if (curve.status == EDGE).any():
         notes.append("Dotted (edge): the window is cut off by the end of the data.")
@@ -97,6 +97,8 @@ def reading_notes(curve: Curve, coarse_cells: bool) -> str:
         notes.append(f"Dashed (thin): fewer than {least:g} effective rows.")
     if coarse_cells:
         notes.append("Rows are not shown: far values of y make their cells too coarse.")
+    elif unsampled:
+        notes.append("Shading rests on a sample, which holds no rows in parts of the axis.")
     if (curve.status == OUTSIDE).any():
         notes.append("No line (outside): no rows near enough on both sides.")
     return " ".join(notes)

@@ -26,7 +26,8 @@ def moments(x, y, weight, count, origin, width, bins, pilot):
     The bin of a row is floor((x - origin) / width), `pilot` a list with one offset per bin. The
     result is {bin: {"w", "wv", ...}}, with the term lists summed exactly.
     """
-    names = ("w", "wv", "wv2", "we", "wve", "wv2e", "we2", "count") + (
+    names = (
+        "w", "wv", "wv2", "we", "wve", "wv2e", "we2", "count",
         "w2", "w2v", "w2v2", "w2e", "w2ve", "w2e2",
     )  # fmt: skip
     terms, refused, used = {}, {}, []

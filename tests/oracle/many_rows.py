@@ -91,11 +91,12 @@ def criteria_many(x, y, h, kernel, degree, weights=None):
     leverage = w * unit_leverage
     residual = np.asarray(y, float) - value
     n, total = len(x), w.sum()
-    with np.errstate(divide="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):
         # A row that alone decides its own fit has no prediction from the others.
-        loo = np.where(
-            1.0 - leverage > 1e-10, w * (residual / (1.0 - leverage)) ** 2, np.inf
-        ).sum() / total
+        loo = (
+            np.where(1.0 - leverage > 1e-10, w * (residual / (1.0 - leverage)) ** 2, np.inf).sum()
+            / total
+        )
     variance = (w * residual**2).sum() / total
     trace = leverage.sum()
     room = n - trace - 2.0

@@ -52,10 +52,8 @@ def window(x, here, reach):
 
 
 def second_derivative(x, y, w, kernel, support, g, here):
-    """Second derivative of a local cubic at one place; NaN in windows of fewer than four places."""
+    """Second derivative of a local cubic at one place."""
     rows = window(x, here, support * g)
-    if len(np.unique(x[rows])) < 4:
-        return np.nan
     u = (x[rows] - here) / g
     k = w[rows] * kernel(u)
     design = np.array([u**0, u, u**2, u**3])
@@ -72,6 +70,16 @@ def line_weights(x, w, kernel, support, h, i):
         return rows, k / k.sum()
     s0, s1, s2 = k.sum(), (k * u).sum(), (k * u**2).sum()
     return rows, k * (s2 - s1 * u) / (s0 * s2 - s1**2)
+
+
+def line_variance(x, y, w, kernel, support, h):
+    """Residuals of a local line at every row, over their degrees of freedom."""
+    rss, freedom = 0.0, float(len(x))
+    for i in range(len(x)):
+        rows, weights = line_weights(x, w, kernel, support, h, i)
+        rss += w[i] * (y[i] - weights @ y[rows]) ** 2
+        freedom += w[i] * np.sum(weights**2 / w[rows]) - 2 * weights[i - rows.start]
+    return rss / freedom
 
 
 def rule_of_thumb(x, y, name):
@@ -108,14 +116,9 @@ def plug_in(x, y, name, w=None, every=1):
     c2 = c2_negative if theta24 < 0 else c2_positive
     g = c2 * (variance * width / (abs(theta24) * total)) ** (1 / 7)
     taken = np.flatnonzero(inner)[::every]
-    curvature = np.array([second_derivative(x, y, w, kernel, support, g, x[i]) for i in taken])
-    curvature = np.where(np.isnan(curvature), second[taken], curvature)
+    curvature = [second_derivative(x, y, w, kernel, support, g, x[i]) for i in taken]
     theta22_local = np.average(np.square(curvature), weights=w[taken]) * w[inner].sum() / total
 
     lam = c3 * (variance**2 * width / (theta22 * total) ** 2) ** (1 / 9)
-    rss, freedom = 0.0, float(n)
-    for i in range(n):
-        rows, weights = line_weights(x, w, kernel, support, lam, i)
-        rss += w[i] * (y[i] - weights @ y[rows]) ** 2
-        freedom += w[i] * np.sum(weights**2 / w[rows]) - 2 * weights[i - rows.start]
-    return (spread * rss / freedom * width / (theta22_local * total)) ** 0.2
+    variance = line_variance(x, y, w, kernel, support, lam)
+    return (spread * variance * width / (theta22_local * total)) ** 0.2
