@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import asdict, replace
+from functools import lru_cache
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -288,7 +289,7 @@ def _assemble(
         "files": [asdict(record) for record in source.files],
         "engine": {k: _finite(v) for k, v in engine.items()},
         "plan": plan.to_dict(),
-        "versions": _versions(),
+        "versions": dict(_versions()),
     }
     made = Curve(
         x=x, estimate=points.estimate, slope=slope, std_error=points.std_error,
@@ -387,6 +388,7 @@ def _finite(value: Any) -> Any:
     return None if isinstance(value, float) and not math.isfinite(value) else value
 
 
+@lru_cache(maxsize=1)
 def _versions() -> Mapping[str, str]:
     import platform
     from importlib.metadata import version

@@ -146,17 +146,16 @@ def _squared_residuals(fits: Fits, estimator: str, shape: Shape) -> tuple[Floats
         ratio = np.where(usable, np.clip(share / level.count, 0.0, None), 0.0)
     r = np.where(usable, value - level.pilot, 0.0)
     g = np.where(usable, slope, 0.0)
+    from fastsmooth.kernels import localfit
+
     folds = level.folds.shape[0]
-    ends = np.linspace(0, folds, min(_VARIANCE_GROUPS, folds) + 1).astype(int)
-    grouped = np.add.reduceat(level.folds, ends[:-1], axis=0) if folds else level.folds
-    squared = (
-        grouped[:, 6] - 2.0 * r * grouped[:, 3] - 2.0 * g * grouped[:, 4]
-        + r * r * grouped[:, 0] + 2.0 * r * g * grouped[:, 1] + g * g * grouped[:, 2]
-    )  # fmt: skip
-    # Rounding may leave a hair below zero where all rows sit on the curve.
-    squared = np.clip(squared * usable, 0.0, None)
+    ends = np.linspace(0, folds, min(_VARIANCE_GROUPS, folds) + 1).astype(np.int64)
+    squared = np.empty((ends.shape[0] - 1, level.bins))
+    grouped = np.empty_like(squared)
+    localfit.group_residuals(level.folds, ends, r, g, squared, grouped)
+    squared *= usable
     with np.errstate(invalid="ignore", divide="ignore"):
-        parts = np.where(level.first[0] > 0.0, grouped[:, 0] / level.first[0], 0.0)
+        parts = np.where(level.first[0] > 0.0, grouped / level.first[0], 0.0)
     return squared, parts * ratio * level.count
 
 
@@ -285,7 +284,8 @@ def fit_points(
     columns = [estimate + reference, slope, std_error]
     columns += [centre - half + reference, centre + half + reference, effective, spread]
     out = status == OUTSIDE
-    return Points(*(np.where(out, np.nan, column) for column in columns), status)
+    masked = [np.where(out, np.nan, column) for column in columns]
+    return Points(*masked, status=status)  # type: ignore[misc]  # seven columns, in order
 
 
 def _all_sums(places: Floats, fits: Fits, noise: Noise, shape: Shape) -> PointSums:

@@ -47,19 +47,18 @@ def autocorrelation(z: Floats, run: NDArray[np.int64], place: NDArray[np.int64],
     fewest = _FEWEST_PAIRS if z.size >= 2 * _FEWEST_PAIRS else 1
     # On a line of places with gaps between runs, a lag is one shifted product.
     length = int(place.max()) + lags + 2
-    _, order = np.unique(run, return_inverse=True)
-    line = np.zeros((int(order.max()) + 1) * length)
+    line = np.zeros((int(run.max()) + 1) * length)
     known = np.zeros(line.shape[0])
-    line[order * length + place] = z
-    known[order * length + place] = 1.0
-    variance = float(z @ z) / z.size
+    line[run * length + place] = z
+    known[run * length + place] = 1.0
+    variance = float(np.sum(z * z)) / z.size
     if variance <= 0.0:
         return out
     out[0] = 1.0
     for lag in range(1, lags + 1):
-        pairs = float(known[:-lag] @ known[lag:])
+        pairs = float(np.sum(known[:-lag] * known[lag:]))
         if pairs >= fewest:
-            out[lag] = float(line[:-lag] @ line[lag:]) / pairs / variance
+            out[lag] = float(np.sum(line[:-lag] * line[lag:])) / pairs / variance
     return out
 
 

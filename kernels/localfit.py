@@ -8,7 +8,18 @@ slope = (S_0 T_1 - S_1 T_0) / (h D), a = S_2 / D. The leverage of row i is w_i K
 
 import numpy as np
 
-from .compiled import READ_1D, READ_2D, WRITE_1D, WRITE_2D, helper, kernel, sum_kernel, types
+from .compiled import (
+    READ_1D,
+    READ_2D,
+    READ_3D,
+    READ_INT_1D,
+    WRITE_1D,
+    WRITE_2D,
+    helper,
+    kernel,
+    sum_kernel,
+    types,
+)
 
 # Rows of the output of `fit_bins`, once per estimator.
 VALUE, SLOPE, UNIT_LEVERAGE = 0, 1, 2
@@ -173,7 +184,7 @@ def score_bins(first, second, pilot, value, slope, unit_leverage, coefficients, 
         coefficients[6, b] = factor
 
 
-@sum_kernel(types.void(types.Array(types.float64, 3, "C", readonly=True), READ_2D, WRITE_1D))
+@sum_kernel(types.void(READ_3D, READ_2D, WRITE_1D))
 def fold_scores(folds, coefficients, out):
     """out[f] = sum over bins of coefficients * folds[f]; `folds` (folds, 7, bins)."""
     for f in range(folds.shape[0]):
@@ -188,3 +199,31 @@ def fold_scores(folds, coefficients, out):
                 part += a[b] * c[b]
             total += part
         out[f] = total
+
+
+@kernel(types.void(READ_3D, READ_INT_1D, READ_1D, READ_1D, WRITE_2D, WRITE_2D))
+def group_residuals(folds, ends, residual, slope, squared, weight):
+    """Sums of w (y - m)^2 and of w per group of folds and bin.
+
+    `folds` (folds, 7, bins); group g is the folds ends[g] to ends[g + 1]; `residual` (bins,) is
+    value less pilot and `slope` (bins,) per bin, as for `score_bins`; `squared`, `weight`
+    (groups, bins). Rounding may leave a hair below zero where all rows sit on the curve; it is
+    cut off.
+    """
+    bins = folds.shape[2]
+    for g in range(squared.shape[0]):
+        for b in range(bins):
+            squared[g, b] = 0.0
+            weight[g, b] = 0.0
+        for f in range(ends[g], ends[g + 1]):
+            for b in range(bins):
+                r = residual[b]
+                s = slope[b]
+                weight[g, b] += folds[f, 0, b]
+                squared[g, b] += (
+                    folds[f, 6, b] - 2.0 * r * folds[f, 3, b] - 2.0 * s * folds[f, 4, b]
+                    + r * r * folds[f, 0, b] + 2.0 * r * s * folds[f, 1, b]
+                    + s * s * folds[f, 2, b]
+                )  # fmt: skip
+        for b in range(bins):
+            squared[g, b] = max(squared[g, b], 0.0)
