@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from fastsmooth.bintable import Level
 from fastsmooth.critical import arc_length_of, pointwise_value, simultaneous_value
 from fastsmooth.curve import EDGE, OK, OUTSIDE, THIN
 from fastsmooth.jackknife import leave_out_folds
@@ -17,6 +18,7 @@ from fastsmooth.localweights import (
     PARABOLA,
     PointSums,
     slope_of,
+    slope_weights,
     sums_at,
     weights_of,
 )
@@ -66,6 +68,7 @@ class Points(NamedTuple):
 
     estimate: Floats
     slope: Floats
+    slope_std_error: Floats
     std_error: Floats
     lower: Floats
     upper: Floats
@@ -267,9 +270,11 @@ def fit_points(
         if by_block:
             left_out = leave_out_folds(places, level, shape, h, centred)
             std_error, degrees = left_out.std_error, left_out.degrees
+            slope_error = left_out.slope_std_error
         else:
             std_error = np.sqrt(middle.variance(sums.v))
             degrees = np.interp(places, centres, noise.degrees)
+            slope_error = np.sqrt(slope_weights(sums.s, h).variance(sums.v))
     status[~np.isfinite(estimate)] = OUTSIDE
     thin = ~(effective >= band.least_rows)
     if by_block:
@@ -281,11 +286,26 @@ def fit_points(
     with np.errstate(invalid="ignore"):
         half = value * std_error
     slope = slope_of(sums, shape, h, estimator) / level.width
-    columns = [estimate + reference, slope, std_error]
+    if estimator == "local-constant":
+        slope_error = np.full_like(slope_error, np.nan)
+    columns = [estimate + reference, slope, slope_error / level.width, std_error]
     columns += [centre - half + reference, centre + half + reference, effective, spread]
     out = status == OUTSIDE
     masked = [np.where(out, np.nan, column) for column in columns]
-    return Points(*masked, status=status)  # type: ignore[misc]  # seven columns, in order
+    return Points(*masked, status=status)  # type: ignore[misc]  # eight columns, in order
+
+
+def values_at(
+    x: Floats, level: Level, bandwidth: float, shape: Shape, estimator: str
+) -> Floats:
+    """Return the estimate less the plan's reference at x (plan's scale), from one level."""
+    h = bandwidth / level.width
+    unused = np.zeros((3, level.bins))
+    places = (x - level.origin) / level.width
+    sums = sums_at(places, level.first[0:3], level.response, shape, h, unused, unused)
+    kind = CONSTANT if estimator == "local-constant" else LINE
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return weights_of(sums.s, h, kind).apply(sums.t)
 
 
 def _all_sums(places: Floats, fits: Fits, noise: Noise, shape: Shape) -> PointSums:

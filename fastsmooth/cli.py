@@ -110,6 +110,10 @@ _BAND_OPTIONS = _with(
     click.option("--points", type=int, default=256, show_default=True, metavar="N",
                  help="Evenly spaced points of the curve."),
     click.option("--at", metavar="X,X,...", help="Points of your own instead."),
+    click.option("--landmarks", is_flag=True,
+                 help="Locate the steepest place and the turning points, with intervals."),
+    click.option("--crossing", "crossings", type=float, multiple=True, metavar="Y",
+                 help="Locate where the curve crosses this value (may be repeated)."),
 )  # fmt: skip
 _VOICE_OPTIONS = _with(
     click.option("--json", "as_json", is_flag=True, help="Print JSON in place of the summary."),
@@ -136,12 +140,13 @@ def _smoothing(
 
 
 def _band(
-    level: float, band: str, bias: str, noise: str, least_rows: float, points: int, at: str | None
-) -> Band:
+    level: float, band: str, bias: str, noise: str, least_rows: float, points: int, at: str | None,
+    landmarks: bool, crossings: tuple[float, ...],
+) -> Band:  # fmt: skip
     from fastsmooth.settings import Band
 
     places = None if at is None else tuple(one.strip() for one in at.split(",") if one.strip())
-    return Band(level, band, bias, noise, least_rows, points, places)
+    return Band(level, band, bias, noise, least_rows, points, places, landmarks, crossings)
 
 
 def _take(options: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
@@ -158,7 +163,8 @@ def _make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) ->
     smoothing = _smoothing(
         **_take(options, ("estimator", "kernel", "bandwidth", "criterion", "widths"))
     )
-    names = ("level", "band", "bias", "noise", "least_rows", "points", "at")
+    names = ("level", "band", "bias", "noise", "least_rows", "points", "at", "landmarks",
+             "crossings")
     band = _band(**_take(options, names)) if "level" in options else None
     return make_curve(
         data[0] if len(data) == 1 else list(data),

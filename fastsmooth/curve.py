@@ -85,10 +85,12 @@ class Curve:
     slope : (n,) float64
         Change of y per unit of x (per second for times): the local line's own slope, or the
         derivative of the local constant curve (NaN with the uniform kernel).
+    slope_std_error : (n,) float64
+        Standard error of the local line's slope; NaN for the local constant.
     std_error : (n,) float64
         Standard error of the band's centre.
     lower, upper : (n,) float64
-        The pointwise band.
+        The band.
     effective_rows : (n,) float64
         1 / sum of squared weights: how many equally weighted rows would be as sharp.
     status : (n,) int64
@@ -112,6 +114,7 @@ class Curve:
     x: Floats
     estimate: Floats
     slope: Floats
+    slope_std_error: Floats
     std_error: Floats
     lower: Floats
     upper: Floats
@@ -181,8 +184,8 @@ class Curve:
         Returns
         -------
         pyarrow.Table
-            Columns ``x`` (in the column's own type), ``estimate``, ``slope``, ``std_error``,
-            ``lower``, ``upper``, ``effective_rows``, ``residual_sd``, ``status``. Values without
+            Columns ``x`` (in the column's own type), ``estimate``, ``slope``,
+            ``slope_std_error``, ``std_error``, ``lower``, ``upper``, ``effective_rows``, ``residual_sd``, ``status``. Values without
             support are null.
         """
         import pyarrow as pa
@@ -192,7 +195,7 @@ class Curve:
 
         columns = {"x": self.axis.to_arrow(self.x)}
         for name in (
-            "estimate", "slope", "std_error", "lower", "upper", "effective_rows", "residual_sd",
+            "estimate", "slope", "slope_std_error", "std_error", "lower", "upper", "effective_rows", "residual_sd",
         ):  # fmt: skip
             columns[name] = column(getattr(self, name))
         columns["status"] = pa.array(self.statuses)
@@ -236,7 +239,7 @@ class Curve:
         values = {
             column: table[column].to_numpy().astype(np.float64)
             for column in (
-                "estimate", "slope", "std_error", "lower", "upper", "effective_rows",
+                "estimate", "slope", "slope_std_error", "std_error", "lower", "upper", "effective_rows",
                 "residual_sd",
             )
         }  # fmt: skip

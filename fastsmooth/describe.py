@@ -90,6 +90,7 @@ def description_lines(told: dict[str, Any]) -> list[str]:
         settings = told["settings"]
         given = {k: v for k, v in settings.items() if v not in (None, "")}
         lines.append("settings   " + ", ".join(f"{k} {v}" for k, v in given.items()))
+        lines.append("fit        " + told["fit_definitions"])
         versions = told["versions"]
         lines.append("versions   " + ", ".join(f"{k} {v}" for k, v in versions.items()))
         for record in told["files"]:

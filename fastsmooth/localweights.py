@@ -138,18 +138,24 @@ def weights_of(s: Floats, bandwidth_bins: float, kind: str) -> Weights:
         return Weights((c0, c1, c2), np.where(scale > 1e-6 * s[0] * s[2] * s[4], scale, np.nan))
 
 
+def slope_weights(s: Floats, bandwidth_bins: float) -> Weights:
+    """Return the weights of the local line's slope, per bin; NaN where rows have no spread."""
+    with np.errstate(invalid="ignore", divide="ignore"):
+        scale = s[0] * s[2] - s[1] ** 2
+        least = np.maximum(1e-6 * s[0] * s[2], least_spread(bandwidth_bins) * s[0] ** 2)
+        scale = np.where(scale > least, scale, np.nan)
+    return Weights((-s[1], s[0]), scale * bandwidth_bins)
+
+
 def slope_of(sums: PointSums, shape: Shape, bandwidth_bins: float, estimator: str) -> Floats:
     """Return the slope per bin: the local line's, or the local constant curve's derivative.
 
     The latter is (T_0' S_0 - T_0 S_0') / S_0^2, which needs K'; NaN for the uniform kernel.
     """
     s, t = sums.s, sums.t
+    if estimator == "local-linear":
+        return slope_weights(s, bandwidth_bins).apply(t)
+    if shape.smoothness == 0:
+        return np.full_like(s[0], np.nan)
     with np.errstate(invalid="ignore", divide="ignore"):
-        if estimator == "local-constant":
-            if shape.smoothness == 0:
-                return np.full_like(s[0], np.nan)
-            return -(sums.dt * s[0] - t[0] * sums.ds) / s[0] ** 2 / bandwidth_bins
-        scale = s[0] * s[2] - s[1] ** 2
-        least = np.maximum(1e-6 * s[0] * s[2], least_spread(bandwidth_bins) * s[0] ** 2)
-        slope = (s[0] * t[1] - s[1] * t[0]) / scale
-        return np.where(scale > least, slope, np.nan) / bandwidth_bins
+        return np.asarray(-(sums.dt * s[0] - t[0] * sums.ds) / s[0] ** 2 / bandwidth_bins)

@@ -146,8 +146,12 @@ class Band:
         meets fewer than twelve folds.
     points : int
         Evenly spaced points from the lowest to the highest x (in log x on a log scale).
-    at : sequence or None
+    at : tuple or None
         Points of the caller's own, in the column's terms, in place of `points`.
+    landmarks : bool
+        Whether to locate the steepest place and the turning points, with intervals.
+    crossings : tuple of float
+        Values of y whose crossings are located too.
     """
 
     level: float = 0.95
@@ -157,6 +161,8 @@ class Band:
     least_rows: float = 30.0
     points: int = 256
     at: tuple[object, ...] | None = None
+    landmarks: bool = False
+    crossings: tuple[float, ...] = ()
 
     def __post_init__(self) -> None:
         one_of("--band", self.kind, BANDS)

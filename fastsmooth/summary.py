@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from fastsmooth.curve import STATUSES, Curve
+from fastsmooth.fitness import DEFINITIONS
 from fastsmooth.search import Search, Trail
 
 if TYPE_CHECKING:
@@ -35,6 +36,8 @@ def curve_lines(made: Curve) -> list[str]:
         f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around the "
         f"curve by {engine['residual_sd']:.4g} (residual sd)"
     )
+    lines.append(_fit_line(made))
+    lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
     counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
     ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
     lines.append(f"points     {made.x.shape[0]} from {ends}: {counts}")
@@ -90,6 +93,10 @@ def curve_facts(made: Curve) -> dict[str, Any]:
         "search": search_facts(made.search),
         "points": status_counts(made),
         "engine": made.trace["engine"],
+        "fit": made.trace["fit"],
+        "fit_definitions": DEFINITIONS,
+        "landmarks": made.trace["landmarks"],
+        "serial_correlation": made.trace["serial"],
         "cautions": [caution._asdict() for caution in made.cautions],
     }
 
@@ -113,6 +120,29 @@ def status_counts(made: Curve) -> dict[str, int]:
     """Return how many points have each status."""
     counts = np.bincount(made.status, minlength=len(STATUSES)).tolist()
     return dict(zip(STATUSES, counts, strict=True))
+
+
+def _fit_line(made: Curve) -> str:
+    fit = made.trace["fit"]
+
+    def percent(name: str) -> str:
+        return "none" if fit[name] is None else f"{100 * fit[name]:.3g} %"
+
+    r2 = "none" if fit["r2_left_out"] is None else f"{fit['r2_left_out']:.4g}"
+    return f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, NMBE {percent('nmbe')}"
+
+
+def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
+    label = made.axis.label
+    words = {
+        "steepest": "steepest at", "lowest": "turns (lowest) at", "highest": "turns (highest) at",
+        "crossing": f"crosses {mark['value']:g} at",
+    }  # fmt: skip
+    text = f"landmark   {words[mark['kind']]} {label(mark['x'])}"
+    if mark["lower"] is None or mark["upper"] is None:
+        return text + " (no interval: some folds decide whether it is there)"
+    level = 100 * made.settings["level"]
+    return text + f" ({level:g} % interval {label(mark['lower'])} to {label(mark['upper'])})"
 
 
 def _row_lines(made: Curve) -> list[str]:

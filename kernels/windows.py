@@ -34,6 +34,7 @@ import numpy as np
 from .compiled import (
     READ_1D,
     READ_2D,
+    READ_3D,
     READ_BOOL_1D,
     READ_INT_1D,
     WRITE_1D,
@@ -129,9 +130,12 @@ def _load(x, y, weight, first, count, centre, per_unit, column, terms):
             b[k] *= ws[k]
 
 
-@sum_kernel(types.void(WRITE_2D, types.int64, types.int64, types.int64, WRITE_1D))
-def _add_four(terms, count, s_row, t_row, totals):
-    """Add four pairs of power sums over a block to `totals`; leave the next powers in it."""
+@sum_kernel(
+    types.void(WRITE_2D, types.int64, types.int64, types.int64, types.int64, types.int64, WRITE_3D)
+)
+def _add_four(terms, count, s_row, t_row, arm, at, carries):
+    """Add four pairs of power sums to carries[arm, at]; leave the next powers in `terms`."""
+    totals = carries[arm, at]
     v = terms[0]
     a = terms[1]
     b = terms[2]
@@ -167,9 +171,10 @@ def _add_four(terms, count, s_row, t_row, totals):
     totals[t_row + 3] += t4
 
 
-@sum_kernel(types.float64(READ_1D, types.int64))
-def _add_one(values, count):
-    """Sum of the first `count` values."""
+@sum_kernel(types.float64(READ_2D, types.int64, types.int64))
+def _add_one(terms, row, count):
+    """Sum of the first `count` terms of a row."""
+    values = terms[row]
     total = 0.0
     for k in range(count):
         total += values[k]
@@ -178,22 +183,22 @@ def _add_one(values, count):
 
 @kernel(
     types.void(READ_1D, READ_1D, READ_1D, types.int64, types.int64, types.float64, types.float64,
-               WRITE_2D, WRITE_1D)
+               types.int64, types.int64, WRITE_2D, WRITE_3D)
 )  # fmt: skip
-def _add_block(x, y, weight, first, count, centre, per_unit, terms, totals):
-    """Add the power sums of rows first, first + 1, ... to `totals` (rows,)."""
-    pairs = (totals.shape[0] - 1) // 2
+def _add_block(x, y, weight, first, count, centre, per_unit, arm, at, terms, carries):
+    """Add the power sums of rows first, first + 1, ... to carries[arm, at]."""
+    pairs = (carries.shape[2] - 1) // 2
     _load(x, y, weight, first, count, centre, per_unit, 0, terms)
-    totals[0] += _add_one(terms[3], count) if weight.shape[0] > 0 else count
+    carries[arm, at, 0] += _add_one(terms, 3, count) if weight.shape[0] > 0 else count
     for q in range(0, pairs, 4):
-        _add_four(terms, count, 1 + q, 1 + pairs + q, totals)
+        _add_four(terms, count, 1 + q, 1 + pairs + q, arm, at, carries)
 
 
 @kernel(
-    types.void(WRITE_2D, types.int64[:, ::1], types.int64, types.boolean, types.int64,
-               types.int64, WRITE_2D)
+    types.void(WRITE_2D, types.int64[:, :, ::1], types.int64, types.int64, types.boolean,
+               types.int64, types.int64, WRITE_3D)
 )  # fmt: skip
-def _scan_four(terms, segments, count, down, s_row, t_row, table):
+def _scan_four(terms, segments, arm, count, down, s_row, t_row, tables):
     """Growing sums of four pairs of powers over each segment, from its first column on.
 
     A segment's rows lie in `terms` from its first column + 1 on, and are taken from the last
@@ -203,18 +208,18 @@ def _scan_four(terms, segments, count, down, s_row, t_row, table):
     v = terms[0]
     a = terms[1]
     b = terms[2]
-    r1 = table[s_row]
-    r2 = table[s_row + 1]
-    r3 = table[s_row + 2]
-    r4 = table[s_row + 3]
-    q1 = table[t_row]
-    q2 = table[t_row + 1]
-    q3 = table[t_row + 2]
-    q4 = table[t_row + 3]
+    r1 = tables[arm, s_row]
+    r2 = tables[arm, s_row + 1]
+    r3 = tables[arm, s_row + 2]
+    r4 = tables[arm, s_row + 3]
+    q1 = tables[arm, t_row]
+    q2 = tables[arm, t_row + 1]
+    q3 = tables[arm, t_row + 2]
+    q4 = tables[arm, t_row + 3]
     stride = np.uint64(-1 if down else 1)
     for segment in range(count):
-        rows = segments[segment, _ROWS]
-        j = np.uint64(segments[segment, _COLUMN])
+        rows = segments[arm, segment, _ROWS]
+        j = np.uint64(segments[arm, segment, _COLUMN])
         i = j + np.uint64(rows) if down else j + _ONE
         s1 = r1[j]
         s2 = r2[j]
@@ -256,12 +261,16 @@ def _scan_four(terms, segments, count, down, s_row, t_row, table):
             i += stride
 
 
-@kernel(types.void(READ_1D, types.int64[:, ::1], types.int64, types.boolean, WRITE_1D))
-def _scan_one(values, segments, count, down, out):
-    """Growing sums of one row of terms; otherwise as `_scan_four`."""
+@kernel(
+    types.void(READ_2D, types.int64[:, :, ::1], types.int64, types.int64, types.boolean, WRITE_3D)
+)
+def _scan_one(terms, segments, arm, count, down, tables):
+    """Growing sums of the weights; otherwise as `_scan_four`."""
+    values = terms[3]
+    out = tables[arm, 0]
     for segment in range(count):
-        rows = segments[segment, _ROWS]
-        column = segments[segment, _COLUMN]
+        rows = segments[arm, segment, _ROWS]
+        column = segments[arm, segment, _COLUMN]
         total = out[column]
         for k in range(rows):
             total += values[column + rows - k if down else column + 1 + k]
@@ -269,67 +278,79 @@ def _scan_one(values, segments, count, down, out):
 
 
 @kernel(types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, WORK))
-def _start_arm(x, y, weight, per_unit, index, longest, work):
+def _start_arm(x, y, weight, per_unit, arm, longest, work):
     """Prepare the carries of an arm whose origin was set: power sums over its first blocks.
 
     An arm that shortens needs its farthest block first, so all its blocks are summed now, up
     to `longest` rows. An arm that grows is summed as it grows: row 0 of its carries.
     """
-    arm = work.arms[index]
-    carries = work.carries[index]
-    arm[_AT] = -1
-    arm[_CARRIED] = 0
-    carries[0] = 0.0
-    if arm[_STEP] > 0:
+    arms = work.arms
+    carries = work.carries
+    arms[arm, _AT] = -1
+    arms[arm, _CARRIED] = 0
+    rows = carries.shape[2]
+    for row in range(rows):
+        carries[arm, 0, row] = 0.0
+    if arms[arm, _STEP] > 0:
         return
     for at in range(longest // _BLOCK):
-        carries[at + 1] = 0.0
-        first = arm[_ORIGIN] - (at + 1) * _BLOCK
+        for row in range(rows):
+            carries[arm, at + 1, row] = 0.0
+        first = arms[arm, _ORIGIN] - (at + 1) * _BLOCK
         _add_block(
-            x, y, weight, first, _BLOCK, work.centre[0], per_unit, work.terms, carries[at + 1]
+            x, y, weight, first, _BLOCK, work.centre[0], per_unit, arm, at + 1, work.terms, carries
         )
-        for row in range(carries.shape[1]):
-            carries[at + 1, row] += carries[at, row]
+        for row in range(rows):
+            carries[arm, at + 1, row] += carries[arm, at, row]
 
 
 @kernel(
     types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, types.int64,
                WORK)
 )  # fmt: skip
-def _add_segment(x, y, weight, per_unit, index, at, rows, work):
+def _add_segment(x, y, weight, per_unit, arm, at, rows, work):
     """Plan a segment: the first `rows` rows of block `at` of an arm, on top of its carry."""
-    arm = work.arms[index]
-    carries = work.carries[index]
-    down = arm[_STEP] < 0
+    arms = work.arms
+    carries = work.carries
+    powers = carries.shape[2]
+    centre = work.centre[0]
+    origin = arms[arm, _ORIGIN]
+    down = arms[arm, _STEP] < 0
     if not down:
-        totals = carries[1]
-        for passed in range(arm[_CARRIED], at):
-            totals[:] = 0.0
-            first = arm[_ORIGIN] + passed * _BLOCK
-            _add_block(x, y, weight, first, _BLOCK, work.centre[0], per_unit, work.terms, totals)
-            for row in range(carries.shape[1]):
-                carries[0, row] += totals[row]
-        arm[_CARRIED] = max(arm[_CARRIED], at)
-    segment = arm[_SEGMENTS]
-    column = arm[_FILLED]
-    first = arm[_ORIGIN] + at * _BLOCK
-    if down:
-        first = arm[_ORIGIN] - at * _BLOCK - rows
-    work.segments[index, segment, _FIRST] = first
-    work.segments[index, segment, _ROWS] = rows
-    work.segments[index, segment, _COLUMN] = column
-    work.centres[index, segment] = work.centre[0]
-    source = carries[at if down else 0]
-    for row in range(carries.shape[1]):
-        work.tables[index, row, column] = source[row]
-    arm[_AT] = at
-    arm[_SEGMENTS] = segment + 1
-    arm[_FILLED] = column + rows + 1
+        for passed in range(arms[arm, _CARRIED], at):
+            for row in range(powers):
+                carries[arm, 1, row] = 0.0
+            first = origin + passed * _BLOCK
+            _add_block(
+                x, y, weight, first, _BLOCK, centre, per_unit, arm, 1, work.terms, carries
+            )
+            for row in range(powers):
+                carries[arm, 0, row] += carries[arm, 1, row]
+        arms[arm, _CARRIED] = max(arms[arm, _CARRIED], at)
+    segment = arms[arm, _SEGMENTS]
+    column = arms[arm, _FILLED]
+    first = origin - at * _BLOCK - rows if down else origin + at * _BLOCK
+    work.segments[arm, segment, _FIRST] = first
+    work.segments[arm, segment, _ROWS] = rows
+    work.segments[arm, segment, _COLUMN] = column
+    work.centres[arm, segment] = centre
+    source = at if down else 0
+    for row in range(powers):
+        work.tables[arm, row, column] = carries[arm, source, row]
+    arms[arm, _AT] = at
+    arms[arm, _SEGMENTS] = segment + 1
+    arms[arm, _FILLED] = column + rows + 1
 
 
-@kernel(types.void(READ_1D, READ_1D, READ_INT_1D, READ_INT_1D, types.int64, types.int64, WRITE_1D))
-def _join(down, up, down_columns, up_columns, begin, end, out):
+@kernel(types.void(READ_3D, types.int64[:, ::1], types.int64, types.int64, types.int64, types.int64,
+                   WRITE_3D))  # fmt: skip
+def _join(tables, columns, side, row, begin, end, moments):
     """Sum over a window = sum over the arm that shortens + sum over the arm that grows."""
+    down = tables[2 * side, row]
+    up = tables[2 * side + 1, row]
+    down_columns = columns[2 * side]
+    up_columns = columns[2 * side + 1]
+    out = moments[side, row]
     for k in range(np.uint64(begin), np.uint64(end)):
         out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
 
@@ -338,38 +359,33 @@ def _join(down, up, down_columns, up_columns, begin, end, out):
 def _tabulate(x, y, weight, per_unit, side, end, work):
     """Make the tables of a pair of arms, and join them for the slots planned, up to `end`."""
     begin = work.state[_PLANNED + side]
+    arms = work.arms
+    segments = work.segments
     rows = work.tables.shape[1]
     pairs = (rows - 1) // 2
     weighted = weight.shape[0] > 0
-    a = 2 * side
-    b = a + 1
-    for index in (a, b):
-        arm = work.arms[index]
-        down = arm[_STEP] < 0
-        segments = work.segments[index]
-        table = work.tables[index]
-        for segment in range(arm[_SEGMENTS]):
+    for arm in range(2 * side, 2 * side + 2):
+        count = arms[arm, _SEGMENTS]
+        down = arms[arm, _STEP] < 0
+        for segment in range(count):
             _load(
-                x, y, weight, segments[segment, _FIRST], segments[segment, _ROWS],
-                work.centres[index, segment], per_unit, segments[segment, _COLUMN] + 1, work.terms,
+                x, y, weight, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
+                work.centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1,
+                work.terms,
             )  # fmt: skip
         if weighted:
-            _scan_one(work.terms[3], segments, arm[_SEGMENTS], down, table[0])
+            _scan_one(work.terms, segments, arm, count, down, work.tables)
         for q in range(0, pairs, 4):
-            _scan_four(work.terms, segments, arm[_SEGMENTS], down, 1 + q, 1 + pairs + q, table)
-        arm[_AT] = -1
-        arm[_SEGMENTS] = 0
-        arm[_FILLED] = 0
+            _scan_four(work.terms, segments, arm, count, down, 1 + q, 1 + pairs + q, work.tables)
+        arms[arm, _AT] = -1
+        arms[arm, _SEGMENTS] = 0
+        arms[arm, _FILLED] = 0
     if not weighted:
-        n = work.moments[side, 0]
         for k in range(begin, end):
-            n[k] = work.lengths[a, k] + work.lengths[b, k]
+            work.moments[side, 0, k] = work.lengths[2 * side, k] + work.lengths[2 * side + 1, k]
     for row in range(0 if weighted else 1, rows):
         if work.wanted[row]:
-            _join(
-                work.tables[a, row], work.tables[b, row], work.columns[a], work.columns[b],
-                begin, end, work.moments[side, row],
-            )  # fmt: skip
+            _join(work.tables, work.columns, side, row, begin, end, work.moments)
     work.state[_PLANNED + side] = end
 
 
@@ -381,37 +397,38 @@ def _plan_slots(x, y, weight, per_unit, begin, end, side, work):
     """Plan the segments that a cell's slots need, and note in which columns they will find them."""
     a = 2 * side
     b = a + 1
-    down_arm = work.arms[a]
-    up_arm = work.arms[b]
-    down_rows = work.lengths[a]
-    up_rows = work.lengths[b]
-    longest = up_rows[end - 1]
+    arms = work.arms
+    lengths = work.lengths
+    longest = lengths[b, end - 1]
     k = begin
     while k < end:
-        down_at = down_rows[k] // _BLOCK
-        up_at = up_rows[k] // _BLOCK
+        down_at = lengths[a, k] // _BLOCK
+        up_at = lengths[b, k] // _BLOCK
         # The slots whose arms end in the same two blocks.
         low = k + 1
         high = end
         while low < high:
             middle = (low + high) // 2
-            if down_rows[middle] >= down_at * _BLOCK and up_rows[middle] < (up_at + 1) * _BLOCK:
+            if (
+                lengths[a, middle] >= down_at * _BLOCK
+                and lengths[b, middle] < (up_at + 1) * _BLOCK
+            ):
                 low = middle + 1
             else:
                 high = middle
-        if max(down_arm[_FILLED], up_arm[_FILLED]) + _BLOCK + 1 > _COLUMNS:
+        if max(arms[a, _FILLED], arms[b, _FILLED]) + _BLOCK + 1 > _COLUMNS:
             _tabulate(x, y, weight, per_unit, side, k, work)
-        if down_at != down_arm[_AT]:
-            rows = down_rows[k] - down_at * _BLOCK
+        if down_at != arms[a, _AT]:
+            rows = lengths[a, k] - down_at * _BLOCK
             _add_segment(x, y, weight, per_unit, a, down_at, rows, work)
-        if up_at != up_arm[_AT]:
+        if up_at != arms[b, _AT]:
             rows = min(longest - up_at * _BLOCK, _BLOCK - 1)
             _add_segment(x, y, weight, per_unit, b, up_at, rows, work)
-        down_shift = work.segments[a, down_arm[_SEGMENTS] - 1, _COLUMN] - down_at * _BLOCK
-        up_shift = work.segments[b, up_arm[_SEGMENTS] - 1, _COLUMN] - up_at * _BLOCK
+        down_shift = work.segments[a, arms[a, _SEGMENTS] - 1, _COLUMN] - down_at * _BLOCK
+        up_shift = work.segments[b, arms[b, _SEGMENTS] - 1, _COLUMN] - up_at * _BLOCK
         for slot in range(k, low):
-            work.columns[a, slot] = down_rows[slot] + down_shift
-            work.columns[b, slot] = up_rows[slot] + up_shift
+            work.columns[a, slot] = lengths[a, slot] + down_shift
+            work.columns[b, slot] = lengths[b, slot] + up_shift
         k = low
 
 

@@ -51,7 +51,9 @@ def build(
     else:
         places = np.array(list(points), float)
     columns: dict[str, list[float]] = {
-        name: [] for name in ("estimate", "slope", "std_error", "effective_rows", "residual_sd")
+        name: [] for name in (
+            "estimate", "slope", "slope_std_error", "std_error", "effective_rows", "residual_sd",
+        )
     }
     status = []
     for place in places:
@@ -74,6 +76,7 @@ def build(
         columns["estimate"].append(mean)
         columns["slope"].append(slope)
         columns["std_error"].append(sd / np.sqrt(effective))
+        columns["slope_std_error"].append(sd / np.sqrt(effective))
         columns["effective_rows"].append(effective)
         columns["residual_sd"].append(sd)
         status.append(THIN if effective < told["least_rows"] else EDGE if cut else OK)

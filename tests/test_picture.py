@@ -379,6 +379,24 @@ def test_one_outlier_does_not_widen_the_picture():
     assert low > plain[0] - 0.2 * (plain[1] - plain[0])
 
 
+@pytest.mark.parametrize("spread", [0.5, 20.0])
+def test_code_for_missing_does_not_widen_the_picture(spread):
+    curve = CASES["plain"]()
+    cells = np.linspace(-500.0, 500.0, 97)
+    sampled = np.zeros((160, 96))
+    middles = 0.5 * (cells[1:] + cells[:-1])
+    sampled[:] = np.exp(-0.5 * ((middles - 70.0) / spread) ** 2)
+    sampled[:, 0] = 0.02 * sampled.sum(axis=1)
+    low, high = limits(
+        replace(curve, density=replace(curve.density, y_edges=cells, sampled=sampled))
+    )
+    assert low > -200.0
+    assert high < 300.0
+    if spread < 1.0:
+        # All rows are in one cell, so the curve alone decides.
+        assert high - low < 120.0
+
+
 def test_cells_too_coarse_for_the_bulk_are_left_out_and_that_is_said(pictures):
     curve = CASES["outlier"]()
     low, high = limits(curve)
@@ -946,6 +964,14 @@ def test_summer_time_does_not_hide_the_days():
     assert all(re.fullmatch(r"\d+ (Mar|Apr)", text) for text in made.ticks.texts)
     local = [moment.hour for moment in num2date(made.ticks.places, tz=ZoneInfo("Europe/Madrid"))]
     assert set(local) == {0}
+
+
+@pytest.mark.parametrize("moment", ["2026-03-29 00:20", "2026-10-25 00:20"])
+def test_hour_of_a_change_of_the_clock(moment):
+    start = TIMES.from_user(moment)
+    made = shown(TIMES, start, start + 5838.0)
+    assert made.ticks.places == sorted(set(made.ticks.places))
+    assert all(re.fullmatch(r"\d\d:\d\d", text) for text in made.ticks.texts)
 
 
 def test_durations_take_a_unit_that_suits():

@@ -30,10 +30,13 @@ from fastsmooth.report.scales import Shown, Ticks, number_ticks, short_count
 
 Floats = NDArray[np.float64]
 
-# Cells beyond these shares of the sample do not widen the picture.
+# Cells beyond these shares of the sample do not widen the picture, nor do cells farther from the
+# middle of the sample than so many times its height: a code for missing may take a percent.
 _BULK = (0.005, 0.995)
-# A bulk that lies in fewer cells is drawn too coarsely to say where the rows are.
-_LEAST_BULK_CELLS = 4
+_MIDDLE = (0.1, 0.9)
+_MIDDLE_REACH = 3
+# A middle that lies in fewer cells is drawn too coarsely to say where the rows are.
+_LEAST_CELLS = 3
 # How far poorly supported parts may widen the picture, in heights of the well supported one.
 _REACH = 0.5
 _MARGIN = 0.06
@@ -97,7 +100,7 @@ def cells_are_coarse(curve: Curve) -> bool:
     """Whether far values of y make the cells so high that they say nothing about the bulk."""
     low, high = y_ends(curve)
     edges = curve.density.y_edges
-    return high - low < _LEAST_BULK_CELLS * float(edges[1] - edges[0])
+    return high - low < _LEAST_CELLS * float(edges[1] - edges[0])
 
 
 def _span(values: Floats, columns: Floats) -> tuple[float, float]:
@@ -115,13 +118,14 @@ def _bulk(curve: Curve) -> Floats:
     if not total > 0.0:
         return np.empty(0)
     shares = np.cumsum(per_cell) / total
-    first = int(np.searchsorted(shares, _BULK[0]))
-    last = min(int(np.searchsorted(shares, _BULK[1])), per_cell.size - 1)
-    edges = curve.density.y_edges
-    known = np.isfinite(curve.estimate).any()
-    if last - first + 1 < min(_LEAST_BULK_CELLS, per_cell.size) and known:
+    ends = np.searchsorted(shares, (*_BULK, *_MIDDLE)).clip(max=per_cell.size - 1)
+    first, last, low, high = ends.tolist()
+    height = high - low + 1
+    if height < min(_LEAST_CELLS, per_cell.size) and np.isfinite(curve.estimate).any():
         return np.empty(0)
-    return edges[[first, last + 1]]
+    first = max(first, low - _MIDDLE_REACH * height)
+    last = min(last, high + _MIDDLE_REACH * height)
+    return curve.density.y_edges[[first, last + 1]]
 
 
 def has_unsampled_rows(curve: Curve) -> bool:

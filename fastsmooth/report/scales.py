@@ -11,7 +11,7 @@ from typing import NamedTuple
 from zoneinfo import ZoneInfo
 
 import numpy as np
-from matplotlib.dates import AutoDateLocator, num2date
+from matplotlib.dates import MINUTELY, SECONDLY, AutoDateLocator, num2date
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
@@ -23,6 +23,7 @@ _MINUS = "\N{MINUS SIGN}"
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 _STEPS = [1, 2, 2.5, 5, 10]
+_SIXTIETHS = [1, 2, 5, 10, 15, 30]
 _MOST_TICKS = 8
 # Linear steps read better than 1, 2, 5 where a log axis spans less than this factor.
 _SHORT_LOG_SPAN = 4.0
@@ -286,10 +287,14 @@ def _linear(low: float, high: float, most: int) -> list[float]:
 def _fits(
     ticks: Ticks, ends: tuple[float, float], length_in: float, measure: Callable[[str], float]
 ) -> bool:
-    low, high = ends
-    track = Track(lambda x: (x - low) / (high - low) * length_in, measure)
     texts = dict(zip(ticks.places, ticks.texts, strict=True))
-    return len(track.fitting(ticks.places, texts.__getitem__)) == len(texts)
+    kept = _track(ends, length_in, measure).fitting(ticks.places, texts.__getitem__)
+    return len(kept) == len(texts)
+
+
+def _track(ends: tuple[float, float], length_in: float, measure: Callable[[str], float]) -> Track:
+    low, high = ends
+    return Track(lambda x: (x - low) / (high - low) * length_in, measure)
 
 
 def _days(axis: Axis, x: Floats) -> Floats:
@@ -305,12 +310,21 @@ def _calendar(
     first, last = num2date(days, tz=zone)
     for most in range(_MOST_TICKS, 2, -1):
         locator = AutoDateLocator(tz=zone, minticks=3, maxticks=most)
-        places = [float(one) for one in locator.tick_values(first, last)]
+        # Steps of two as well: from one to five is too far for a span of ten.
+        locator.intervald[MINUTELY] = locator.intervald[SECONDLY] = _SIXTIETHS
+        # Where summer time begins or ends, some come twice.
+        places = sorted({float(one) for one in locator.tick_values(first, last)})
         places = [one for one in places if days[0] <= one <= days[1]]
         moments = num2date(places, tz=zone)
         ticks = Ticks(places, *_moment_texts(moments, (first, last)))
         if _fits(ticks, (float(days[0]), float(days[1])), length_in, measure):
             break
+    else:
+        # Days that step over the end of a month can lie close together at any count.
+        texts = dict(zip(ticks.places, ticks.texts, strict=True))
+        track = _track((float(days[0]), float(days[1])), length_in, measure)
+        kept = track.fitting(ticks.places, texts.__getitem__)
+        ticks = Ticks(kept, [texts[place] for place in kept], ticks.note)
     unit = axis.zone or ""
     return Shown(lambda x: _days(axis, x), ticks, named(name, unit, ticks.note))
 

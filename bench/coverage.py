@@ -1,0 +1,327 @@
+"""Do bands cover the mean as often as they say, and is the chosen width a good one?
+
+`python -m bench.coverage` draws data whose mean is known, many times over, and counts. A cell of
+the study is one truth, one kind of noise, one way in which x varies and one size. For each cell:
+
+- how often the pointwise band holds the mean, averaged over the supported points (status ``ok``
+  or ``edge``), and how often the simultaneous band holds all of it;
+- how much wider the integrated squared error is at the width that leave-block-out chose than at
+  the best width, in the mean over all runs;
+- the same bands made as if rows were independent, at the width that leave-one-out chose.
+"""
+
+from __future__ import annotations
+
+import argparse
+import itertools
+import math
+import os
+import time
+import zlib
+from collections.abc import Callable
+from concurrent.futures import ProcessPoolExecutor
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+
+# Two processes share the machine already; their libraries must not start threads of their own.
+for _name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"):
+    os.environ.setdefault(_name, "1")
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.bands import Occupied, Points, estimate_noise, fit_points
+from fastsmooth.bintable import BinTable, Pyramid
+from fastsmooth.blocks import fold_of_number
+from fastsmooth.curve import EDGE, OK
+from fastsmooth.plan import Plan
+from fastsmooth.search import search_table
+from fastsmooth.settings import Band
+from fastsmooth.smoother import fit_level, least_weight
+
+Floats = NDArray[np.float64]
+
+LOW_C, HIGH_C = 0.0, 24.0
+FOLDS = 32
+POINTS = 101
+WIDTHS = 24
+LEVEL = 0.95
+BINS = 2048
+# The search goes down to this part of the range; no truth here asks for so narrow a width.
+NARROWEST = 60.0
+ESTIMATOR = "local-linear"
+KERNEL = "biweight"
+NOISE_SD_KW = 1.0
+FIRST_DAY = 20_454  # 2026-01-01
+
+# What the bands owe.
+POINTWISE = (0.92, 0.97)
+SIMULTANEOUS = (0.90, 0.98)
+MOST_EXCESS = 1.15
+
+
+def step(wet_bulb_c: Floats) -> Floats:
+    """Machines that come on within two degrees."""
+    return 20.0 + 6.0 / (1.0 + np.exp(-(wet_bulb_c - 13.0) / 0.6))
+
+
+def wave(wet_bulb_c: Floats) -> Floats:
+    """Two and a half turns over the range."""
+    return 20.0 + 2.0 * np.sin(2.0 * math.pi * wet_bulb_c / 9.6)
+
+
+def line(wet_bulb_c: Floats) -> Floats:
+    """A straight line: no width is too wide."""
+    return 18.0 + 0.3 * wet_bulb_c
+
+
+def bump(wet_bulb_c: Floats) -> Floats:
+    """Flat but for one bump."""
+    return 20.0 + 4.0 * np.exp(-0.5 * ((wet_bulb_c - 9.0) / 1.2) ** 2)
+
+
+TRUTHS: dict[str, Callable[[Floats], Floats]] = {
+    "step": step, "wave": wave, "line": line, "bump": bump,
+}  # fmt: skip
+
+
+def wandering(rng: np.random.Generator, days: int, rows_per_day: int) -> Floats:
+    """Wet-bulb temperature through a season and through each day, (days, rows_per_day)."""
+    from scipy.signal import lfilter
+
+    weather = lfilter([math.sqrt(1.0 - 0.6**2)], [1.0, -0.6], rng.normal(size=days))
+    season = 12.0 + 5.0 * np.sin(2.0 * math.pi * (np.arange(days) / days + rng.uniform()))
+    hour = np.arange(rows_per_day) / rows_per_day
+    swing = rng.uniform(2.0, 5.0, days)[:, np.newaxis]
+    mean = (season + 1.8 * weather)[:, np.newaxis]
+    x = mean + swing * np.sin(2.0 * math.pi * (hour - 0.35)) + 0.1 * rng.normal(size=(days, hour.size))
+    # Readings beyond the range are rare and would have few days to themselves.
+    return np.clip(x, LOW_C, HIGH_C) + 1e-3 * rng.uniform(size=x.shape)
+
+
+def uniform(rng: np.random.Generator, days: int, rows_per_day: int) -> Floats:
+    """Any temperature at any time, (days, rows_per_day)."""
+    return rng.uniform(LOW_C, HIGH_C, (days, rows_per_day))
+
+
+DESIGNS: dict[str, Callable[[np.random.Generator, int, int], Floats]] = {
+    "wandering": wandering, "uniform": uniform,
+}  # fmt: skip
+
+
+def autoregressive(rho: float) -> Callable[[np.random.Generator, Floats], Floats]:
+    """Each reading resembles the one before it; days are independent."""
+
+    def draw(rng: np.random.Generator, x: Floats) -> Floats:
+        from scipy.signal import lfilter
+
+        news = math.sqrt(1.0 - rho * rho) * rng.normal(size=x.shape)
+        # The first reading of a day comes from the stationary distribution.
+        news[:, 0] = rng.normal(size=x.shape[0])
+        return np.asarray(lfilter([1.0], [1.0, -rho], news, axis=1))
+
+    return draw
+
+
+def independent(rng: np.random.Generator, x: Floats) -> Floats:
+    """Normal, all rows independent."""
+    return rng.normal(size=x.shape)
+
+
+def uneven(rng: np.random.Generator, x: Floats) -> Floats:
+    """Independent, three times the spread when hot."""
+    return rng.normal(size=x.shape) * (0.5 + (x - LOW_C) / (HIGH_C - LOW_C))
+
+
+def heavy_tailed(rng: np.random.Generator, x: Floats) -> Floats:
+    """Student's t with three degrees of freedom, scaled to variance one."""
+    return rng.standard_t(3.0, x.shape) / math.sqrt(3.0)
+
+
+def day_effects(rng: np.random.Generator, x: Floats) -> Floats:
+    """A level of its own for every day, and independent noise."""
+    return 0.6 * rng.normal(size=(x.shape[0], 1)) + 0.8 * rng.normal(size=x.shape)
+
+
+NOISES: dict[str, Callable[[np.random.Generator, Floats], Floats]] = {
+    "independent": independent, "uneven": uneven, "heavy-tailed": heavy_tailed,
+    "AR 0.5": autoregressive(0.5), "AR 0.9": autoregressive(0.9), "AR 0.99": autoregressive(0.99),
+    "day effects": day_effects,
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Cell:
+    """One set of circumstances."""
+
+    truth: str
+    noise: str
+    design: str
+    days: int
+    rows_per_day: int
+
+    def __str__(self) -> str:
+        return f"{self.truth}, {self.noise}, {self.design}, {self.days} x {self.rows_per_day}"
+
+
+@dataclass(frozen=True)
+class Run:
+    """What one draw of data gave; `(2,)` arrays are by block, by row."""
+
+    width: Floats
+    error: Floats
+    errors_on_grid: Floats
+    pointwise: Floats
+    simultaneous: Floats
+    half_width: Floats
+    half_width_for_all: Floats
+    supported: float
+
+
+def draw_table(cell: Cell, seed: int, run: int) -> BinTable:
+    """Draw the rows of one run into a bin table whose folds are whole days."""
+    rng = np.random.default_rng([seed, zlib.crc32(str(cell).encode()), run])
+    x = DESIGNS[cell.design](rng, cell.days, cell.rows_per_day)
+    y = TRUTHS[cell.truth](x) + NOISE_SD_KW * NOISES[cell.noise](rng, x)
+    plan = Plan.simple(float(x.min()), float(x.max()), BINS, FOLDS)
+    table = BinTable(replace(plan, reference=20.0, pilot=(20.0,)))
+    folds = [fold_of_number(FIRST_DAY + day, FOLDS) for day in range(cell.days)]
+    for fold, one_x, one_y in zip(folds, x, y, strict=True):
+        table.add_rows(fold, np.ascontiguousarray(one_x), np.ascontiguousarray(one_y))
+    return table
+
+
+def one_run(cell: Cell, seed: int, run: int) -> Run:
+    """Draw, search, and compare with the truth."""
+    from fastsmooth.kernels.shapes import SHAPES
+
+    shape = SHAPES[KERNEL]
+    table = draw_table(cell, seed, run)
+    pyramid = Pyramid(table)
+    low, high = table.extent.tolist()
+    found = search_table(
+        table, pyramid, shape, criterion="leave-block-out", by_block=True, widths=WIDTHS,
+        bounds=((high - low) / NARROWEST, high - low),
+    ).trails[ESTIMATOR]  # fmt: skip
+    x = np.linspace(low, high, POINTS)
+    truth = TRUTHS[cell.truth](x)
+    empty = least_weight(pyramid, shape)
+    finest = pyramid.levels[0]
+    occupied = Occupied(finest.origin, finest.width, np.flatnonzero(finest.first[0]))
+
+    def points(width: float, band: Band, by_block: bool) -> Points:
+        level = pyramid.levels[pyramid.level_for(width, shape.bins_per_bandwidth)]
+        fits = fit_level(level, shape, width, empty)
+        noise = estimate_noise(fits, ESTIMATOR, shape, band.noise)
+        return fit_points(
+            x, fits, noise, shape, estimator=ESTIMATOR, reference=table.plan.reference, band=band,
+            by_block=by_block, extent=(low, high), occupied=occupied,
+        )  # fmt: skip
+
+    widths = np.array([found.bandwidth, found.leave_one_out_bandwidth])
+    error, covered, covered_all, half, half_all = (np.empty(2) for _ in range(5))
+    good = np.zeros(POINTS, bool)
+    for place, by_block in enumerate((True, False)):
+        at, for_all = (
+            points(widths[place], Band(level=LEVEL, kind=kind), by_block)
+            for kind in ("pointwise", "simultaneous")
+        )
+        if by_block:
+            good = (at.status == OK) | (at.status == EDGE)
+        error[place] = np.mean((at.estimate - truth)[good] ** 2)
+        inside = (at.lower <= truth) & (truth <= at.upper)
+        covered[place] = inside[good].mean()
+        covered_all[place] = ((for_all.lower <= truth) & (truth <= for_all.upper))[good].all()
+        half[place] = np.mean((0.5 * (at.upper - at.lower))[good])
+        half_all[place] = np.mean((0.5 * (for_all.upper - for_all.lower))[good])
+    on_grid = np.empty(WIDTHS)
+    for place, width in enumerate(common_widths().tolist()):
+        level = pyramid.levels[pyramid.level_for(width, shape.bins_per_bandwidth)]
+        fitted = fit_level(level, shape, width, empty).values[ESTIMATOR]
+        # Fits at bin centres lie so close that a line between them is the curve.
+        curve = np.interp(x, level.centres, fitted) + table.plan.reference
+        on_grid[place] = np.mean((curve - truth)[good] ** 2)
+    on_grid[~np.isfinite(on_grid)] = math.inf
+    return Run(widths, error, on_grid, covered, covered_all, half, half_all, float(good.mean()))
+
+
+def common_widths() -> Floats:
+    """The widths among which the best is sought, the same in all runs."""
+    return np.geomspace((HIGH_C - LOW_C) / NARROWEST, HIGH_C - LOW_C, WIDTHS)
+
+
+@dataclass(frozen=True)
+class Result:
+    """A cell's means over its runs."""
+
+    cell: Cell
+    runs: int
+    width: float
+    best_width: float
+    excess: float
+    excess_each: float
+    excess_by_row: float
+    pointwise: Floats
+    simultaneous: Floats
+    half_width: Floats
+    half_width_for_all: Floats
+    supported: float
+    seconds: float = field(compare=False)
+
+    @property
+    def kept(self) -> bool:
+        """Whether the cell's bands by block keep what they owe."""
+        return bool(
+            POINTWISE[0] <= self.pointwise[0] <= POINTWISE[1]
+            and SIMULTANEOUS[0] <= self.simultaneous[0] <= SIMULTANEOUS[1]
+        )
+
+    @property
+    def shortfall(self) -> float:
+        """How far the worse of the two coverages lies from the nominal level, in allowances."""
+        away = [
+            (LEVEL - value) / (LEVEL - low) if value < LEVEL else (value - LEVEL) / (high - LEVEL)
+            for value, (low, high) in (
+                (float(self.pointwise[0]), POINTWISE), (float(self.simultaneous[0]), SIMULTANEOUS),
+            )
+        ]  # fmt: skip
+        return max(away)
+
+
+def summarise(cell: Cell, runs: list[Run], seconds: float) -> Result:
+    """Average the runs of a cell."""
+    errors = np.array([run.error for run in runs])
+    on_grid = np.array([run.errors_on_grid for run in runs])
+    mean_on_grid = on_grid.mean(axis=0)
+    best = int(np.argmin(mean_on_grid))
+    best_each = np.minimum(on_grid.min(axis=1), errors[:, 0])
+
+    def mean(name: str) -> Floats:
+        return np.mean([getattr(run, name) for run in runs], axis=0)
+
+    return Result(
+        cell=cell, runs=len(runs), width=float(np.median([run.width[0] for run in runs])),
+        best_width=float(common_widths()[best]),
+        excess=float(errors[:, 0].mean() / mean_on_grid[best]),
+        excess_each=float(errors[:, 0].mean() / best_each.mean()),
+        excess_by_row=float(errors[:, 1].mean() / mean_on_grid[best]),
+        pointwise=mean("pointwise"), simultaneous=mean("simultaneous"),
+        half_width=mean("half_width"), half_width_for_all=mean("half_width_for_all"),
+        supported=float(mean("supported")), seconds=seconds,
+    )  # fmt: skip
+
+
+def study_cell(cell: Cell, runs: int, seed: int) -> Result:
+    """Run one cell."""
+    start = time.process_time()
+    done = [one_run(cell, seed, run) for run in range(runs)]
+    return summarise(cell, done, time.process_time() - start)
+
+
+def all_cells() -> list[Cell]:
+    """Return the cells of the whole study."""
+    sizes = ((96, 288),)
+    return [
+        Cell(truth, noise, design, *size)
+        for truth, noise, design, size in itertools.product(TRUTHS, NOISES, DESIGNS, sizes)
+    ]
