@@ -231,7 +231,10 @@ def _density(counted: Counted, pyramid: Pyramid, log: bool) -> Density:
     inside = (x >= low) & (x <= high)
     x, y = x[inside], y[inside]
     if y.size:
-        bottom, top = (float(q) for q in np.quantile(y, (0.002, 0.998)))
+        bottom, low_y, high_y, top = (float(q) for q in np.quantile(y, (0.002, 0.05, 0.95, 0.998)))
+        # A code for missing readings must not stretch the cells.
+        bottom = max(bottom, low_y - (high_y - low_y))
+        top = min(top, high_y + (high_y - low_y))
     else:
         bottom = top = plan.reference
     margin = 0.05 * (top - bottom) or max(abs(top), 1.0) * 0.01

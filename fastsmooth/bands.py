@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from fastsmooth.bintable import Level
 from fastsmooth.critical import arc_length_of, pointwise_value, simultaneous_value
-from fastsmooth.curve import EDGE, OK, OUTSIDE, THIN
+from fastsmooth.curve import EDGE, FEWEST_FOLDS, OK, OUTSIDE, THIN
 from fastsmooth.jackknife import leave_out_folds
 from fastsmooth.localweights import (
     CONSTANT,
@@ -34,11 +34,10 @@ Floats = NDArray[np.float64]
 _VARIANCE_MULTIPLES = (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0, 12.0, 16.0)
 _VARIANCE_GROUPS = 8
 _VARIANCE_BINS_PER_BANDWIDTH = 16
-# A window that meets fewer folds of blocks is thin, however many rows it holds.
-FEWEST_FOLDS = 12
 # Chords between the weights of neighbouring points follow their path this closely.
 _POINTS_PER_BANDWIDTH = 10
 _MOST_POINTS = 2000
+_LEAST_DEGREES = 2.0
 
 
 @dataclass(frozen=True)
@@ -284,7 +283,8 @@ def fit_points(
     if band.kind == "simultaneous":
         value = _value_for_all(x, status, degrees, fits, noise, shape, centred, band, by_block)
     with np.errstate(invalid="ignore"):
-        half = value * std_error
+        # With fewer degrees of freedom t quantiles say more about t than about the data.
+        half = np.where(degrees >= _LEAST_DEGREES, value * std_error, np.nan)
     slope = slope_of(sums, shape, h, estimator) / level.width
     if estimator == "local-constant":
         slope_error = np.full_like(slope_error, np.nan)

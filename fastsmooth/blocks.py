@@ -193,7 +193,8 @@ def _unit_starts(
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Starts of all units that touch [low, high], in ticks, and the number of each unit."""
     per_second = _SECONDS[tick]
-    margin = 2 * 86_400
+    # A week that touches `low` may begin seven days before it; zones shift by up to a day.
+    margin = 9 * 86_400
     seconds = np.array([low // per_second - margin, high // per_second + margin])
     code = {"hour": "h", "day": "D", "week": "D", "month": "M"}[unit]
     ends = seconds.astype("datetime64[s]").astype(f"datetime64[{code}]")

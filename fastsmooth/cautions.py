@@ -7,9 +7,8 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from fastsmooth.bands import FEWEST_FOLDS
 from fastsmooth.bintable import BinTable
-from fastsmooth.curve import OUTSIDE, THIN, Caution, Curve
+from fastsmooth.curve import FEWEST_FOLDS, OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
 from fastsmooth.source import Source
 

@@ -250,7 +250,7 @@ def demo(folder: str, as_json: bool, quiet: bool) -> None:
     """Write a year of invented readings to FOLDER and make their curve and picture there."""
     from pathlib import Path
 
-    from fastsmooth.demo import WHERE, run_demo
+    from fastsmooth.demo import BLOCK, WHERE, run_demo
 
     with _progress(quiet) as progress:
         made = run_demo(Path(folder), progress)
@@ -259,7 +259,8 @@ def demo(folder: str, as_json: bool, quiet: bool) -> None:
             "invented   one plant, a year of minute readings, 12 Parquet files; same as:",
             f"           fastsmooth curve {folder}/data --x wet_bulb_c --y power_kw "
             f"--where \"{WHERE}\" \\",
-            f"               --out {folder}/curve.parquet --plot {folder}/curve.png",
+            f"               --block {BLOCK} --out {folder}/curve.parquet \\",
+            f"               --plot {folder}/curve.png",
             "",
         ])  # fmt: skip
     names = ("curve.parquet", "curve.csv", "curve.png")

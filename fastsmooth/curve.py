@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 
 STATUSES = ("ok", "thin", "edge", "outside")
 OK, THIN, EDGE, OUTSIDE = range(4)
+# A window that meets fewer folds of blocks is thin, however many rows it holds.
+FEWEST_FOLDS = 12
 CURVE_KEY = b"fastsmooth.curve"
 FORMAT = 1
 

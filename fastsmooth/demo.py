@@ -14,6 +14,7 @@ SEED = 20_260_101
 MINUTES = 365 * 24 * 60
 FAULT_CODE = -9999.0
 WHERE = "power_kw <> -9999"
+BLOCK = "logged_at:day"
 
 
 def true_power_kw(wet_bulb_c: np.ndarray) -> np.ndarray:
@@ -50,7 +51,9 @@ def write_demo_data(folder: Path) -> Path:
         + rng.normal(0.0, 0.15, MINUTES)
     )
     spread = 1.6 + 0.11 * np.clip(wet_bulb_c, 0.0, None)
-    power_kw = true_power_kw(wet_bulb_c) + spread * rng.standard_normal(MINUTES)
+    # Dirt, door openings, a slow controller: minutes of one day resemble each other.
+    habits = _wander(rng, MINUTES, 0.997, 1.3)
+    power_kw = true_power_kw(wet_bulb_c) + habits + spread * rng.standard_normal(MINUTES)
     wet_bulb_c, power_kw = wet_bulb_c.round(2), power_kw.round(2)
     missing = rng.random(MINUTES) < 2e-4
     power_kw[rng.random(MINUTES) < 3e-4] = FAULT_CODE
@@ -106,8 +109,9 @@ def run_demo(folder: Path, progress: Progress = silent) -> Curve:
 
     data = write_demo_data(folder)
     made = make_curve(
-        data, "wet_bulb_c", "power_kw", reading=Reading(where=WHERE), progress=progress
-    )
+        data, "wet_bulb_c", "power_kw", reading=Reading(where=WHERE, block=BLOCK),
+        progress=progress,
+    )  # fmt: skip
     for name in ("curve.parquet", "curve.csv"):
         made.save(folder / name)
     made.plot(folder / "curve.png")

@@ -127,8 +127,11 @@ class Trail:
         for name, value in vars(self).items():
             if isinstance(value, np.ndarray):
                 plain[name] = [one if math.isfinite(one) else None for one in value.tolist()]
+            elif isinstance(value, tuple):
+                plain[name] = list(value)
             else:
-                plain[name] = list(value) if isinstance(value, tuple) else value
+                finite = not isinstance(value, float) or math.isfinite(value)
+                plain[name] = value if finite else None
         return plain
 
     @classmethod
@@ -141,7 +144,7 @@ class Trail:
             elif isinstance(value, list):
                 made[name] = np.array([math.inf if one is None else one for one in value])
             else:
-                made[name] = value
+                made[name] = math.inf if value is None else value
         return cls(**made)
 
 

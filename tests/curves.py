@@ -39,7 +39,8 @@ def build(
     told = {
         "x": "wet_bulb_c", "y": "power_kw", "x_unit": "°C", "y_unit": "kW", "scale": "linear",
         "kernel": "biweight", "estimator": "local-linear", "criterion": "leave-one-out",
-        "bandwidth": None, "level": 0.95, "bias": "corrected", "noise": "local",
+        "bandwidth": None, "level": 0.95, "band": "pointwise", "block": None,
+        "bias": "corrected", "noise": "local",
         "least_rows": 30.0, **settings,
     }  # fmt: skip
     log = told["scale"] == "log"

@@ -6,7 +6,7 @@ import re
 
 import numpy as np
 
-from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve
+from fastsmooth.curve import EDGE, FEWEST_FOLDS, OUTSIDE, THIN, Curve
 from fastsmooth.report.scales import named
 
 HOW_TO_READ_CRITERIA = (
@@ -62,7 +62,7 @@ def subtitle(curve: Curve) -> str:
     covers = "mean" if told["bias"] == "corrected" else "smoothed mean, its bias ignored"
     # 99.9 percent must not become 100.
     return (
-        f"{sentence} Around it the pointwise {100.0 * told['level']:.6g} % band for the {covers}."
+        f"{sentence} Around it the {told['band']} {100.0 * told['level']:.6g} % band for the {covers}."
     )
 
 
@@ -94,7 +94,8 @@ def reading_notes(curve: Curve, coarse_cells: bool, unsampled: bool) -> str:
         notes.append("Dotted (edge): the window is cut off by the end of the data.")
     if (curve.status == THIN).any():
         least = curve.settings["least_rows"]
-        notes.append(f"Dashed (thin): fewer than {least:g} effective rows.")
+        folds = f", or fewer than {FEWEST_FOLDS} folds of blocks" if curve.settings["block"] else ""
+        notes.append(f"Dashed (thin): fewer than {least:g} effective rows{folds}.")
     if coarse_cells:
         notes.append("Rows are not shown: far values of y make their cells too coarse.")
     elif unsampled:
