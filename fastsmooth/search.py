@@ -15,6 +15,7 @@ from fastsmooth.bintable import BinTable, Level, Pyramid
 from fastsmooth.errors import InputError
 from fastsmooth.settings import ESTIMATORS
 from fastsmooth.smoother import (
+    Fits,
     Scores,
     fit_level,
     fold_sums,
@@ -40,6 +41,7 @@ _SHARE_SUPPORTED = 0.95
 _PLACES_PER_WINDOW = 4
 _FEWER_BINS = 4
 _MANY_ROWS = 1e5
+_LEAST_HEARD = 0.99
 _REFINED = 1e-3  # of log h
 _REFINED_BY_FOLD = 1e-2
 # Where the other folds' rows lie this far to one side, a fold's row asks for extrapolation.
@@ -292,20 +294,19 @@ def search_table(
         Too few distinct x.
     """
     low, high = bounds or _interval(table)
-    # Logarithms are of widths in bins: then x times a power of two gives h times it, to the bit.
-    unit = table.plan.width
-    grid = np.geomspace(low / unit, high / unit, widths) * unit
-    empty = least_weight(pyramid, shape)
-    keep, rows_alone = _voters(pyramid, shape, low, empty)
-    scored = pyramid if keep is None else Pyramid(table, keep)
-    left_out = None
-    if by_block:
-        keep_folds, rows_alone = _fold_voters(pyramid, shape, low, empty)
-        left_out = Pyramid(table, keep_folds)
-    job = _Job(pyramid, shape, empty, scored, left_out)
+    grid = np.geomspace(low, high, widths)
+    job = _Job(pyramid, shape)
     with ThreadPoolExecutor(threads) as pool:
-        points = list(pool.map(job.scores, grid.tolist()))
-        by_fold = list(pool.map(job.left_out_scores, grid.tolist())) if by_block else []
+        fits = list(pool.map(job.fit, grid.tolist()))
+        keep, rows_alone = _voters(pyramid, fits)
+        if keep is not None:
+            job.scored = Pyramid(table, keep)
+        points = list(pool.map(job.scores_of, fits))
+        by_fold = []
+        if by_block:
+            keep_folds, rows_alone = _fold_voters(pyramid, shape, low, job.empty)
+            job.left_out = Pyramid(table, keep_folds)
+            by_fold = list(pool.map(job.left_out_scores, grid.tolist()))
         trails = dict(
             zip(
                 ESTIMATORS,
@@ -326,28 +327,27 @@ def _interval(table: BinTable) -> tuple[float, float]:
     return narrowest, widest
 
 
-def _voters(
-    pyramid: Pyramid, shape: Shape, narrowest: float, empty: float
-) -> tuple[NDArray[np.bool_] | None, float]:
-    """Bins whose rows have a leave-one-out prediction at the narrowest width, for both estimators.
+def _voters(pyramid: Pyramid, fits: list[Fits]) -> tuple[NDArray[np.bool_] | None, float]:
+    """Bins of the finest level whose rows have a leave-one-out prediction at every width.
 
-    The criterion is taken over these rows at every width: a set that changed with the width
-    would compare unlike things.
+    The criterion is taken over the same rows at every width and for both estimators: a set that
+    changed with the width would compare unlike things.
     """
     finest = pyramid.levels[0]
-    level = pyramid.levels[pyramid.level_for(narrowest, shape.bins_per_bandwidth)]
-    fits = fit_level(level, shape, narrowest, empty)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        mean_weight = np.where(level.first[0] > 0.0, level.first[0] / level.count, 0.0)
-    keep = np.ones(level.bins, bool)
-    for name in ESTIMATORS:
-        leverage = fits.chords[name][2] * mean_weight
-        # Beyond this, room is a difference of nearly equal binned sums.
-        keep &= leverage < _MOST_LEVERAGE
-    lost = (level.first[0] > 0.0) & ~keep
+    lost = np.zeros(finest.bins, bool)
+    for fit in fits:
+        level = fit.level
+        with np.errstate(invalid="ignore", divide="ignore"):
+            mean_weight = np.where(level.count > 0.0, level.first[0] / level.count, 0.0)
+        for name in ESTIMATORS:
+            # Beyond this, room is a difference of nearly equal binned sums.
+            alone = ~(fit.chords[name][2] * mean_weight < _MOST_LEVERAGE) & (level.count > 0.0)
+            if alone.any():
+                lost |= np.repeat(alone, finest.bins // level.bins)
+    lost &= finest.count > 0.0
     if not lost.any():
         return None, 0.0
-    return np.repeat(keep, finest.bins // level.bins), float(level.count[lost].sum())
+    return ~lost, float(finest.count[lost].sum())
 
 
 def _fold_voters(
@@ -373,31 +373,34 @@ def _fold_voters(
 class _Job:
     """Scores of both estimators at any bandwidth."""
 
-    def __init__(
-        self, pyramid: Pyramid, shape: Shape, empty: float, scored: Pyramid, left_out: Pyramid | None
-    ) -> None:
+    def __init__(self, pyramid: Pyramid, shape: Shape) -> None:
         self.pyramid = pyramid
         self.shape = shape
-        self.empty = empty
-        # Rows that vote on leave-one-out and, where blocks are left out, on that.
-        self.scored = scored
-        self.left_out = left_out
-
+        self.empty = least_weight(pyramid, shape)
         self.bins_per_bandwidth = _bins_per_bandwidth(pyramid, shape)
+        # Rows that vote on leave-one-out and, where blocks are left out, on that.
+        self.scored = pyramid
+        self.left_out: Pyramid | None = None
 
     def level(self, bandwidth: float) -> int:
         return self.pyramid.level_for(bandwidth, self.bins_per_bandwidth)
 
-    def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
-        """Score every row against the others."""
+    def fit(self, bandwidth: float, level: int | None = None) -> Fits:
         index = self.level(bandwidth) if level is None else level
-        fits = fit_level(self.pyramid.levels[index], self.shape, bandwidth, self.empty)
-        scored = self.scored.levels[index]
+        return fit_level(self.pyramid.levels[index], self.shape, bandwidth, self.empty)
+
+    def scores_of(self, fits: Fits) -> dict[str, _Point]:
+        """Score every voting row against the others."""
+        scored = next(one for one in self.scored.levels if one.bins == fits.level.bins)
         points = {}
         for name in ESTIMATORS:
             scores = score_level(fits, name, scored)
+            bandwidth = fits.bandwidth_bins * fits.level.width
             points[name] = _point_of(bandwidth, scores, fold_sums(scored, scores), scored)
         return points
+
+    def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
+        return self.scores_of(self.fit(bandwidth, level))
 
     def left_out_scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
         """Score every fold against the others."""
@@ -429,13 +432,18 @@ def _bins_per_bandwidth(pyramid: Pyramid, shape: Shape) -> int:
     """
     many = float(pyramid.levels[-1].count.sum()) >= _MANY_ROWS
     smooth = shape.smoothness >= 2
-    return max(4, shape.bins_per_bandwidth // _FEWER_BINS) if many and smooth else shape.bins_per_bandwidth
+    return (
+        max(4, shape.bins_per_bandwidth // _FEWER_BINS)
+        if many and smooth
+        else shape.bins_per_bandwidth
+    )
 
 
 def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
     n, weight = float(scored.count.sum()), float(scored.first[0].sum())
-    # A width at which a voter has no prediction cannot be compared with the others.
-    loo = scores.score / weight if scores.lost == 0.0 else math.inf
+    # Voters have predictions at every width of the grid; between its widths one may be missing.
+    heard = weight - scores.lost
+    loo = scores.score / heard if heard > _LEAST_HEARD * weight else math.inf
     variance = scores.residual / weight
     room = 1.0 - scores.trace / n
     gcv = variance / room**2 if room > 0.0 else math.inf
@@ -469,12 +477,16 @@ def _trail(
     if criterion == "plug-in":
         from fastsmooth.plugin import plug_in_bandwidth
 
-        bandwidth = float(np.clip(plug_in_bandwidth(job.pyramid, job.shape, name), grid[0], grid[-1]))
+        bandwidth = float(
+            np.clip(plug_in_bandwidth(job.pyramid, job.shape, name), grid[0], grid[-1])
+        )
         best = job.scores(bandwidth)[name]
     else:
         by_fold = criterion == "leave-block-out"
         choosing = [point[name] for point in left_out] if by_fold else mine
-        best = _refine(job, name, grid, [point.criteria[criterion] for point in choosing], criterion)
+        best = _refine(
+            job, name, grid, [point.criteria[criterion] for point in choosing], criterion
+        )
     by_row = best if criterion == "leave-one-out" else None
     if by_row is None:
         values = [point.criteria["leave-one-out"] for point in mine]

@@ -55,48 +55,42 @@ _COLUMNS = _SLOTS + 3 * _BLOCK  # of an arm's table: as many rows as its slots m
 _REACH = 16  # windows that end before this many rows on either side are summed row by row
 _STRIDE = 8  # added to the length of work rows, so that they do not share cache sets
 _ONE = np.uint64(1)
-# Entries of `Work.state`.
-_CELL_START, _CELL_END, _LOW, _HIGH, _PLANNED = range(5)
-# Entries of an arm: where it begins, its step, the block of the last segment (-1: none), how many
-# blocks the growing carry holds, segments and columns in use.
+# Columns of `Work.arms`: where the arm begins, its step, the block of the last segment (-1: none),
+# how many blocks the growing carry holds, segments and columns in use. One more row holds the
+# cell's first row and the row after its last, and the edges of the last window.
 _ORIGIN, _STEP, _AT, _CARRIED, _SEGMENTS, _FILLED = range(6)
-# Entries of a segment: first row, rows, first column.
+_CELL_START, _CELL_END, _LOW, _HIGH = range(4)
+# Columns of `Work.segments`: first row, rows, first column.
 _FIRST, _ROWS, _COLUMN = range(3)
+# Rows of `Work.places`: the window's edges; then for every arm its rows, and their column.
+_LOWS, _HIGHS, _LENGTHS, _COLUMNS_OF = 0, 1, 2, 6
 
 
 class Work(NamedTuple):
-    """Work space for one range of rows: allocated once, passed to the kernels of the range.
+    """Work space for one range of rows, allocated once.
 
     Arms come in pairs, one that shortens from row to row (even index) and one that grows (odd);
     kernels in u have one pair, kernels in |u| two: left and right of x_i.
     """
 
-    state: np.ndarray  # the cell, the edges of the last window, slots tabulated per pair
-    centre: np.ndarray  # (1,) place about which the cell's power sums are taken
-    wanted: np.ndarray  # (rows,) power sums that the kernel needs
-    terms: np.ndarray  # (4, columns) v, w v^q, w y v^q, w of the rows in the segments
-    arms: np.ndarray  # (arms, 6)
+    arms: np.ndarray  # (arms + 1, 6)
     segments: np.ndarray  # (arms, slots, 3)
-    centres: np.ndarray  # (arms, slots) each segment's cell's centre
+    places: np.ndarray  # (10, slots)
+    centres: np.ndarray  # (arms + 1, slots) each segment's centre; last row: the cell's
+    terms: np.ndarray  # (4, columns) v, w v^q, w y v^q, w of the rows in the segments
     carries: np.ndarray  # (arms, blocks, rows) power sums up to each block; see `_start_arm`
     tables: np.ndarray  # (arms, rows, columns) growing power sums over each segment
-    lengths: np.ndarray  # (arms, slots) rows in each arm
-    columns: np.ndarray  # (arms, slots) where the tables hold them
     moments: np.ndarray  # (pairs of arms, rows, slots) power sums about the slot's centre
-    edges: np.ndarray  # (2, slots)
-    shift: np.ndarray  # (slots,) (centre - x) / h
-    sums: np.ndarray  # (3 degree + 2, slots) the result: S_0, S_1, ..., then T_0, T_1, ...
+    sums: np.ndarray  # (3 degree + 3, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h
 
 
-_INTEGERS = types.int64[:, ::1]
-WORK = types.NamedTuple(
-    [
-        types.int64[::1], WRITE_1D, types.boolean[::1], WRITE_2D, _INTEGERS,
-        types.int64[:, :, ::1], WRITE_2D, WRITE_3D, WRITE_3D, _INTEGERS, _INTEGERS, WRITE_3D,
-        _INTEGERS, WRITE_1D, WRITE_2D,
-    ],
-    Work,
+_INTEGERS_2D = types.int64[:, ::1]
+_INTEGERS_3D = types.int64[:, :, ::1]
+_WORK_TYPES = (
+    _INTEGERS_2D, _INTEGERS_3D, _INTEGERS_2D, WRITE_2D, WRITE_2D, WRITE_3D, WRITE_3D, WRITE_3D,
+    WRITE_2D,
 )  # fmt: skip
+WORK = types.NamedTuple(_WORK_TYPES, Work)
 
 
 @helper
@@ -181,10 +175,7 @@ def _add_one(terms, row, count):
     return total
 
 
-@kernel(
-    types.void(READ_1D, READ_1D, READ_1D, types.int64, types.int64, types.float64, types.float64,
-               types.int64, types.int64, WRITE_2D, WRITE_3D)
-)  # fmt: skip
+@helper
 def _add_block(x, y, weight, first, count, centre, per_unit, arm, at, terms, carries):
     """Add the power sums of rows first, first + 1, ... to carries[arm, at]."""
     pairs = (carries.shape[2] - 1) // 2
@@ -195,7 +186,7 @@ def _add_block(x, y, weight, first, count, centre, per_unit, arm, at, terms, car
 
 
 @kernel(
-    types.void(WRITE_2D, types.int64[:, :, ::1], types.int64, types.int64, types.boolean,
+    types.void(WRITE_2D, _INTEGERS_3D, types.int64, types.int64, types.boolean,
                types.int64, types.int64, WRITE_3D)
 )  # fmt: skip
 def _scan_four(terms, segments, arm, count, down, s_row, t_row, tables):
@@ -262,7 +253,7 @@ def _scan_four(terms, segments, arm, count, down, s_row, t_row, tables):
 
 
 @kernel(
-    types.void(READ_2D, types.int64[:, :, ::1], types.int64, types.int64, types.boolean, WRITE_3D)
+    types.void(READ_2D, _INTEGERS_3D, types.int64, types.int64, types.boolean, WRITE_3D)
 )
 def _scan_one(terms, segments, arm, count, down, tables):
     """Growing sums of the weights; otherwise as `_scan_four`."""
@@ -277,92 +268,104 @@ def _scan_one(terms, segments, arm, count, down, tables):
             out[column + 1 + k] = total
 
 
-@kernel(types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, WORK))
-def _start_arm(x, y, weight, per_unit, arm, longest, work):
-    """Prepare the carries of an arm whose origin was set: power sums over its first blocks.
+# The following are inlined, and slice nothing: a compiled function that calls others counts
+# references to all its arrays, at 5 ns each, on every call.
+
+
+@helper
+def _start_arm(x, y, weight, per_unit, arm, origin, longest, arms, centres, terms, carries):
+    """Set an arm to an origin, and sum its blocks where it shortens.
 
     An arm that shortens needs its farthest block first, so all its blocks are summed now, up
-    to `longest` rows. An arm that grows is summed as it grows: row 0 of its carries.
+    to `longest` rows: carries[arm, k] holds k blocks. An arm that grows is summed as it grows:
+    carries[arm, 0].
     """
-    arms = work.arms
-    carries = work.carries
+    arms[arm, _ORIGIN] = origin
     arms[arm, _AT] = -1
     arms[arm, _CARRIED] = 0
-    rows = carries.shape[2]
-    for row in range(rows):
+    powers = carries.shape[2]
+    for row in range(powers):
         carries[arm, 0, row] = 0.0
-    if arms[arm, _STEP] > 0:
-        return
-    for at in range(longest // _BLOCK):
-        for row in range(rows):
+    blocks = longest // _BLOCK if arms[arm, _STEP] < 0 else 0
+    for at in range(blocks):
+        for row in range(powers):
             carries[arm, at + 1, row] = 0.0
-        first = arms[arm, _ORIGIN] - (at + 1) * _BLOCK
-        _add_block(
-            x, y, weight, first, _BLOCK, work.centre[0], per_unit, arm, at + 1, work.terms, carries
-        )
-        for row in range(rows):
+        first = origin - (at + 1) * _BLOCK
+        centre = centres[arms.shape[0] - 1, 0]
+        _add_block(x, y, weight, first, _BLOCK, centre, per_unit, arm, at + 1, terms, carries)
+        for row in range(powers):
             carries[arm, at + 1, row] += carries[arm, at, row]
 
 
-@kernel(
-    types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, types.int64,
-               WORK)
-)  # fmt: skip
-def _add_segment(x, y, weight, per_unit, arm, at, rows, work):
+@helper
+def _add_segment(
+    x, y, weight, per_unit, arm, at, rows, arms, segments, centres, terms, carries, tables
+):
     """Plan a segment: the first `rows` rows of block `at` of an arm, on top of its carry."""
-    arms = work.arms
-    carries = work.carries
     powers = carries.shape[2]
-    centre = work.centre[0]
+    centre = centres[arms.shape[0] - 1, 0]
     origin = arms[arm, _ORIGIN]
     down = arms[arm, _STEP] < 0
-    if not down:
-        for passed in range(arms[arm, _CARRIED], at):
-            for row in range(powers):
-                carries[arm, 1, row] = 0.0
-            first = origin + passed * _BLOCK
-            _add_block(
-                x, y, weight, first, _BLOCK, centre, per_unit, arm, 1, work.terms, carries
-            )
-            for row in range(powers):
-                carries[arm, 0, row] += carries[arm, 1, row]
-        arms[arm, _CARRIED] = max(arms[arm, _CARRIED], at)
+    passed = at if down else arms[arm, _CARRIED]
+    while passed < at:
+        for row in range(powers):
+            carries[arm, 1, row] = 0.0
+        first = origin + passed * _BLOCK
+        _add_block(x, y, weight, first, _BLOCK, centre, per_unit, arm, 1, terms, carries)
+        for row in range(powers):
+            carries[arm, 0, row] += carries[arm, 1, row]
+        passed += 1
+    arms[arm, _CARRIED] = passed
     segment = arms[arm, _SEGMENTS]
     column = arms[arm, _FILLED]
-    first = origin - at * _BLOCK - rows if down else origin + at * _BLOCK
-    work.segments[arm, segment, _FIRST] = first
-    work.segments[arm, segment, _ROWS] = rows
-    work.segments[arm, segment, _COLUMN] = column
-    work.centres[arm, segment] = centre
+    segments[arm, segment, _FIRST] = origin - at * _BLOCK - rows if down else origin + at * _BLOCK
+    segments[arm, segment, _ROWS] = rows
+    segments[arm, segment, _COLUMN] = column
+    centres[arm, segment] = centre
     source = at if down else 0
     for row in range(powers):
-        work.tables[arm, row, column] = carries[arm, source, row]
+        tables[arm, row, column] = carries[arm, source, row]
     arms[arm, _AT] = at
     arms[arm, _SEGMENTS] = segment + 1
     arms[arm, _FILLED] = column + rows + 1
 
 
-@kernel(types.void(READ_3D, types.int64[:, ::1], types.int64, types.int64, types.int64, types.int64,
-                   WRITE_3D))  # fmt: skip
-def _join(tables, columns, side, row, begin, end, moments):
-    """Sum over a window = sum over the arm that shortens + sum over the arm that grows."""
-    down = tables[2 * side, row]
-    up = tables[2 * side + 1, row]
-    down_columns = columns[2 * side]
-    up_columns = columns[2 * side + 1]
-    out = moments[side, row]
-    for k in range(np.uint64(begin), np.uint64(end)):
-        out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
+@kernel(
+    types.void(READ_3D, _INTEGERS_2D, types.int64, types.int64, types.int64, types.int64,
+               types.int64, types.boolean, WRITE_3D)
+)  # fmt: skip
+def _join(tables, places, side, begin, end, s_top, t_top, weighted, moments):
+    """Sum over a window = sum over the arm that shortens + sum over the arm that grows.
+
+    For S_0 (a count of rows, where all weights are 1) to S_s_top, and T_0 to T_t_top.
+    """
+    pairs = (tables.shape[1] - 1) // 2
+    a = 2 * side
+    down_columns = places[_COLUMNS_OF + a]
+    up_columns = places[_COLUMNS_OF + a + 1]
+    for row in range(2 + pairs + t_top):
+        if s_top < row <= pairs:
+            continue
+        out = moments[side, row]
+        if row == 0 and not weighted:
+            down_rows = places[_LENGTHS + a]
+            up_rows = places[_LENGTHS + a + 1]
+            for k in range(begin, end):
+                out[k] = down_rows[k] + up_rows[k]
+            continue
+        down = tables[a, row]
+        up = tables[a + 1, row]
+        for k in range(np.uint64(begin), np.uint64(end)):
+            out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
 
 
-@kernel(types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, WORK))
-def _tabulate(x, y, weight, per_unit, side, end, work):
-    """Make the tables of a pair of arms, and join them for the slots planned, up to `end`."""
-    begin = work.state[_PLANNED + side]
-    arms = work.arms
-    segments = work.segments
-    rows = work.tables.shape[1]
-    pairs = (rows - 1) // 2
+@helper
+def _tabulate(
+    x, y, weight, per_unit, top, degree, side, begin, end, arms, segments, places, centres, terms,
+    tables, moments,
+):  # fmt: skip
+    """Make the tables of a pair of arms, and join them for the slots planned, begin to end."""
+    pairs = (tables.shape[1] - 1) // 2
     weighted = weight.shape[0] > 0
     for arm in range(2 * side, 2 * side + 2):
         count = arms[arm, _SEGMENTS]
@@ -370,69 +373,68 @@ def _tabulate(x, y, weight, per_unit, side, end, work):
         for segment in range(count):
             _load(
                 x, y, weight, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
-                work.centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1,
-                work.terms,
+                centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1, terms,
             )  # fmt: skip
         if weighted:
-            _scan_one(work.terms, segments, arm, count, down, work.tables)
+            _scan_one(terms, segments, arm, count, down, tables)
         for q in range(0, pairs, 4):
-            _scan_four(work.terms, segments, arm, count, down, 1 + q, 1 + pairs + q, work.tables)
+            _scan_four(terms, segments, arm, count, down, 1 + q, 1 + pairs + q, tables)
         arms[arm, _AT] = -1
         arms[arm, _SEGMENTS] = 0
         arms[arm, _FILLED] = 0
-    if not weighted:
-        for k in range(begin, end):
-            work.moments[side, 0, k] = work.lengths[2 * side, k] + work.lengths[2 * side + 1, k]
-    for row in range(0 if weighted else 1, rows):
-        if work.wanted[row]:
-            _join(work.tables, work.columns, side, row, begin, end, work.moments)
-    work.state[_PLANNED + side] = end
+    _join(tables, places, side, begin, end, top + 2 * degree, top + degree, weighted, moments)
 
 
-@kernel(
-    types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64, types.int64,
-               WORK)
-)  # fmt: skip
-def _plan_slots(x, y, weight, per_unit, begin, end, side, work):
-    """Plan the segments that a cell's slots need, and note in which columns they will find them."""
+@helper
+def _plan_slots(
+    x, y, weight, per_unit, top, degree, side, begin, end, planned, arms, segments, places,
+    centres, terms, carries, tables, moments,
+):  # fmt: skip
+    """Plan the segments that a cell's slots need, and note in which columns they will find them.
+
+    Slots from `planned` on await their tables; where the tables fill up, they are made at once.
+    Returns from which slot on they are still awaited.
+    """
     a = 2 * side
-    b = a + 1
-    arms = work.arms
-    lengths = work.lengths
-    longest = lengths[b, end - 1]
+    longest = places[_LENGTHS + a + 1, end - 1]
     k = begin
     while k < end:
-        down_at = lengths[a, k] // _BLOCK
-        up_at = lengths[b, k] // _BLOCK
+        down_at = places[_LENGTHS + a, k] // _BLOCK
+        up_at = places[_LENGTHS + a + 1, k] // _BLOCK
         # The slots whose arms end in the same two blocks.
         low = k + 1
         high = end
         while low < high:
             middle = (low + high) // 2
             if (
-                lengths[a, middle] >= down_at * _BLOCK
-                and lengths[b, middle] < (up_at + 1) * _BLOCK
+                places[_LENGTHS + a, middle] >= down_at * _BLOCK
+                and places[_LENGTHS + a + 1, middle] < (up_at + 1) * _BLOCK
             ):
                 low = middle + 1
             else:
                 high = middle
-        if max(arms[a, _FILLED], arms[b, _FILLED]) + _BLOCK + 1 > _COLUMNS:
-            _tabulate(x, y, weight, per_unit, side, k, work)
-        if down_at != arms[a, _AT]:
-            rows = lengths[a, k] - down_at * _BLOCK
-            _add_segment(x, y, weight, per_unit, a, down_at, rows, work)
-        if up_at != arms[b, _AT]:
-            rows = min(longest - up_at * _BLOCK, _BLOCK - 1)
-            _add_segment(x, y, weight, per_unit, b, up_at, rows, work)
-        down_shift = work.segments[a, arms[a, _SEGMENTS] - 1, _COLUMN] - down_at * _BLOCK
-        up_shift = work.segments[b, arms[b, _SEGMENTS] - 1, _COLUMN] - up_at * _BLOCK
-        for slot in range(k, low):
-            work.columns[a, slot] = lengths[a, slot] + down_shift
-            work.columns[b, slot] = lengths[b, slot] + up_shift
+        if max(arms[a, _FILLED], arms[a + 1, _FILLED]) + _BLOCK + 1 > _COLUMNS:
+            _tabulate(
+                x, y, weight, per_unit, top, degree, side, planned, k, arms, segments, places,
+                centres, terms, tables, moments,
+            )  # fmt: skip
+            planned = k
+        for arm in range(a, a + 2):
+            at = down_at if arm == a else up_at
+            if at != arms[arm, _AT]:
+                rows = min(places[_LENGTHS + a, k] if arm == a else longest, at * _BLOCK + _BLOCK - 1)
+                _add_segment(
+                    x, y, weight, per_unit, arm, at, rows - at * _BLOCK, arms, segments, centres,
+                    terms, carries, tables,
+                )  # fmt: skip
+            shift = segments[arm, arms[arm, _SEGMENTS] - 1, _COLUMN] - at * _BLOCK
+            for slot in range(k, low):
+                places[_COLUMNS_OF + arm, slot] = places[_LENGTHS + arm, slot] + shift
         k = low
+    return planned
 
 
-@kernel(types.int64(READ_1D, types.int64, types.float64, types.float64))
+@helper
 def first_beyond(x, start, place, reach):
     """Return the first index from `start` on with x - place > reach, or n; by doubling steps."""
     n = x.shape[0]
@@ -452,7 +454,7 @@ def first_beyond(x, start, place, reach):
     return low
 
 
-@kernel(types.int64(READ_1D, types.int64, types.float64, types.float64))
+@helper
 def first_within(x, start, place, reach):
     """Return the first index from `start` on with place - x <= reach, or n; by doubling steps."""
     n = x.shape[0]
@@ -504,23 +506,25 @@ def _step_low(x, j, place, reach):
     return j
 
 
-@kernel(types.void(READ_1D, types.float64, types.int64, types.int64, WRITE_INT_1D, WRITE_INT_1D,
-                   WRITE_INT_1D))  # fmt: skip
-def _find_edges(x, bandwidth, first, count, edges, lows, highs):
+@kernel(types.void(READ_1D, types.float64, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_2D))
+def _find_edges(x, bandwidth, first, count, arms, places):
     """Windows of rows first, first + 1, ...: row r of slot k is in it when lows <= r < highs.
 
-    `edges` (2,) holds indices not above the first row's edges, and gets the last row's. Four
+    The last row of `arms` holds indices not above the first row's edges, and gets the last's. Four
     stretches of rows go side by side, each looking four rows ahead: a jump on every comparison
     costs three times as much on irregular data (measured 11 against 4 ns a row).
     """
     n = x.shape[0]
-    low = first_within(x, edges[0], x[first], bandwidth)
-    high = first_beyond(x, edges[1], x[first], bandwidth)
+    lows = places[_LOWS]
+    highs = places[_HIGHS]
+    state = arms.shape[0] - 1
+    low = first_within(x, arms[state, _LOW], x[first], bandwidth)
+    high = first_beyond(x, arms[state, _HIGH], x[first], bandwidth)
     last = x[first + count - 1]
     last_low = first_within(x, low, last, bandwidth)
     last_high = first_beyond(x, high, last, bandwidth)
-    edges[0] = last_low
-    edges[1] = last_high
+    arms[state, _LOW] = last_low
+    arms[state, _HIGH] = last_high
     quarter = count // 4 if last_high + 4 <= n else 0
     if quarter > 0:
         k1 = np.uint64(quarter)
@@ -531,10 +535,10 @@ def _find_edges(x, bandwidth, first, count, edges, lows, highs):
         h0 = np.uint64(high)
         l1 = np.uint64(first_within(x, low, xs[k1], bandwidth))
         h1 = np.uint64(first_beyond(x, high, xs[k1], bandwidth))
-        l2 = np.uint64(first_within(x, l1, xs[k2], bandwidth))
-        h2 = np.uint64(first_beyond(x, h1, xs[k2], bandwidth))
-        l3 = np.uint64(first_within(x, l2, xs[k3], bandwidth))
-        h3 = np.uint64(first_beyond(x, h2, xs[k3], bandwidth))
+        l2 = np.uint64(first_within(x, np.int64(l1), xs[k2], bandwidth))
+        h2 = np.uint64(first_beyond(x, np.int64(h1), xs[k2], bandwidth))
+        l3 = np.uint64(first_within(x, np.int64(l2), xs[k3], bandwidth))
+        h3 = np.uint64(first_beyond(x, np.int64(h2), xs[k3], bandwidth))
         for k in range(k1):
             place = xs[k]
             l0 = _step_low(x, l0, place, bandwidth)
@@ -640,21 +644,22 @@ def _add_neighbours(
 
 
 @kernel(
-    types.void(WRITE_2D, READ_1D, READ_1D, types.boolean, types.int64, types.int64, types.int64,
-               WRITE_2D)
-)  # fmt: skip
-def _add_sums(moments, shift, coefficients, left, degree, pairs, count, sums):
-    """Add kernel sums made of power sums about a centre: `shift` (slots,) is (centre - x_i) / h.
+    types.void(WRITE_3D, READ_1D, types.int64, types.boolean, types.int64, types.int64, WRITE_2D)
+)
+def _add_sums(moments, coefficients, side, left, degree, count, sums):
+    """Add kernel sums made of power sums about a centre; last row of `sums`: (centre - x_i) / h.
 
     Moved to x_i by sum w (v + s)^r = sum w v (v + s)^(r-1) + s sum w (v + s)^(r-1), in place.
     `left`: the rows lie left of x_i, where |u|^q = (-1)^q u^q.
     """
     top = coefficients.shape[0] - 1
+    pairs = (moments.shape[1] - 1) // 2
+    shift = sums[3 * degree + 2]
     for first, last in ((0, top + 2 * degree), (1 + pairs, 1 + pairs + top + degree)):
         for start in range(first + 1, last + 1):
             for row in range(last, start - 1, -1):
-                upper = moments[row]
-                lower = moments[row - 1]
+                upper = moments[side, row]
+                lower = moments[side, row - 1]
                 for k in range(count):
                     upper[k] += shift[k] * lower[k]
     for j in range(3 * degree + 2):
@@ -666,7 +671,7 @@ def _add_sums(moments, shift, coefficients, left, degree, pairs, count, sums):
                 continue
             if left and q % 2 == 1:
                 c = -c
-            source = moments[row + q]
+            source = moments[side, row + q]
             for k in range(count):
                 out[k] += c * source[k]
 
@@ -683,114 +688,107 @@ def make_work(n, coefficients, degree):
             sides = 2
     pairs = _round_up(max(top + 2 * degree, top + degree + 1))
     rows = 2 * pairs + 1
-    arms = np.zeros((2 * sides, 6), np.int64)
-    for index in range(2 * sides):
-        arms[index, _STEP] = 1 if index % 2 else -1
-    wanted = np.zeros(rows, np.bool_)
-    wanted[: top + 2 * degree + 1] = True
-    wanted[1 + pairs : 2 + pairs + top + degree] = True
+    count = 2 * sides
+    arms = np.zeros((count + 1, 6), np.int64)
+    for arm in range(count):
+        arms[arm, _STEP] = 1 if arm % 2 else -1
     slots = _SLOTS + _STRIDE
     columns = _COLUMNS + _STRIDE
     return Work(
-        np.zeros(6, np.int64),
-        np.zeros(1),
-        wanted,
-        np.zeros((4, columns)),
         arms,
-        np.zeros((2 * sides, _SLOTS, 3), np.int64),
-        np.zeros((2 * sides, _SLOTS)),
-        np.empty((2 * sides, n // _BLOCK + 2, rows)),
-        np.zeros((2 * sides, rows, columns)),
-        np.zeros((2 * sides, slots), np.int64),
-        np.zeros((2 * sides, slots), np.int64),
+        np.zeros((count, _SLOTS, 3), np.int64),
+        np.zeros((10, slots), np.int64),
+        np.zeros((count + 1, _SLOTS)),
+        np.zeros((4, columns)),
+        np.empty((count, n // _BLOCK + 2, rows)),
+        np.zeros((count, rows, columns)),
         np.zeros((sides, rows, slots)),
-        np.zeros((2, slots), np.int64),
-        np.zeros(slots),
-        np.zeros((3 * degree + 2, slots)),
+        np.zeros((3 * degree + 3, slots)),
     )
 
 
-@kernel(types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, WORK))
-def _start_cell(x, y, weight, per_unit, slot, work):
-    """Set up the cell that begins at the row of a slot: its centre and its arms."""
-    start = work.state[_CELL_START]
-    end = work.state[_CELL_END]
-    # A row of the cell is in the windows of all rows of the cell. So where a window's rows all
-    # but coincide, its power sums are taken about one of them, and keep their relative accuracy.
-    work.centre[0] = x[(start + end) // 2]
-    for index in range(work.arms.shape[0]):
-        left = index < 2
-        work.arms[index, _ORIGIN] = start if left else end
-        longest = start - work.edges[0, slot] if left else end - start - 1
-        _start_arm(x, y, weight, per_unit, index, longest, work)
+@kernel(types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
+                   types.int64, *_WORK_TYPES))  # fmt: skip
+def fill_sums(
+    x, y, weight, coefficients, bandwidth, degree, first, count,
+    arms, segments, places, centres, terms, carries, tables, moments, sums,
+):  # fmt: skip
+    """Put the kernel sums of rows first, first + 1, ... (at most `_SLOTS`) into `sums`.
 
-
-@kernel(
-    types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
-               types.int64, WORK)
-)  # fmt: skip
-def fill_sums(x, y, weight, coefficients, bandwidth, degree, first, count, work):
-    """Put the kernel sums of rows first, first + 1, ... (at most `_SLOTS`) into `work.sums`.
-
-    Ranges must follow each other: `work` carries the cell from one call to the next.
+    Ranges must follow each other: the work arrays carry the cell from one call to the next.
     """
-    sums = work.sums
-    sums[:] = 0.0
-    state = work.state
+    for row in range(3 * degree + 2):
+        for k in range(count):
+            sums[row, k] = 0.0
+    state = arms.shape[0] - 1
     if _all_short(x, bandwidth, first, count):
-        _add_neighbours(
-            x, y, weight, coefficients, bandwidth, degree, first, count, 0, work.terms, sums
-        )
-        for offset in range(1, _REACH):
+        _add_neighbours(x, y, weight, coefficients, bandwidth, degree, first, count, 0, terms, sums)
+        offset = 1
+        met = 1
+        while met > 0 and offset < _REACH:
             met = 0
-            for signed in (offset, -offset):
+            for sign in range(-1, 2, 2):
                 met += _add_neighbours(
-                    x, y, weight, coefficients, bandwidth, degree, first, count, signed,
-                    work.terms, sums,
+                    x, y, weight, coefficients, bandwidth, degree, first, count, sign * offset,
+                    terms, sums,
                 )  # fmt: skip
-            if met == 0:
-                break
-        state[_CELL_END] = first + count
+            offset += 1
+        arms[state, _CELL_END] = first + count
         return
-    lows = work.edges[0]
-    highs = work.edges[1]
-    _find_edges(x, bandwidth, first, count, state[_LOW:], lows, highs)
-    sides = work.moments.shape[0]
-    lengths = work.lengths
+    _find_edges(x, bandwidth, first, count, arms, places)
+    sides = moments.shape[0]
+    top = coefficients.shape[0] - 1
     per_unit = 1.0 / bandwidth
-    here = x[first : first + count]
-    state[_PLANNED:] = 0
+    left = 0  # slots tabulated left and right
+    right = 0
     k = 0
     while k < count:
-        if first + k >= state[_CELL_END]:
-            state[_CELL_START] = first + k
-            state[_CELL_END] = highs[k]
-            _start_cell(x, y, weight, per_unit, k, work)
-        start = state[_CELL_START]
-        end = state[_CELL_END]
+        if first + k >= arms[state, _CELL_END]:
+            start = first + k
+            end = places[_HIGHS, k]
+            arms[state, _CELL_START] = start
+            arms[state, _CELL_END] = end
+            # A row of the cell is in the windows of all rows of the cell. So where a window's
+            # rows all but coincide, its power sums are taken about one of them, and keep their
+            # relative accuracy.
+            centres[state, 0] = x[(start + end) // 2]
+            for arm in range(state):
+                origin = start if arm < 2 else end
+                longest = start - places[_LOWS, k] if arm == 0 else end - start - 1
+                _start_arm(
+                    x, y, weight, per_unit, arm, origin, longest, arms, centres, terms, carries
+                )
+        start = arms[state, _CELL_START]
+        end = arms[state, _CELL_END]
         stop = min(count, end - first)
-        centre = work.centre[0]
+        centre = centres[state, 0]
         for slot in range(k, stop):
-            work.shift[slot] = (centre - here[slot]) * per_unit
-            lengths[0, slot] = start - lows[slot]
+            sums[3 * degree + 2, slot] = (centre - x[first + slot]) * per_unit
+            places[_LENGTHS, slot] = start - places[_LOWS, slot]
         if sides == 1:
             for slot in range(k, stop):
-                lengths[1, slot] = highs[slot] - start
+                places[_LENGTHS + 1, slot] = places[_HIGHS, slot] - start
         else:
             for slot in range(k, stop):
-                lengths[1, slot] = first + slot + 1 - start
-                lengths[2, slot] = end - first - slot - 1
-                lengths[3, slot] = highs[slot] - end
+                places[_LENGTHS + 1, slot] = first + slot + 1 - start
+                places[_LENGTHS + 2, slot] = end - first - slot - 1
+                places[_LENGTHS + 3, slot] = places[_HIGHS, slot] - end
         for side in range(sides):
-            _plan_slots(x, y, weight, per_unit, k, stop, side, work)
+            planned = _plan_slots(
+                x, y, weight, per_unit, top, degree, side, k, stop, left if side == 0 else right,
+                arms, segments, places, centres, terms, carries, tables, moments,
+            )  # fmt: skip
+            if side == 0:
+                left = planned
+            else:
+                right = planned
         k = stop
-    pairs = (work.tables.shape[1] - 1) // 2
     for side in range(sides):
-        _tabulate(x, y, weight, per_unit, side, count, work)
-        left = sides == 2 and side == 0
-        _add_sums(
-            work.moments[side], work.shift, coefficients, left, degree, pairs, count, sums
-        )
+        _tabulate(
+            x, y, weight, per_unit, top, degree, side, left if side == 0 else right, count,
+            arms, segments, places, centres, terms, tables, moments,
+        )  # fmt: skip
+        _add_sums(moments, coefficients, side, sides == 2 and side == 0, degree, count, sums)
 
 
 @kernel(
@@ -804,10 +802,15 @@ def window_sums(x, y, weight, coefficients, bandwidth, degree, begin, end, out):
     """
     if end <= begin:
         return
-    work = make_work(x.shape[0], coefficients, degree)
+    arms, segments, places, centres, terms, carries, tables, moments, sums = make_work(
+        x.shape[0], coefficients, degree
+    )
     for first in range(begin, end, _SLOTS):
         count = min(_SLOTS, end - first)
-        fill_sums(x, y, weight, coefficients, bandwidth, degree, first, count, work)
-        for j in range(out.shape[0]):
+        fill_sums(
+            x, y, weight, coefficients, bandwidth, degree, first, count,
+            arms, segments, places, centres, terms, carries, tables, moments, sums,
+        )  # fmt: skip
+        for j in range(3 * degree + 2):
             for k in range(count):
-                out[j, first - begin + k] = work.sums[j, k]
+                out[j, first - begin + k] = sums[j, k]
