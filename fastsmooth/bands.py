@@ -23,7 +23,7 @@ from fastsmooth.localweights import (
     weights_of,
 )
 from fastsmooth.settings import Band
-from fastsmooth.smoother import Fits, kernel_sums
+from fastsmooth.smoother import Fits, chords_of, kernel_sums
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -129,7 +129,7 @@ def estimate_noise(fits: Fits, estimator: str, shape: Shape, kind: str) -> Noise
 def _squared_residuals(fits: Fits, estimator: str, shape: Shape) -> tuple[Floats, Floats]:
     """Sums of w r^2 and their expectations over sigma^2, per group of folds and bin."""
     level = fits.level
-    value, slope, _ = fits.chords[estimator]
+    value, slope, leverage = fits.chords[estimator]
     v = kernel_sums(level.first[0:3], shape, fits.bandwidth_bins, 3, squared=True)
     s = fits.sums
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -139,10 +139,8 @@ def _squared_residuals(fits: Fits, estimator: str, shape: Shape) -> tuple[Floats
         # Windows without a slope were fitted by a constant: their leverages are the same.
         fell_back = fits.unit_leverages["local-linear"] == fits.unit_leverages["local-constant"]
         own = constant if estimator == "local-constant" else np.where(fell_back, constant, linear)
-        share = (
-            level.count - 2.0 * fits.unit_leverages[estimator] * level.first[0]
-            + own * level.first[0]
-        )  # fmt: skip
+        _, _, own = chords_of(level, fits.values[estimator], own)
+        share = level.count + (own - 2.0 * leverage) * level.first[0]
     usable = np.isfinite(value) & (level.count > 0.0) & np.isfinite(share)
     with np.errstate(invalid="ignore", divide="ignore"):
         ratio = np.where(usable, np.clip(share / level.count, 0.0, None), 0.0)

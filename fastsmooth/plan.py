@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from dataclasses import asdict, dataclass, replace
 from functools import cached_property
 from typing import Any, NamedTuple
@@ -364,11 +364,7 @@ def _pilot(sample: Sample, low: float, high: float) -> tuple[float, tuple[float,
     """Median of y in equal stretches of x; stretches without rows take the nearest one's."""
     if not sample.x.size:
         return 0.0, (0.0,)
-    # Single precision keeps the numbers short, so that subtracting them is exact more often.
-    with np.errstate(over="ignore"):
-        reference = float(np.float32(np.median(sample.y)))
-    if not math.isfinite(reference):
-        reference = 0.0
+    reference = float(np.median(sample.y))
     # Clipped as floats: a far outlier of x has no integer cell.
     cell = np.clip((sample.x - low) / (high - low) * _PILOT_NODES, 0.0, _PILOT_NODES - 1.0)
     cell = cell.astype(int)
@@ -384,9 +380,7 @@ def _pilot(sample: Sample, low: float, high: float) -> tuple[float, tuple[float,
     left = np.maximum(right - 1, 0)
     nearer = np.abs(known[left] - nodes) <= np.abs(known[right] - nodes)
     nearest = np.where(nearer, known[left], known[right])
-    with np.errstate(over="ignore"):
-        pilot = medians[nearest].astype(np.float32).astype(np.float64)
-    return reference, tuple(np.where(np.isfinite(pilot), pilot, 0.0).tolist())
+    return reference, tuple(medians[nearest].tolist())
 
 
 def _shorten_runs(plan: Plan, sample: Sample) -> Plan:

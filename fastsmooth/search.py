@@ -47,7 +47,7 @@ _REFINED_BY_FOLD = 1e-2
 # Where the other folds' rows lie this far to one side, a fold's row asks for extrapolation.
 _MOST_LOPSIDED = 0.5
 # A row that makes so much of its own fit is alone: the others hardly predict it.
-_MOST_LEVERAGE = 0.99
+_MOST_LEVERAGE = 0.999
 # A local minimum this close to the best rivals it.
 _RIVAL_SHARE = 0.1
 _GOLDEN = (math.sqrt(5.0) - 1.0) / 2.0
@@ -294,7 +294,9 @@ def search_table(
         Too few distinct x.
     """
     low, high = bounds or _interval(table)
-    grid = np.geomspace(low, high, widths)
+    # Logarithms are of widths in bins: then x times a power of two gives h times it, to the bit.
+    unit = table.plan.width
+    grid = np.geomspace(low / unit, high / unit, widths) * unit
     job = _Job(pyramid, shape)
     with ThreadPoolExecutor(threads) as pool:
         fits = list(pool.map(job.fit, grid.tolist()))

@@ -63,7 +63,7 @@ def test_norris():
     assert at_nought == pytest.approx(intercept_sd, rel=1e-9)
     assert made.slope_std_error == pytest.approx(np.full(4, slope_sd), rel=1e-8)
     assert made.effective_rows[1] < 36.0
-    assert made.trace["engine"]["equivalent_parameters"] == pytest.approx(2.0, rel=1e-9)
+    assert made.trace["fit"]["equivalent_parameters"] == pytest.approx(2.0, rel=1e-9)
 
 
 def test_gum_thermometer_calibration():
