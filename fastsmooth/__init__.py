@@ -9,8 +9,8 @@ if TYPE_CHECKING:
     from fastsmooth.curve import Caution, Curve
     from fastsmooth.errors import FastsmoothError, InputError, ReadError, WriteError
     from fastsmooth.files_out import load_curve
-    from fastsmooth.search import Search, Trail
     from fastsmooth.settings import Band, Reading, Smoothing
+    from fastsmooth.trail import Search, Trail
 
 _HOMES = {
     "make_curve": "api",
@@ -18,8 +18,8 @@ _HOMES = {
     "load_curve": "files_out",
     "Curve": "curve",
     "Caution": "curve",
-    "Search": "search",
-    "Trail": "search",
+    "Search": "trail",
+    "Trail": "trail",
     "Reading": "settings",
     "Smoothing": "settings",
     "Band": "settings",
@@ -41,8 +41,8 @@ __all__ = [
     "Smoothing",
     "Trail",
     "WriteError",
-    "make_curve",
     "load_curve",
+    "make_curve",
     "search_bandwidth",
 ]
 

@@ -14,9 +14,10 @@ from fastsmooth.curve import Curve
 from fastsmooth.errors import InputError
 from fastsmooth.kernels.shapes import SHAPES
 from fastsmooth.passes import Progress, bins_for, count_finer, count_rows, silent
-from fastsmooth.search import Search, search_table
+from fastsmooth.search import search_table
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.source import Columns, Source, open_source
+from fastsmooth.trail import Search
 
 Floats = NDArray[np.float64]
 
@@ -73,7 +74,8 @@ def make_curve(
     >>> import numpy as np
     >>> wet_bulb_c = np.linspace(0.0, 25.0, 2000)
     >>> power_kw = 20.0 + 0.04 * wet_bulb_c**2 + 0.5 * np.sin(7.0 * np.arange(2000))
-    >>> made = make_curve({"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}, "wet_bulb_c", "power_kw")
+    >>> readings = {"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}
+    >>> made = make_curve(readings, "wet_bulb_c", "power_kw")
     >>> round(float(made.at(10.0)[0]), 1)
     24.0
     """
@@ -114,7 +116,8 @@ def search_bandwidth(
     >>> import numpy as np
     >>> wet_bulb_c = np.linspace(0.0, 25.0, 2000)
     >>> power_kw = 20.0 + 3.0 * np.sin(wet_bulb_c) + 0.5 * np.sin(7.0 * np.arange(2000))
-    >>> found = search_bandwidth({"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}, "wet_bulb_c", "power_kw")
+    >>> readings = {"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}
+    >>> found = search_bandwidth(readings, "wet_bulb_c", "power_kw")
     >>> 0.3 < found.trails["local-linear"].bandwidth < 3.0
     True
     """
@@ -198,5 +201,3 @@ def _count_and_search(
             break
         counted = count_finer(source, counted, reading, bins, progress)
     return Chosen(counted, pyramid, found, shape, bandwidth, places)
-
-

@@ -23,11 +23,11 @@ from fastsmooth.curve import EDGE, OK, Curve, Density
 from fastsmooth.fitness import fit_facts
 from fastsmooth.landmarks import find_landmarks
 from fastsmooth.passes import Counted
-from fastsmooth.search import Search, Trail
 from fastsmooth.serial import serial_facts
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.smoother import fit_level, least_weight
 from fastsmooth.source import Source
+from fastsmooth.trail import Search, Trail
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -168,9 +168,7 @@ def _stretches(places: Floats, points: Points) -> list[tuple[float, float]]:
 
 def _in_axis_terms(mark: dict[str, Any], log: bool) -> dict[str, Any]:
     places = ("x", "lower", "upper")
-    return {
-        k: math.exp(v) if log and k in places and v is not None else v for k, v in mark.items()
-    }
+    return {k: math.exp(v) if log and k in places and v is not None else v for k, v in mark.items()}
 
 
 def _binning_error(
@@ -222,7 +220,9 @@ def _density(counted: Counted, pyramid: Pyramid, log: bool) -> Density:
     finest = pyramid.levels[0]
     used = np.flatnonzero(finest.count)
     # A bin's rows go to the stretch that holds their mean.
-    mean = finest.origin + finest.width * (used + 0.5 + finest.first[1, used] / finest.first[0, used])
+    mean = finest.origin + finest.width * (
+        used + 0.5 + finest.first[1, used] / finest.first[0, used]
+    )
     rows, _ = np.histogram(np.clip(mean, low, high), edges, weights=finest.count[used])
     x, y = counted.shown
     inside = np.isfinite(x) & np.isfinite(y) & ((x > 0.0) | (not log))

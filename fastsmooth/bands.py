@@ -105,7 +105,10 @@ def estimate_noise(fits: Fits, estimator: str, shape: Shape, kind: str) -> Noise
         return Noise(np.full(level.bins, overall), np.full(level.bins, room), overall, None)
     # Fewer bins suffice for a variance: at least sixteen to a bandwidth.
     step = 1
-    while fits.bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH and level.bins % (2 * step) == 0:
+    while (
+        fits.bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH
+        and level.bins % (2 * step) == 0
+    ):
         step *= 2
     groups = squared.reshape(squared.shape[0], -1, step).sum(axis=2)
     weights = expected.reshape(expected.shape[0], -1, step).sum(axis=2)
@@ -293,9 +296,7 @@ def fit_points(
     return Points(*masked, status=status)  # type: ignore[misc]  # eight columns, in order
 
 
-def values_at(
-    x: Floats, level: Level, bandwidth: float, shape: Shape, estimator: str
-) -> Floats:
+def values_at(x: Floats, level: Level, bandwidth: float, shape: Shape, estimator: str) -> Floats:
     """Return the estimate less the plan's reference at x (plan's scale), from one level."""
     h = bandwidth / level.width
     unused = np.zeros((3, level.bins))

@@ -25,7 +25,9 @@ def about_rows(table: BinTable, source: Source) -> Iterator[Caution]:
     """Yield cautions about refused rows and about folds."""
     tally = table.tally
     kept = tally.read - tally.filtered
-    refused = {k: v for k, v in tally.refused.items() if k not in ("x below range", "x above range")}
+    refused = {
+        k: v for k, v in tally.refused.items() if k not in ("x below range", "x above range")
+    }
     if kept and sum(refused.values()) > _MANY_REFUSED * kept:
         counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
         share = sum(refused.values()) / kept

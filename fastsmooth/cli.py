@@ -163,8 +163,17 @@ def _make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) ->
     smoothing = _smoothing(
         **_take(options, ("estimator", "kernel", "bandwidth", "criterion", "widths"))
     )
-    names = ("level", "band", "bias", "noise", "least_rows", "points", "at", "landmarks",
-             "crossings")
+    names = (
+        "level",
+        "band",
+        "bias",
+        "noise",
+        "least_rows",
+        "points",
+        "at",
+        "landmarks",
+        "crossings",
+    )
     band = _band(**_take(options, names)) if "level" in options else None
     return make_curve(
         data[0] if len(data) == 1 else list(data),

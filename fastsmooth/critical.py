@@ -15,7 +15,9 @@ def pointwise_value(level: float, degrees: Floats) -> Floats:
     from scipy.special import stdtrit
 
     with np.errstate(invalid="ignore"):
-        return np.where(degrees > 0.0, stdtrit(np.maximum(degrees, 1e-9), 0.5 + 0.5 * level), np.inf)
+        return np.where(
+            degrees > 0.0, stdtrit(np.maximum(degrees, 1e-9), 0.5 + 0.5 * level), np.inf
+        )
 
 
 def simultaneous_value(
@@ -55,7 +57,9 @@ def simultaneous_value(
 
     def excess(c: float) -> float:
         if math.isinf(degrees):
-            return arc_length / math.pi * math.exp(-c * c / 2.0) + stretches * 2.0 * norm.sf(c) - alpha
+            return (
+                arc_length / math.pi * math.exp(-c * c / 2.0) + stretches * 2.0 * norm.sf(c) - alpha
+            )
         tail = math.exp(-power * math.log1p(c * c / degrees))
         return arc_length / math.pi * tail + stretches * 2.0 * float(t.sf(c, degrees)) - alpha
 

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from fastsmooth.axis import Axis
 from fastsmooth.errors import InputError
-from fastsmooth.search import Search
+from fastsmooth.trail import Search
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -21,6 +21,17 @@ Floats = NDArray[np.float64]
 
 STATUSES = ("ok", "thin", "edge", "outside")
 OK, THIN, EDGE, OUTSIDE = range(4)
+# Columns of a curve's table between x and status.
+VALUES = (
+    "estimate",
+    "slope",
+    "slope_std_error",
+    "std_error",
+    "lower",
+    "upper",
+    "effective_rows",
+    "residual_sd",
+)
 # A window that meets fewer folds of blocks is thin, however many rows it holds.
 FEWEST_FOLDS = 12
 CURVE_KEY = b"fastsmooth.curve"
@@ -187,8 +198,8 @@ class Curve:
         -------
         pyarrow.Table
             Columns ``x`` (in the column's own type), ``estimate``, ``slope``,
-            ``slope_std_error``, ``std_error``, ``lower``, ``upper``, ``effective_rows``, ``residual_sd``, ``status``. Values without
-            support are null.
+            ``slope_std_error``, ``std_error``, ``lower``, ``upper``, ``effective_rows``,
+            ``residual_sd``, ``status``. Values without support are null.
         """
         import pyarrow as pa
 
@@ -196,9 +207,7 @@ class Curve:
             return pa.array(values, mask=~np.isfinite(values))
 
         columns = {"x": self.axis.to_arrow(self.x)}
-        for name in (
-            "estimate", "slope", "slope_std_error", "std_error", "lower", "upper", "effective_rows", "residual_sd",
-        ):  # fmt: skip
+        for name in VALUES:
             columns[name] = column(getattr(self, name))
         columns["status"] = pa.array(self.statuses)
         metadata = {CURVE_KEY: json.dumps(self.to_dict(), allow_nan=False).encode()}
@@ -238,13 +247,7 @@ class Curve:
                 "CURVE", f"have format {FORMAT}", f"{name} has format {told['format']}",
                 "make the curve again with this version",
             )  # fmt: skip
-        values = {
-            column: table[column].to_numpy().astype(np.float64)
-            for column in (
-                "estimate", "slope", "slope_std_error", "std_error", "lower", "upper", "effective_rows",
-                "residual_sd",
-            )
-        }  # fmt: skip
+        values = {column: table[column].to_numpy().astype(np.float64) for column in VALUES}
         return cls(
             x=np.array(told["x_floats"], np.float64),
             **values,

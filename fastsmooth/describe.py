@@ -6,8 +6,8 @@ import os
 from typing import Any
 
 from fastsmooth.curve import CURVE_KEY, Curve
-from fastsmooth.files_out import load_curve
 from fastsmooth.files import find_files
+from fastsmooth.files_out import load_curve
 from fastsmooth.source import Columns, _open_files
 from fastsmooth.summary import curve_facts, curve_lines
 
@@ -104,5 +104,3 @@ def description_lines(told: dict[str, Any]) -> list[str]:
         unit = f"  [{column['unit']}]" if column["unit"] else ""
         lines.append(f"  {column['name']:<{width}}  {column['type']}{unit}")
     return lines
-
-

@@ -17,7 +17,9 @@ DEFINITIONS = (
 )
 
 
-def fit_facts(fits: Fits, estimator: str, left_out_error: float, reference: float) -> dict[str, Any]:
+def fit_facts(
+    fits: Fits, estimator: str, left_out_error: float, reference: float
+) -> dict[str, Any]:
     """Return the figures of `DEFINITIONS` and both residual sums.
 
     Parameters
@@ -44,7 +46,9 @@ def fit_facts(fits: Fits, estimator: str, left_out_error: float, reference: floa
     shifted = level.first[3] + level.pilot * level.first[0]
     mean = float(shifted.sum()) / n
     away = level.pilot - mean
-    variance = float((level.first[6] + 2.0 * away * level.first[3] + away**2 * level.first[0]).sum()) / n
+    variance = (
+        float((level.first[6] + 2.0 * away * level.first[3] + away**2 * level.first[0]).sum()) / n
+    )
     value, slope, _ = fits.chords[estimator]
     known = np.isfinite(value)
     residual = level.first[3] - (value - level.pilot) * level.first[0] - slope * level.first[1]

@@ -103,7 +103,9 @@ def find_landmarks(
         if steepest is None or top > steepest[0]:
             steepest = (top, here)
         for place, kind in here.turning_points():
-            found.append(here.landmark(kind, place, lambda one, x: one.zero_of_slope(x), confidence))
+            found.append(
+                here.landmark(kind, place, lambda one, x: one.zero_of_slope(x), confidence)
+            )
         for wanted in crossings:
             target = wanted - reference
             for place in _zeros(here.x, here.value[0] - target):
@@ -114,7 +116,11 @@ def find_landmarks(
     if steepest is not None:
         _, here = steepest
         row = here.row(0)
-        found.append(here.landmark("steepest", row.peak_of_slope(), lambda one, _: one.peak_of_slope(), confidence))
+        found.append(
+            here.landmark(
+                "steepest", row.peak_of_slope(), lambda one, _: one.peak_of_slope(), confidence
+            )
+        )
     found.sort(key=lambda mark: mark.x)
     return [mark._replace(value=mark.value + reference) for mark in found]
 

@@ -160,7 +160,9 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
             continue
         if reading.range is not None:
             break
-        if trimmed and _rows_outside(table) > _TRIMMED_SHARE * (table.tally.used + _rows_outside(table)):
+        if trimmed and _rows_outside(table) > _TRIMMED_SHARE * (
+            table.tally.used + _rows_outside(table)
+        ):
             # The sample missed too much: give the range back.
             bounds, trimmed = full, False
             continue
@@ -285,7 +287,10 @@ def _trimmed_bounds(table: BinTable) -> tuple[float, float] | None:
     low = plan.origin + first * plan.width
     high = plan.origin + (last + 1) * plan.width
     margin = 0.5 * (high - low)
-    low, high = max(low - margin, float(table.extent[0])), min(high + margin, float(table.extent[1]))
+    low, high = (
+        max(low - margin, float(table.extent[0])),
+        min(high + margin, float(table.extent[1])),
+    )
     if (high - low) * _TRIM_GAIN > table.extent[1] - table.extent[0]:
         return None
     return low, high

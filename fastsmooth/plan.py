@@ -89,9 +89,20 @@ class Plan:
     def simple(cls, low: float, high: float, bins: int = BINS, folds: int = FOLDS) -> Plan:
         """Return a plan for a number axis without a pilot."""
         return cls(
-            Columns("x", "y"), Axis("number", "double", "", None, 0), "linear", None,
-            None, low, bin_width(low, high, bins), bins, folds, _LONGEST_RUN_ROWS, folds, 0.0, (0.0,),
-        )  # fmt: skip
+            columns=Columns("x", "y"),
+            axis=Axis("number", "double", "", None, 0),
+            scale="linear",
+            where=None,
+            block=None,
+            origin=low,
+            width=bin_width(low, high, bins),
+            bins=bins,
+            folds=folds,
+            rows_per_run=_LONGEST_RUN_ROWS,
+            folds_per_task=folds,
+            reference=0.0,
+            pilot=(0.0,),
+        )
 
     @property
     def high(self) -> float:
@@ -393,7 +404,9 @@ def _shorten_runs(plan: Plan, sample: Sample) -> Plan:
     for run in np.unique(sample.run):
         x = sample.x[sample.run == run]
         if x.size >= 2:
-            spans.append((float(x.max() - x.min()) / (x.size - 1), float(np.abs(np.diff(x)).mean())))
+            spans.append(
+                (float(x.max() - x.min()) / (x.size - 1), float(np.abs(np.diff(x)).mean()))
+            )
     if not spans:
         return plan
     # Drift: x moves one way. It is telling only if most of the movement is net movement.

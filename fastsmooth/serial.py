@@ -18,7 +18,9 @@ _CLIPPED_SD = 5.0
 _FADED = 0.05
 
 
-def autocorrelation(z: Floats, run: NDArray[np.int64], place: NDArray[np.int64], lags: int) -> Floats:
+def autocorrelation(
+    z: Floats, run: NDArray[np.int64], place: NDArray[np.int64], lags: int
+) -> Floats:
     """Return the autocorrelation of residuals at lags 0, 1, ..., over pairs of one run.
 
     Parameters

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 from dataclasses import dataclass, field
-
 from typing import TYPE_CHECKING
 
 from fastsmooth.errors import InputError

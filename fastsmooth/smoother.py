@@ -84,7 +84,9 @@ def least_weight(pyramid: Pyramid, shape: Shape) -> float:
     return _LEAST_WINDOW * shape.at_zero * (weight / rows if rows else 1.0)
 
 
-def kernel_sums(moments: Floats, shape: Shape, bandwidth_bins: float, powers: int, squared: bool) -> Floats:
+def kernel_sums(
+    moments: Floats, shape: Shape, bandwidth_bins: float, powers: int, squared: bool
+) -> Floats:
     """Return kernel sums at all bin centres.
 
     Parameters

@@ -9,7 +9,7 @@ import numpy as np
 
 from fastsmooth.curve import STATUSES, Curve
 from fastsmooth.fitness import DEFINITIONS
-from fastsmooth.search import Search, Trail
+from fastsmooth.trail import Search, Trail
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -33,8 +33,8 @@ def curve_lines(made: Curve) -> list[str]:
     lines += _width_lines(made)
     kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(
-        f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around the "
-        f"curve by {engine['residual_sd']:.4g} (residual sd)"
+        f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around "
+        f"the curve by {engine['residual_sd']:.4g} (residual sd)"
     )
     lines.append(_fit_line(made))
     lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
@@ -129,7 +129,10 @@ def _fit_line(made: Curve) -> str:
         return "none" if fit[name] is None else f"{100 * fit[name]:.3g} %"
 
     r2 = "none" if fit["r2_left_out"] is None else f"{fit['r2_left_out']:.4g}"
-    return f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, NMBE {percent('nmbe')}"
+    return (
+        f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, "
+        f"NMBE {percent('nmbe')}"
+    )
 
 
 def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
@@ -179,8 +182,8 @@ def _width_lines(made: Curve) -> list[str]:
     by_row = mine.leave_one_out_bandwidth
     if made.search.criterion == "leave-block-out" and not 0.95 < by_row / mine.bandwidth < 1.05:
         lines.append(
-            f"           leave-one-out would choose {label(by_row)}: rows of one block resemble each "
-            f"other, so it takes their common wander for signal"
+            f"           leave-one-out would choose {label(by_row)}: rows of one block resemble "
+            f"each other, so it takes their common wander for signal"
             if by_row < low
             else f"           leave-one-out would choose {label(by_row)}"
         )

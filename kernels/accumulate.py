@@ -70,9 +70,7 @@ def reason_to_refuse(x, y, weight, count, below):
 
 
 @kernel(
-    types.void(
-        WRITE_2D, READ_1D, READ_1D, types.float64, types.float64, WRITE_1D, WRITE_INT_1D
-    )
+    types.void(WRITE_2D, READ_1D, READ_1D, types.float64, types.float64, WRITE_1D, WRITE_INT_1D)
 )
 def accumulate_rows(table, x, y, origin, bins_per_unit, extent, refused):
     """Add plain rows to a table of bin moments.

@@ -60,7 +60,12 @@ _FOLDER = cache_folder()
 def _compile(function: Callable[..., Any], signature: Any, flags: set[str]) -> Any:
     def build(cache: bool) -> Any:
         return numba.njit(
-            signature, nogil=True, cache=cache, fastmath=flags, error_model="numpy", boundscheck=False
+            signature,
+            nogil=True,
+            cache=cache,
+            fastmath=flags,
+            error_model="numpy",
+            boundscheck=False,
         )(function)
 
     if _FOLDER is None:

@@ -122,9 +122,7 @@ def chords(first, value, unit_leverage, out):
         out[2, b] = leverage
 
 
-@kernel(
-    types.void(READ_2D, READ_2D, READ_1D, READ_1D, READ_1D, READ_1D, WRITE_2D, WRITE_1D)
-)
+@kernel(types.void(READ_2D, READ_2D, READ_1D, READ_1D, READ_1D, READ_1D, WRITE_2D, WRITE_1D))
 def score_bins(first, second, pilot, value, slope, unit_leverage, coefficients, out):
     """Sums over rows of what a criterion needs, from bin moments.
 

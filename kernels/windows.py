@@ -99,10 +99,7 @@ def _round_up(pairs):
     return (pairs + 3) // 4 * 4
 
 
-@kernel(
-    types.void(READ_1D, READ_1D, READ_1D, types.int64, types.int64, types.float64, types.float64,
-               types.int64, WRITE_2D)
-)  # fmt: skip
+@helper
 def _load(x, y, weight, first, count, centre, per_unit, column, terms):
     """Terms of rows first, first + 1, ...: v = (x - centre) per_unit, w v, w y, and w."""
     xs = x[first : first + count]
@@ -110,79 +107,73 @@ def _load(x, y, weight, first, count, centre, per_unit, column, terms):
     v = terms[0, column : column + count]
     a = terms[1, column : column + count]
     b = terms[2, column : column + count]
-    for k in range(count):
-        t = (xs[k] - centre) * per_unit
-        v[k] = t
-        a[k] = t
-        b[k] = ys[k]
     if weight.shape[0] > 0:
         ws = weight[first : first + count]
         w = terms[3, column : column + count]
         for k in range(count):
+            t = (xs[k] - centre) * per_unit
+            v[k] = t
+            a[k] = ws[k] * t
+            b[k] = ws[k] * ys[k]
             w[k] = ws[k]
-            a[k] *= ws[k]
-            b[k] *= ws[k]
+    else:
+        for k in range(count):
+            t = (xs[k] - centre) * per_unit
+            v[k] = t
+            a[k] = t
+            b[k] = ys[k]
 
 
 @sum_kernel(
-    types.void(WRITE_2D, types.int64, types.int64, types.int64, types.int64, types.int64, WRITE_3D)
-)
-def _add_four(terms, count, s_row, t_row, arm, at, carries):
-    """Add four pairs of power sums to carries[arm, at]; leave the next powers in `terms`."""
+    types.void(READ_1D, READ_1D, READ_1D, types.int64, types.float64, types.float64, types.int64,
+               types.int64, WRITE_2D, WRITE_3D)
+)  # fmt: skip
+def _sum_block(x, y, weight, first, centre, per_unit, arm, at, terms, carries):
+    """Put the power sums of rows first to first + _BLOCK into carries[arm, at]."""
     totals = carries[arm, at]
+    pairs = (totals.shape[0] - 1) // 2
+    _load(x, y, weight, first, _BLOCK, centre, per_unit, 0, terms)
     v = terms[0]
     a = terms[1]
     b = terms[2]
-    s1 = s2 = s3 = s4 = 0.0
-    t1 = t2 = t3 = t4 = 0.0
-    for k in range(count):
-        u = v[k]
-        p = a[k]
-        q = b[k]
-        s1 += p
-        t1 += q
-        p *= u
-        q *= u
-        s2 += p
-        t2 += q
-        p *= u
-        q *= u
-        s3 += p
-        t3 += q
-        p *= u
-        q *= u
-        s4 += p
-        t4 += q
-        a[k] = p * u
-        b[k] = q * u
-    totals[s_row] += s1
-    totals[s_row + 1] += s2
-    totals[s_row + 2] += s3
-    totals[s_row + 3] += s4
-    totals[t_row] += t1
-    totals[t_row + 1] += t2
-    totals[t_row + 2] += t3
-    totals[t_row + 3] += t4
-
-
-@sum_kernel(types.float64(READ_2D, types.int64, types.int64))
-def _add_one(terms, row, count):
-    """Sum of the first `count` terms of a row."""
-    values = terms[row]
-    total = 0.0
-    for k in range(count):
-        total += values[k]
-    return total
-
-
-@helper
-def _add_block(x, y, weight, first, count, centre, per_unit, arm, at, terms, carries):
-    """Add the power sums of rows first, first + 1, ... to carries[arm, at]."""
-    pairs = (carries.shape[2] - 1) // 2
-    _load(x, y, weight, first, count, centre, per_unit, 0, terms)
-    carries[arm, at, 0] += _add_one(terms, 3, count) if weight.shape[0] > 0 else count
-    for q in range(0, pairs, 4):
-        _add_four(terms, count, 1 + q, 1 + pairs + q, arm, at, carries)
+    totals[0] = _BLOCK
+    if weight.shape[0] > 0:
+        w = terms[3]
+        total = 0.0
+        for k in range(_BLOCK):
+            total += w[k]
+        totals[0] = total
+    for power in range(1, 1 + pairs, 4):
+        s1 = s2 = s3 = s4 = 0.0
+        t1 = t2 = t3 = t4 = 0.0
+        for k in range(_BLOCK):
+            u = v[k]
+            p = a[k]
+            q = b[k]
+            s1 += p
+            t1 += q
+            p *= u
+            q *= u
+            s2 += p
+            t2 += q
+            p *= u
+            q *= u
+            s3 += p
+            t3 += q
+            p *= u
+            q *= u
+            s4 += p
+            t4 += q
+            a[k] = p * u
+            b[k] = q * u
+        totals[power] = s1
+        totals[power + 1] = s2
+        totals[power + 2] = s3
+        totals[power + 3] = s4
+        totals[pairs + power] = t1
+        totals[pairs + power + 1] = t2
+        totals[pairs + power + 2] = t3
+        totals[pairs + power + 3] = t4
 
 
 @kernel(
@@ -268,66 +259,97 @@ def _scan_one(terms, segments, arm, count, down, tables):
             out[column + 1 + k] = total
 
 
-# The following are inlined, and slice nothing: a compiled function that calls others counts
-# references to all its arrays, at 5 ns each, on every call.
+@kernel(types.int64(READ_1D, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_2D, WRITE_2D, WRITE_3D))
+def _open_cell(x, start, slot, arms, places, centres, carries):
+    """Begin a cell with the row `start` of a slot; return the blocks of its longest arm."""
+    state = arms.shape[0] - 1
+    end = places[_HIGHS, slot]
+    arms[state, _CELL_START] = start
+    arms[state, _CELL_END] = end
+    # A row of the cell is in the windows of all rows of the cell. So where a window's rows all
+    # but coincide, its power sums are taken about one of them, and keep their relative accuracy.
+    centres[state, 0] = x[(start + end) // 2]
+    for arm in range(state):
+        arms[arm, _ORIGIN] = start if arm < 2 else end
+        arms[arm, _AT] = -1
+        arms[arm, _CARRIED] = 0
+        for row in range(carries.shape[2]):
+            carries[arm, 0, row] = 0.0
+    return max(start - places[_LOWS, slot], end - start - 1 if state > 2 else 0) // _BLOCK
 
 
-@helper
-def _start_arm(x, y, weight, per_unit, arm, origin, longest, arms, centres, terms, carries):
-    """Set an arm to an origin, and sum its blocks where it shortens.
+@kernel(
+    types.int64(types.int64, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_3D, _INTEGERS_2D,
+                WRITE_2D, READ_3D, WRITE_3D)
+)  # fmt: skip
+def _plan_slots(side, begin, end, arms, segments, places, centres, carries, tables):
+    """Plan the segments that a cell's slots need, and note in which columns they will find them.
 
-    An arm that shortens needs its farthest block first, so all its blocks are summed now, up
-    to `longest` rows: carries[arm, k] holds k blocks. An arm that grows is summed as it grows:
-    carries[arm, 0].
+    A segment is the first rows of a block of an arm, on top of the arm's carry. Stops where the
+    tables are full, or an arm that grows comes to a block whose carry is wanting; returns the
+    slot at which it stopped.
     """
-    arms[arm, _ORIGIN] = origin
+    a = 2 * side
+    b = a + 1
+    state = arms.shape[0] - 1
+    k = begin
+    while k < end:
+        down_at = places[_LENGTHS + a, k] // _BLOCK
+        up_at = places[_LENGTHS + b, k] // _BLOCK
+        full = max(arms[a, _FILLED], arms[b, _FILLED]) + _BLOCK + 1 > _COLUMNS
+        if full or up_at > arms[b, _CARRIED]:
+            break
+        # The slots whose arms end in the same two blocks.
+        low = k + 1
+        high = end
+        while low < high:
+            middle = (low + high) // 2
+            if (
+                places[_LENGTHS + a, middle] >= down_at * _BLOCK
+                and places[_LENGTHS + b, middle] < (up_at + 1) * _BLOCK
+            ):
+                low = middle + 1
+            else:
+                high = middle
+        for arm in range(a, a + 2):
+            down = arm == a
+            at = down_at if down else up_at
+            if at != arms[arm, _AT]:
+                origin = arms[arm, _ORIGIN]
+                longest = places[_LENGTHS + arm, k if down else end - 1] - at * _BLOCK
+                rows = min(longest, _BLOCK - 1)
+                segment = arms[arm, _SEGMENTS]
+                column = arms[arm, _FILLED]
+                first = origin - at * _BLOCK - rows if down else origin + at * _BLOCK
+                segments[arm, segment, _FIRST] = first
+                segments[arm, segment, _ROWS] = rows
+                segments[arm, segment, _COLUMN] = column
+                centres[arm, segment] = centres[state, 0]
+                for row in range(carries.shape[2]):
+                    tables[arm, row, column] = carries[arm, at if down else 0, row]
+                arms[arm, _AT] = at
+                arms[arm, _SEGMENTS] = segment + 1
+                arms[arm, _FILLED] = column + rows + 1
+            shift = segments[arm, arms[arm, _SEGMENTS] - 1, _COLUMN] - at * _BLOCK
+            for slot in range(k, low):
+                places[_COLUMNS_OF + arm, slot] = places[_LENGTHS + arm, slot] + shift
+        k = low
+    return k
+
+
+@kernel(
+    types.void(READ_1D, READ_1D, READ_1D, types.float64, types.int64, _INTEGERS_2D, _INTEGERS_3D,
+               READ_2D, WRITE_2D)
+)  # fmt: skip
+def _load_segments(x, y, weight, per_unit, arm, arms, segments, centres, terms):
+    """Terms of the planned segments of an arm, and an end to the plan."""
+    for segment in range(arms[arm, _SEGMENTS]):
+        _load(
+            x, y, weight, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
+            centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1, terms,
+        )  # fmt: skip
     arms[arm, _AT] = -1
-    arms[arm, _CARRIED] = 0
-    powers = carries.shape[2]
-    for row in range(powers):
-        carries[arm, 0, row] = 0.0
-    blocks = longest // _BLOCK if arms[arm, _STEP] < 0 else 0
-    for at in range(blocks):
-        for row in range(powers):
-            carries[arm, at + 1, row] = 0.0
-        first = origin - (at + 1) * _BLOCK
-        centre = centres[arms.shape[0] - 1, 0]
-        _add_block(x, y, weight, first, _BLOCK, centre, per_unit, arm, at + 1, terms, carries)
-        for row in range(powers):
-            carries[arm, at + 1, row] += carries[arm, at, row]
-
-
-@helper
-def _add_segment(
-    x, y, weight, per_unit, arm, at, rows, arms, segments, centres, terms, carries, tables
-):
-    """Plan a segment: the first `rows` rows of block `at` of an arm, on top of its carry."""
-    powers = carries.shape[2]
-    centre = centres[arms.shape[0] - 1, 0]
-    origin = arms[arm, _ORIGIN]
-    down = arms[arm, _STEP] < 0
-    passed = at if down else arms[arm, _CARRIED]
-    while passed < at:
-        for row in range(powers):
-            carries[arm, 1, row] = 0.0
-        first = origin + passed * _BLOCK
-        _add_block(x, y, weight, first, _BLOCK, centre, per_unit, arm, 1, terms, carries)
-        for row in range(powers):
-            carries[arm, 0, row] += carries[arm, 1, row]
-        passed += 1
-    arms[arm, _CARRIED] = passed
-    segment = arms[arm, _SEGMENTS]
-    column = arms[arm, _FILLED]
-    segments[arm, segment, _FIRST] = origin - at * _BLOCK - rows if down else origin + at * _BLOCK
-    segments[arm, segment, _ROWS] = rows
-    segments[arm, segment, _COLUMN] = column
-    centres[arm, segment] = centre
-    source = at if down else 0
-    for row in range(powers):
-        tables[arm, row, column] = carries[arm, source, row]
-    arms[arm, _AT] = at
-    arms[arm, _SEGMENTS] = segment + 1
-    arms[arm, _FILLED] = column + rows + 1
+    arms[arm, _FILLED] = 0
 
 
 @kernel(
@@ -357,81 +379,6 @@ def _join(tables, places, side, begin, end, s_top, t_top, weighted, moments):
         up = tables[a + 1, row]
         for k in range(np.uint64(begin), np.uint64(end)):
             out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
-
-
-@helper
-def _tabulate(
-    x, y, weight, per_unit, top, degree, side, begin, end, arms, segments, places, centres, terms,
-    tables, moments,
-):  # fmt: skip
-    """Make the tables of a pair of arms, and join them for the slots planned, begin to end."""
-    pairs = (tables.shape[1] - 1) // 2
-    weighted = weight.shape[0] > 0
-    for arm in range(2 * side, 2 * side + 2):
-        count = arms[arm, _SEGMENTS]
-        down = arms[arm, _STEP] < 0
-        for segment in range(count):
-            _load(
-                x, y, weight, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
-                centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1, terms,
-            )  # fmt: skip
-        if weighted:
-            _scan_one(terms, segments, arm, count, down, tables)
-        for q in range(0, pairs, 4):
-            _scan_four(terms, segments, arm, count, down, 1 + q, 1 + pairs + q, tables)
-        arms[arm, _AT] = -1
-        arms[arm, _SEGMENTS] = 0
-        arms[arm, _FILLED] = 0
-    _join(tables, places, side, begin, end, top + 2 * degree, top + degree, weighted, moments)
-
-
-@helper
-def _plan_slots(
-    x, y, weight, per_unit, top, degree, side, begin, end, planned, arms, segments, places,
-    centres, terms, carries, tables, moments,
-):  # fmt: skip
-    """Plan the segments that a cell's slots need, and note in which columns they will find them.
-
-    Slots from `planned` on await their tables; where the tables fill up, they are made at once.
-    Returns from which slot on they are still awaited.
-    """
-    a = 2 * side
-    longest = places[_LENGTHS + a + 1, end - 1]
-    k = begin
-    while k < end:
-        down_at = places[_LENGTHS + a, k] // _BLOCK
-        up_at = places[_LENGTHS + a + 1, k] // _BLOCK
-        # The slots whose arms end in the same two blocks.
-        low = k + 1
-        high = end
-        while low < high:
-            middle = (low + high) // 2
-            if (
-                places[_LENGTHS + a, middle] >= down_at * _BLOCK
-                and places[_LENGTHS + a + 1, middle] < (up_at + 1) * _BLOCK
-            ):
-                low = middle + 1
-            else:
-                high = middle
-        if max(arms[a, _FILLED], arms[a + 1, _FILLED]) + _BLOCK + 1 > _COLUMNS:
-            _tabulate(
-                x, y, weight, per_unit, top, degree, side, planned, k, arms, segments, places,
-                centres, terms, tables, moments,
-            )  # fmt: skip
-            planned = k
-        for arm in range(a, a + 2):
-            at = down_at if arm == a else up_at
-            if at != arms[arm, _AT]:
-                rows = min(places[_LENGTHS + a, k] if arm == a else longest, at * _BLOCK + _BLOCK - 1)
-                _add_segment(
-                    x, y, weight, per_unit, arm, at, rows - at * _BLOCK, arms, segments, centres,
-                    terms, carries, tables,
-                )  # fmt: skip
-            shift = segments[arm, arms[arm, _SEGMENTS] - 1, _COLUMN] - at * _BLOCK
-            for slot in range(k, low):
-                places[_COLUMNS_OF + arm, slot] = places[_LENGTHS + arm, slot] + shift
-        k = low
-    return planned
 
 
 @helper
@@ -678,6 +625,29 @@ def _add_sums(moments, coefficients, side, left, degree, count, sums):
 
 
 
+@kernel(
+    types.void(READ_1D, types.float64, types.int64, types.int64, types.int64, types.int64,
+               _INTEGERS_2D, _INTEGERS_2D, READ_2D, WRITE_2D)
+)  # fmt: skip
+def _place_slots(x, per_unit, degree, begin, end, first, arms, places, centres, sums):
+    """Lengths of the arms of a cell's slots, and their distance to its centre."""
+    state = arms.shape[0] - 1
+    start = arms[state, _CELL_START]
+    stop = arms[state, _CELL_END]
+    centre = centres[state, 0]
+    for slot in range(begin, end):
+        sums[3 * degree + 2, slot] = (centre - x[first + slot]) * per_unit
+        places[_LENGTHS, slot] = start - places[_LOWS, slot]
+    if state == 2:
+        for slot in range(begin, end):
+            places[_LENGTHS + 1, slot] = places[_HIGHS, slot] - start
+    else:
+        for slot in range(begin, end):
+            places[_LENGTHS + 1, slot] = first + slot + 1 - start
+            places[_LENGTHS + 2, slot] = stop - first - slot - 1
+            places[_LENGTHS + 3, slot] = places[_HIGHS, slot] - stop
+
+
 @kernel(WORK(types.int64, READ_1D, types.int64))
 def make_work(n, coefficients, degree):
     """Allocate the work space for n rows, a kernel and a local polynomial of some degree."""
@@ -737,57 +707,62 @@ def fill_sums(
         return
     _find_edges(x, bandwidth, first, count, arms, places)
     sides = moments.shape[0]
+    powers = carries.shape[2]
+    pairs = (powers - 1) // 2
     top = coefficients.shape[0] - 1
+    weighted = weight.shape[0] > 0
     per_unit = 1.0 / bandwidth
-    left = 0  # slots tabulated left and right
-    right = 0
-    k = 0
-    while k < count:
-        if first + k >= arms[state, _CELL_END]:
-            start = first + k
-            end = places[_HIGHS, k]
-            arms[state, _CELL_START] = start
-            arms[state, _CELL_END] = end
-            # A row of the cell is in the windows of all rows of the cell. So where a window's
-            # rows all but coincide, its power sums are taken about one of them, and keep their
-            # relative accuracy.
-            centres[state, 0] = x[(start + end) // 2]
-            for arm in range(state):
-                origin = start if arm < 2 else end
-                longest = start - places[_LOWS, k] if arm == 0 else end - start - 1
-                _start_arm(
-                    x, y, weight, per_unit, arm, origin, longest, arms, centres, terms, carries
-                )
-        start = arms[state, _CELL_START]
-        end = arms[state, _CELL_END]
-        stop = min(count, end - first)
-        centre = centres[state, 0]
-        for slot in range(k, stop):
-            sums[3 * degree + 2, slot] = (centre - x[first + slot]) * per_unit
-            places[_LENGTHS, slot] = start - places[_LOWS, slot]
-        if sides == 1:
-            for slot in range(k, stop):
-                places[_LENGTHS + 1, slot] = places[_HIGHS, slot] - start
-        else:
-            for slot in range(k, stop):
-                places[_LENGTHS + 1, slot] = first + slot + 1 - start
-                places[_LENGTHS + 2, slot] = end - first - slot - 1
-                places[_LENGTHS + 3, slot] = places[_HIGHS, slot] - end
+    done = 0
+    while done < count:
+        k = done
+        full = False
+        while k < count and not full:
+            if first + k >= arms[state, _CELL_END]:
+                blocks = _open_cell(x, first + k, k, arms, places, centres, carries)
+                # An arm that shortens needs its farthest block first: all are summed now.
+                for arm in range(0, 2 * sides, 2):
+                    for at in range(blocks):
+                        start = arms[arm, _ORIGIN] - (at + 1) * _BLOCK
+                        if start >= 0:
+                            _sum_block(x, y, weight, start, centres[state, 0], per_unit, arm, at + 1, terms, carries)
+                            for row in range(powers):
+                                carries[arm, at + 1, row] += carries[arm, at, row]
+            start = arms[state, _CELL_START]
+            end = arms[state, _CELL_END]
+            stop = min(count, end - first)
+            _place_slots(x, per_unit, degree, k, stop, first, arms, places, centres, sums)
+            planned = stop
+            for side in range(sides):
+                at = k
+                while True:
+                    at = _plan_slots(side, at, planned, arms, segments, places, centres, carries, tables)
+                    arm = 2 * side + 1
+                    block = arms[arm, _CARRIED]
+                    if at >= planned or places[_LENGTHS + arm, at] // _BLOCK <= block:
+                        break
+                    start = arms[arm, _ORIGIN] + block * _BLOCK
+                    _sum_block(x, y, weight, start, centres[state, 0], per_unit, arm, 1, terms, carries)
+                    for row in range(powers):
+                        carries[arm, 0, row] += carries[arm, 1, row]
+                    arms[arm, _CARRIED] = block + 1
+                planned = at
+            full = planned < stop
+            k = planned
+        for arm in range(2 * sides):
+            down = arm % 2 == 0
+            planned = arms[arm, _SEGMENTS]
+            _load_segments(x, y, weight, per_unit, arm, arms, segments, centres, terms)
+            if weighted:
+                _scan_one(terms, segments, arm, planned, down, tables)
+            for q in range(0, pairs, 4):
+                _scan_four(terms, segments, arm, planned, down, 1 + q, 1 + pairs + q, tables)
+            arms[arm, _SEGMENTS] = 0
         for side in range(sides):
-            planned = _plan_slots(
-                x, y, weight, per_unit, top, degree, side, k, stop, left if side == 0 else right,
-                arms, segments, places, centres, terms, carries, tables, moments,
-            )  # fmt: skip
-            if side == 0:
-                left = planned
-            else:
-                right = planned
-        k = stop
+            _join(
+                tables, places, side, done, k, top + 2 * degree, top + degree, weighted, moments
+            )
+        done = k
     for side in range(sides):
-        _tabulate(
-            x, y, weight, per_unit, top, degree, side, left if side == 0 else right, count,
-            arms, segments, places, centres, terms, tables, moments,
-        )  # fmt: skip
         _add_sums(moments, coefficients, side, sides == 2 and side == 0, degree, count, sums)
 
 

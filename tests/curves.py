@@ -11,7 +11,7 @@ import numpy as np
 
 from fastsmooth.axis import Axis
 from fastsmooth.curve import EDGE, OK, OUTSIDE, THIN, Caution, Curve, Density
-from fastsmooth.search import Search, Trail
+from fastsmooth.trail import Search, Trail
 
 NUMBER = Axis("number", "double", "", None, 0)
 START_US = 1_767_225_600_000_000  # 2026-01-01
@@ -52,8 +52,14 @@ def build(
     else:
         places = np.array(list(points), float)
     columns: dict[str, list[float]] = {
-        name: [] for name in (
-            "estimate", "slope", "slope_std_error", "std_error", "effective_rows", "residual_sd",
+        name: []
+        for name in (
+            "estimate",
+            "slope",
+            "slope_std_error",
+            "std_error",
+            "effective_rows",
+            "residual_sd",
         )
     }
     status = []

@@ -152,7 +152,7 @@ REFUSALS = {
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--where", "wet_bulb_c > 1e6"],
         "every row was filtered or refused",
     ),
-    "constant x": (["{}", "--x", "constant", "--y", "power_kw"], "--x must name a column that varies"),
+    "constant x": (["{}", "--x", "constant", "--y", "power_kw"], "must name a column that varies"),
     "three x": (["{}", "--x", "three", "--y", "power_kw"], "at least 4 distinct values"),
     "negative weight": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--weight", "signed"],
@@ -175,9 +175,12 @@ REFUSALS = {
         "subquery",
     ),
     "kernel": (["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--kernel", "gausian"], "'gaussian'"),
-    "bandwidth": (["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--bandwidth", "0"], "be positive"),
+    "bandwidth": (
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--bandwidth", "0"], "be positive",
+    ),
     "factor": (
-        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--where", "wet_bulb_c > 0", "--scale", "log",
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--where", "wet_bulb_c > 0", "--scale",
+         "log",
          "--bandwidth", "0.9"],
         "be a factor above 1",
     ),
@@ -251,7 +254,8 @@ def test_help_is_quick_to_load():
     # Loading, not time: the heavy libraries must stay out until they are used.
     script = (
         "import sys, fastsmooth.cli as c; c.main(['--help']); import fastsmooth;"
-        "print([m for m in ('numba', 'scipy', 'matplotlib', 'pyarrow', 'polars') if m in sys.modules])"
+        "heavy = ('numba', 'scipy', 'matplotlib', 'pyarrow', 'polars');"
+        "print([m for m in heavy if m in sys.modules])"
     )
     done = subprocess.run(
         [sys.executable, "-c", script], capture_output=True, text=True, check=True

@@ -87,8 +87,8 @@ def test_a_straight_quarter_turn_is_one_chord():
 
 def test_places_without_deviations_have_no_length():
     vectors = np.array([[1.0, 0.0, 0.0, 1.0], [0.0, 0.0, 2.0, 2.0]])
-    # Only the last chord, from (0, 1) to (1, 1) / sqrt 2, joins two known directions.
-    expected = math.hypot(math.sqrt(0.5), 1.0 - math.sqrt(0.5))
+    # Only the last chord, from (0, 1) to (1, 2) / sqrt 5, joins two known directions.
+    expected = math.hypot(math.sqrt(0.2), 1.0 - 2.0 * math.sqrt(0.2))
     assert arc_length_of(vectors) == pytest.approx(expected)
     assert arc_length_of(np.ones((3, 1))) == 0.0
 
@@ -138,6 +138,6 @@ def test_paths_with_errors_of_their_own_cross_as_often_as_they_may(degrees):
     # The value for one common scale would be crossed more often than that.
     common = simultaneous_value(0.95, arc_length, 1, degrees, own_scale=False)
     assert np.mean(high > common) > np.mean(high > c)
-    # The paths behind the error tell the arc length themselves, a little too long:
-    # E |u'|^2 = (nu - 1) / (nu - 2) lambda for directions of nu normal paths.
-    assert np.mean(arcs) == pytest.approx(arc_length * math.sqrt((degrees - 1) / (degrees - 2)), rel=0.05)
+    # The paths behind the error tell the arc length themselves, without bias: the direction of
+    # nu normal paths turns by sqrt(lambda) chi_(nu-1) / chi_nu, whose mean is sqrt(lambda).
+    assert np.mean(arcs) == pytest.approx(arc_length, rel=0.03)

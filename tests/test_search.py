@@ -12,7 +12,8 @@ from hypothesis import strategies as st
 from fastsmooth import InputError, Reading, Search, Smoothing, search_bandwidth
 from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.plan import Plan
-from fastsmooth.search import Trail, narrowest_width, search_table
+from fastsmooth.search import narrowest_width, search_table
+from fastsmooth.trail import Trail
 from fastsmooth.source import Columns
 from tests import cases
 from tests.oracle import local

@@ -28,7 +28,7 @@ from fastsmooth.report.look import (  # fmt: skip
 )
 from fastsmooth.report.scales import Ticks, Track, number_ticks, width_ticks
 from fastsmooth.report.words import range_text, width_text
-from fastsmooth.search import Trail
+from fastsmooth.trail import Trail
 
 Floats = NDArray[np.float64]
 

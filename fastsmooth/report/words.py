@@ -62,7 +62,8 @@ def subtitle(curve: Curve) -> str:
     covers = "mean" if told["bias"] == "corrected" else "smoothed mean, its bias ignored"
     # 99.9 percent must not become 100.
     return (
-        f"{sentence} Around it the {told['band']} {100.0 * told['level']:.6g} % band for the {covers}."
+        f"{sentence} Around it the {told['band']} {100.0 * told['level']:.6g} % band for the "
+        f"{covers}."
     )
 
 
