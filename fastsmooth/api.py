@@ -72,8 +72,9 @@ def make_curve(
     Examples
     --------
     >>> import numpy as np
-    >>> wet_bulb_c = np.linspace(0.0, 25.0, 2000)
-    >>> power_kw = 20.0 + 0.04 * wet_bulb_c**2 + 0.5 * np.sin(7.0 * np.arange(2000))
+    >>> rng = np.random.default_rng(1)
+    >>> wet_bulb_c = rng.uniform(0.0, 25.0, 2000)
+    >>> power_kw = 20.0 + 0.04 * wet_bulb_c**2 + rng.normal(0.0, 0.1, 2000)
     >>> readings = {"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}
     >>> made = make_curve(readings, "wet_bulb_c", "power_kw")
     >>> round(float(made.at(10.0)[0]), 1)
@@ -114,8 +115,9 @@ def search_bandwidth(
     Examples
     --------
     >>> import numpy as np
-    >>> wet_bulb_c = np.linspace(0.0, 25.0, 2000)
-    >>> power_kw = 20.0 + 3.0 * np.sin(wet_bulb_c) + 0.5 * np.sin(7.0 * np.arange(2000))
+    >>> rng = np.random.default_rng(1)
+    >>> wet_bulb_c = rng.uniform(0.0, 25.0, 2000)
+    >>> power_kw = 20.0 + 3.0 * np.sin(wet_bulb_c) + rng.normal(0.0, 0.5, 2000)
     >>> readings = {"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}
     >>> found = search_bandwidth(readings, "wet_bulb_c", "power_kw")
     >>> 0.3 < found.trails["local-linear"].bandwidth < 3.0
