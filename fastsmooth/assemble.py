@@ -131,8 +131,7 @@ def assemble(
         search=_search_in_axis(chosen.search, log), cautions=(), trace=trace,
     )  # fmt: skip
     sample = chosen.counted.sample
-    sample = sample._replace(x=np.exp(sample.x) if log else sample.x)
-    residuals = standardised_residuals(made, sample)
+    residuals = standardised_residuals(fits, noise, estimator, plan.reference, sample)
     trace["serial"] = serial_facts(residuals, sample, table.tally.used)
     cautions = (
         *chosen.counted.cautions,

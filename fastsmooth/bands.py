@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.bintable import Level
-from fastsmooth.critical import arc_length_of, pointwise_value, simultaneous_value
+from fastsmooth.critical import chords_of_path, pointwise_value, tail_for_all
 from fastsmooth.curve import EDGE, FEWEST_FOLDS, OK, OUTSIDE, THIN
 from fastsmooth.jackknife import leave_out_folds
 from fastsmooth.localweights import (
@@ -31,13 +31,15 @@ if TYPE_CHECKING:
 Floats = NDArray[np.float64]
 
 # The variance's own width is chosen among these multiples of the curve's by leaving out groups.
-_VARIANCE_MULTIPLES = (1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0, 12.0, 16.0)
-_VARIANCE_GROUPS = 8
+_VARIANCE_MULTIPLES = (1.0, 2.0, 4.0, 8.0, 16.0)
+_VARIANCE_GROUPS = 4
 _VARIANCE_BINS_PER_BANDWIDTH = 16
 # Chords between the weights of neighbouring points follow their path this closely.
 _POINTS_PER_BANDWIDTH = 10
 _MOST_POINTS = 2000
 _LEAST_DEGREES = 2.0
+# With fewer, some block or two make the fit: its error from folds is hardly known.
+_FEWEST_DEGREES = 4.0
 
 
 @dataclass(frozen=True)
@@ -82,7 +84,7 @@ def estimate_noise(fits: Fits, estimator: str, shape: Shape, kind: str) -> Noise
     Squared residuals are divided by their expectation under constant variance,
     1 - 2 L_ii + sum_j L_ij^2 (Ruppert, Wand, Holst & Hoessjer 1997, Technometrics 39:262), and
     smoothed by a local line (Fan & Yao 1998, Biometrika 85:645), whose width is chosen by
-    leaving out one of eight groups of folds at a time. With a constant variance:
+    leaving out one of four groups of folds at a time. With a constant variance:
     RSS / (n - 2 tr L + tr L L').
 
     Parameters
@@ -278,7 +280,7 @@ def fit_points(
     status[~np.isfinite(estimate)] = OUTSIDE
     thin = ~(effective >= band.least_rows)
     if by_block:
-        thin |= left_out.folds_met < FEWEST_FOLDS
+        thin |= (left_out.folds_met < FEWEST_FOLDS) | (degrees < _FEWEST_DEGREES)
     status[(status != OUTSIDE) & thin] = THIN
     value = pointwise_value(band.level, degrees)
     if band.kind == "simultaneous":
@@ -334,27 +336,33 @@ def _value_for_all(
     level, h = fits.level, fits.bandwidth_bins
     good = (status == OK) | (status == EDGE)
     ends = np.flatnonzero(np.diff(np.concatenate(([0], good.astype(int), [0])))).reshape(-1, 2)
-    length, sharpness = 0.0, []
+    if not ends.size:
+        return pointwise_value(band.level, degrees)
+    chords, known = [], []
     for start, stop in ends.tolist():
         low, high = ((x[i] - level.origin) / level.width for i in (start, stop - 1))
         steps = int(np.clip(np.ceil((high - low) / h * _POINTS_PER_BANDWIDTH), 1, _MOST_POINTS))
         places = np.linspace(low, high, steps + 1)
         if by_block:
-            length += arc_length_of(leave_out_folds(places, level, shape, h, kind).moved)
+            left_out = leave_out_folds(places, level, shape, h, kind)
+            chords.append(chords_of_path(left_out.moved))
+            # Between two points that count there may be a place that would not.
+            along = np.maximum(left_out.degrees, _FEWEST_DEGREES)
         else:
-            length += _arc_length(places, fits, noise, shape, kind)
-        sharpness.append(degrees[start:stop])
-    if not sharpness:
-        return pointwise_value(band.level, degrees)
-    typical = float(np.median(np.concatenate(sharpness)))
-    value = simultaneous_value(band.level, length, len(sharpness), typical, own_scale=by_block)
-    # Points with fewer degrees of freedom get the value of equal tail probability.
-    from scipy.stats import t
+            chords.append(_weight_chords(places, fits, noise, shape, kind))
+            # One scale for all: a constant variance has the same degrees everywhere.
+            along = np.full(places.shape, np.median(degrees[good]))
+        known.append(0.5 * (along[1:] + along[:-1]))
+    tail = tail_for_all(
+        band.level, np.concatenate(chords), np.concatenate(known), ends.shape[0],
+        own_scale=by_block,
+    )  # fmt: skip
+    return pointwise_value(1.0 - tail, degrees)
 
-    return pointwise_value(1.0 - 2.0 * float(t.sf(value, typical)), degrees)
 
-
-def _arc_length(places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: str) -> float:
+def _weight_chords(
+    places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: str
+) -> Floats:
     from fastsmooth.kernels import arcs
 
     weights = weights_of(_all_sums(places, fits, noise, shape).s, fits.bandwidth_bins, kind)
@@ -366,7 +374,7 @@ def _arc_length(places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: st
         shape.code, fits.bandwidth_bins, places, coefficients,
         fits.level.first[0] * noise.variance, chords,
     )  # fmt: skip
-    return float(np.nansum(chords))
+    return np.nan_to_num(chords)
 
 
 @dataclass(frozen=True)

@@ -6,14 +6,20 @@ import math
 from collections.abc import Iterator
 
 import numpy as np
+from numpy.typing import NDArray
 
+from fastsmooth.bands import Noise
 from fastsmooth.bintable import BinTable
 from fastsmooth.curve import FEWEST_FOLDS, OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
+from fastsmooth.smoother import Fits
 from fastsmooth.source import Source
+
+Floats = NDArray[np.float64]
 
 _MANY_REFUSED = 0.05
 _MANY_ALIKE = 0.0001
+_STANDS_OUT = 0.2
 # At the narrowest width one row in a hundred may be alone by chance.
 _MANY_ALONE = 0.02
 _HEAVY_FOLD = 0.5
@@ -100,7 +106,7 @@ def about_search(made: Curve) -> Iterator[Caution]:
         )
 
 
-def about_curve(made: Curve, sample: Sample, residuals: np.ndarray) -> Iterator[Caution]:
+def about_curve(made: Curve, sample: Sample, residuals: Floats) -> Iterator[Caution]:
     """Yield cautions about the curve itself; `residuals` are the sample's, standardised."""
     engine = made.trace["engine"]
     if engine["bins_per_bandwidth"] < 0.99 * engine["fewest_bins_per_bandwidth"]:
@@ -121,14 +127,22 @@ def about_curve(made: Curve, sample: Sample, residuals: np.ndarray) -> Iterator[
     yield from _about_spikes(made, sample, residuals)
 
 
-def standardised_residuals(made: Curve, sample: Sample) -> np.ndarray:
-    """Return residuals of the sample's rows over the residual spread at their x."""
-    spread = made.residual_sd
-    known = np.isfinite(spread) & (spread > 0.0)
-    if not known.any():
-        return np.full(sample.x.shape, np.nan)
-    sd = np.interp(sample.x, made.x[known], spread[known])
-    return (sample.y - made.at(sample.x)) / sd
+def standardised_residuals(
+    fits: Fits, noise: Noise, estimator: str, reference: float, sample: Sample
+) -> Floats:
+    """Return residuals of the sample's rows over the residual spread at their x.
+
+    They are taken from the fits at all bin centres: the curve's own points may be few. NaN
+    outside the bins and where there is no spread.
+    """
+    level = fits.level
+    value, slope, _ = fits.chords[estimator]
+    place = (sample.x - level.origin) / level.width
+    usable = (place >= 0.0) & (place < level.bins)
+    bins = np.where(usable, place, 0.0).astype(np.int64)
+    fitted = reference + value[bins] + slope[bins] * (place - bins - 0.5)
+    variance = np.where(usable & (noise.variance[bins] > 0.0), noise.variance[bins], np.nan)
+    return np.asarray((sample.y - fitted) / np.sqrt(variance))
 
 
 def _about_correlation(made: Curve) -> Iterator[Caution]:
@@ -148,7 +162,7 @@ def _about_correlation(made: Curve) -> Iterator[Caution]:
     )
 
 
-def _about_spikes(made: Curve, sample: Sample, z: np.ndarray) -> Iterator[Caution]:
+def _about_spikes(made: Curve, sample: Sample, z: Floats) -> Iterator[Caution]:
     """One far value of y repeated over and over is a code for missing, not a reading."""
     far = np.flatnonzero(np.abs(z) > _FAR_OUT_SD)
     # Far values inflate the residual spread that they are measured by; compare with the bulk too.
@@ -159,7 +173,9 @@ def _about_spikes(made: Curve, sample: Sample, z: np.ndarray) -> Iterator[Cautio
         return
     values, counts = np.unique(sample.y[far], return_counts=True)
     most = int(np.argmax(counts))
-    if counts[most] >= max(3, _MANY_ALIKE * sample.y.size):
+    # Long tails of whole numbers repeat values too, but none stands out among them.
+    enough = max(3.0, _MANY_ALIKE * sample.y.size, _STANDS_OUT * far.size)
+    if counts[most] >= enough:
         column = made.trace["settings"]["y"]
         yield Caution(
             "repeated far value",

@@ -9,6 +9,9 @@ from numpy.typing import NDArray
 
 Floats = NDArray[np.float64]
 
+# A band whose points may miss less often than this is no band.
+_LEAST_TAIL = 1e-12
+
 
 def pointwise_value(level: float, degrees: Floats) -> Floats:
     """Return two-sided t quantiles, (n,); infinite without degrees of freedom."""
@@ -20,67 +23,90 @@ def pointwise_value(level: float, degrees: Floats) -> Floats:
         )
 
 
-def simultaneous_value(
-    level: float, arc_length: float, stretches: int, degrees: float, *, own_scale: bool
+def tail_for_all(
+    level: float, chords: Floats, degrees: Floats, stretches: int, *, own_scale: bool
 ) -> float:
-    """Return the critical value with which a band covers whole stretches of a curve.
+    """Return the two-sided tail probability at each point with which a band covers all of them.
 
-    Solves alpha = (k / pi) tail(c) + stretches P(|t| > c), k the arc length of the curve's
-    standardised weights. With one scale for all points tail(c) = (1 + c^2 / nu)^(-nu / 2)
-    (Sun & Loader 1994, Ann. Stat. 22:1328). Where every point is studentised by its own standard
-    error, as with folds, the ratio is a t field, and tail(c) = (1 + c^2 / nu)^(-(nu - 1) / 2)
-    (Worsley 1994, Adv. Appl. Prob. 26:13).
+    Solves alpha = (1 / pi) sum_k chord_k tail(c_k) + stretches p, where c_k is the t quantile
+    that leaves p, and the chords add up to the path of the curve's standardised weights. With
+    one scale for all points tail(c) = (1 + c^2 / nu)^(-nu / 2) (Sun & Loader 1994, Ann. Stat.
+    22:1328). Where every point is studentised by its own standard error, as with folds, the
+    ratio is a t field, and tail(c) = (1 + c^2 / nu)^(-(nu - 1) / 2) (Worsley 1994, Adv. Appl.
+    Prob. 26:13). Degrees of freedom may change along the curve; c_k then changes with them.
 
     Parameters
     ----------
     level : float
         Confidence level.
-    arc_length : float
-        k; 0 gives the pointwise value for one stretch.
+    chords : (k,) float64
+        Pieces of the path; without any, or with length 0, points stand for whole stretches.
+    degrees : (k,) float64
+        Degrees of freedom at each piece; infinity is allowed.
     stretches : int
         Separate supported stretches, at least 1.
-    degrees : float
-        Degrees of freedom; infinity is allowed.
     own_scale : bool
         Whether every point has its own standard error.
 
+    Returns
+    -------
+    float
+        p; 0 where no band is wide enough. `pointwise_value(1 - p, degrees)` has the values.
+
     Examples
     --------
-    >>> round(simultaneous_value(0.95, 6.01, 1, math.inf, own_scale=False), 3)
+    >>> p = tail_for_all(0.95, np.array([6.01]), np.array([np.inf]), 1, own_scale=False)
+    >>> round(float(pointwise_value(1.0 - p, np.array([np.inf]))[0]), 3)
     2.747
     """
     from scipy.optimize import brentq
-    from scipy.stats import norm, t
 
     alpha = 1.0 - level
-    power = (degrees - 1.0) / 2.0 if own_scale else degrees / 2.0
+    finite = np.isfinite(degrees)
+    nu = np.where(finite, degrees, 1.0)
+    power = 0.5 * (nu - 1.0 if own_scale else nu)
 
-    def excess(c: float) -> float:
-        if math.isinf(degrees):
-            return (
-                arc_length / math.pi * math.exp(-c * c / 2.0) + stretches * 2.0 * norm.sf(c) - alpha
-            )
-        tail = math.exp(-power * math.log1p(c * c / degrees))
-        return arc_length / math.pi * tail + stretches * 2.0 * float(t.sf(c, degrees)) - alpha
+    def excess(log_p: float) -> float:
+        p = math.exp(log_p)
+        c = _quantile(0.5 * p, degrees)
+        tail = np.where(finite, np.exp(-power * np.log1p(c * c / nu)), np.exp(-0.5 * c * c))
+        return float(chords @ tail) / math.pi + stretches * p - alpha
 
-    high = 2.0
-    while excess(high) > 0.0:
-        high *= 2.0
-        if high > 1e6:
-            return math.inf
-    return float(brentq(excess, 0.0, high, xtol=1e-6))
+    lowest, highest = math.log(_LEAST_TAIL), math.log(alpha / stretches)
+    if excess(lowest) > 0.0:
+        return 0.0
+    # Rounding may leave a hair below zero where the path has no length.
+    if excess(highest) <= 0.0:
+        return alpha / stretches
+    return math.exp(float(brentq(excess, lowest, highest, xtol=1e-9)))
 
 
-def arc_length_of(vectors: Floats) -> float:
-    """Return the length of the path that unit vectors take, from point to point.
+def _quantile(tail: float, degrees: Floats) -> Floats:
+    """Upper t quantile, precise far out."""
+    from scipy.special import ndtri, stdtrit
+
+    known = np.where(np.isfinite(degrees), np.maximum(degrees, 1e-9), 1.0)
+    return np.asarray(np.where(np.isfinite(degrees), -stdtrit(known, tail), -ndtri(tail)))
+
+
+def chords_of_path(vectors: Floats) -> Floats:
+    """Return how far unit vectors move from each point to the next, (n - 1,).
+
+    Taken from fold deviations, the sum estimates the path's length without bias: the direction of
+    nu normal fields turns by sqrt(lambda) chi_(nu-1) / chi_nu, whose mean is sqrt(lambda).
 
     Parameters
     ----------
     vectors : (k, n) float64
-        One vector per point, in columns; they are scaled to unit length here. The chords
-        between neighbours are summed, so points must lie closer than the vectors turn.
+        One vector per point, in columns; they are scaled to unit length here. Points must lie
+        closer than the vectors turn.
+
+    Returns
+    -------
+    (n - 1,) float64
+        0 next to a vector without direction.
     """
     with np.errstate(invalid="ignore", divide="ignore"):
         unit = vectors / np.sqrt((vectors**2).sum(axis=0))
     chords = np.sqrt((np.diff(unit, axis=1) ** 2).sum(axis=0))
-    return float(np.nansum(chords))
+    return np.nan_to_num(chords)

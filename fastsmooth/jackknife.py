@@ -30,11 +30,15 @@ class Deviations:
         The same for the local line's slope, per bin.
     shares : (folds, n) float64
         The fold's share of the window's kernel weight.
+    noise_shares : (folds, n) float64
+        The fold's share of the variance that the fit would have if rows were independent; NaN
+        where the window carries no fit.
     """
 
     moved: Floats
     slope_moved: Floats
     shares: Floats
+    noise_shares: Floats
 
     @property
     def folds_met(self) -> NDArray[np.int64]:
@@ -43,10 +47,16 @@ class Deviations:
 
     @property
     def degrees(self) -> Floats:
-        """Degrees of freedom, (n,): one less than the equal folds that would be as sharp."""
+        """Degrees of freedom, (n,): one less than the equal folds that would be as sharp.
+
+        (sum v)^2 / sum v^2 - 1 over the folds' shares v of the variance (Satterthwaite 1946,
+        Biometrics Bull. 2:110), taken under independent rows (Bell & McCaffrey 2002, Survey
+        Methodology 28:169). Shares of the kernel weight would not do: where a window ends at the
+        last hot day, that day makes the fit, however many rows the others have.
+        """
         with np.errstate(invalid="ignore", divide="ignore"):
-            equal = self.shares.sum(axis=0) ** 2 / (self.shares**2).sum(axis=0)
-        return np.maximum(equal - 1.0, 0.0)
+            equal = self.noise_shares.sum(axis=0) ** 2 / (self.noise_shares**2).sum(axis=0)
+        return np.maximum(np.nan_to_num(equal) - 1.0, 0.0)
 
     @property
     def std_error(self) -> Floats:
@@ -71,17 +81,23 @@ class Deviations:
 
 def fold_sums_at(
     places: Floats, level: Level, shape: Shape, bandwidth_bins: float
-) -> tuple[Floats, Floats]:
-    """Return S_0..S_4 (folds, 5, n) and T_0..T_2 (folds, 3, n) of each fold at some places."""
+) -> tuple[Floats, Floats, Floats]:
+    """Return the kernel sums of each fold at some places.
+
+    Returns
+    -------
+    s, t, v : (folds, 5, n), (folds, 3, n), (folds, 5, n) float64
+        As in `fastsmooth.localweights.PointSums`, with sigma^2 = 1 for a row of weight 1.
+    """
     n, folds = places.shape[0], level.folds.shape[0]
-    s, t = np.empty((folds, 5, n)), np.empty((folds, 3, n))
+    s, t, v = np.empty((folds, 5, n)), np.empty((folds, 3, n)), np.empty((folds, 5, n))
     unused = np.zeros((3, level.bins))
     for fold in range(folds):
         sums = level.folds[fold]
         response = sums[3:6] + level.pilot * sums[0:3]
-        found = sums_at(places, sums[0:3], response, shape, bandwidth_bins, unused, unused)
-        s[fold], t[fold] = found.s, found.t
-    return s, t
+        found = sums_at(places, sums[0:3], response, shape, bandwidth_bins, sums[0:3], unused)
+        s[fold], t[fold], v[fold] = found.s, found.t, found.v
+    return s, t, v
 
 
 def leave_out_folds(
@@ -103,8 +119,9 @@ def leave_out_folds(
         The fit; see `fastsmooth.localweights.weights_of`.
     """
     n, folds = places.shape[0], level.folds.shape[0]
-    s, t = fold_sums_at(places, level, shape, bandwidth_bins)
-    total = weights_of(s.sum(axis=0), bandwidth_bins, kind).apply(t.sum(axis=0))
+    s, t, v = fold_sums_at(places, level, shape, bandwidth_bins)
+    weights = weights_of(s.sum(axis=0), bandwidth_bins, kind)
+    total = weights.apply(t.sum(axis=0))
     without_s, without_t = others(s), others(t)
     slope = slope_weights(s.sum(axis=0), bandwidth_bins).apply(t.sum(axis=0))
     moved, slope_moved = np.zeros((folds, n)), np.zeros((folds, n))
@@ -117,4 +134,6 @@ def leave_out_folds(
         slope_moved[fold] = np.where(here, value - slope, 0.0)
     with np.errstate(invalid="ignore", divide="ignore"):
         shares = np.clip(s[:, 0] / s[:, 0].sum(axis=0), 0.0, None)
-    return Deviations(moved, slope_moved, shares)
+        noise = np.array([weights.variance(one) for one in v])
+        noise_shares = noise / noise.sum(axis=0)
+    return Deviations(moved, slope_moved, shares, noise_shares)

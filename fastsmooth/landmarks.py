@@ -164,7 +164,7 @@ class _Stretch:
         steps = int(np.clip((high - low) / width * _POINTS_PER_BANDWIDTH, 2, _MOST_POINTS))
         self.x = np.linspace(low, high, steps + 1)
         self.window = _SEARCHED_BANDWIDTHS * width
-        s, t = fold_sums_at((self.x - level.origin) / level.width, level, shape, h)
+        s, t, _ = fold_sums_at((self.x - level.origin) / level.width, level, shape, h)
         kind = CONSTANT if estimator == "local-constant" else LINE
         sums = [(s.sum(axis=0), t.sum(axis=0)), *zip(others(s), others(t), strict=True)]
         self.value = np.array([weights_of(a, h, kind).apply(b) for a, b in sums])

@@ -137,7 +137,7 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
     """
     scale = reading.scale
     check_scale(source, scale)
-    sample = draw_sample(source, scale)
+    sample = draw_sample(source, scale, reading.threads)
     trimmed = False
     if reading.range is not None:
         bounds = user_range(source, reading.range, scale)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import asdict, dataclass, replace
 from functools import cached_property
 from typing import Any, NamedTuple
@@ -178,7 +179,7 @@ def most_bins(folds: int, threads: int, slots: int) -> int:
     return 1 << int(math.log2(MEMORY_CAP_BYTES / (8 * slots * tables)))
 
 
-def draw_sample(source: Source, scale: str) -> Sample:
+def draw_sample(source: Source, scale: str, threads: int = 1) -> Sample:
     """Read short runs of consecutive rows, spread evenly over the tasks.
 
     Parameters
@@ -187,6 +188,8 @@ def draw_sample(source: Source, scale: str) -> Sample:
         Opened data.
     scale : str
         ``linear`` or ``log``.
+    threads : int
+        Tasks read at a time; the sample does not depend on it.
 
     Returns
     -------
@@ -199,23 +202,24 @@ def draw_sample(source: Source, scale: str) -> Sample:
     chosen = np.unique(np.linspace(0, len(tasks) - 1, min(_SAMPLE_TASKS, len(tasks))).astype(int))
     # Few tasks: longer runs of each, so that a single file is sampled as deeply as a fleet.
     rows = _SAMPLE_ROWS * (_SAMPLE_TASKS // chosen.shape[0])
-    xs, ys, runs, places = [], [], [], []
-    for number, index in enumerate(chosen.tolist()):
+
+    def draw(index: int) -> tuple[Floats, Floats, NDArray[np.int64]] | None:
         # A chunk may be empty after the filter; a few more are tried.
         for chunk in _first_chunks(source, tasks[index], rows):
             x, y, usable = _on_scale(chunk.x, chunk.y, scale)
             kept = np.flatnonzero(usable)
             if kept.size:
-                xs.append(x[kept])
-                ys.append(y[kept])
-                runs.append(np.full(kept.size, number))
-                places.append(kept if chunk.positions is None else chunk.positions[kept])
-                break
-    if not xs:
+                place = kept if chunk.positions is None else chunk.positions[kept]
+                return x[kept], y[kept], place
+        return None
+
+    with ThreadPoolExecutor(threads) as pool:
+        drawn = [one for one in pool.map(draw, chosen.tolist()) if one is not None]
+    if not drawn:
         return Sample(np.empty(0), np.empty(0), np.empty(0, np.int64), np.empty(0, np.int64))
-    return Sample(
-        np.concatenate(xs), np.concatenate(ys), np.concatenate(runs), np.concatenate(places)
-    )
+    x, y, place = (np.concatenate(parts) for parts in zip(*drawn, strict=True))
+    run = np.repeat(np.arange(len(drawn)), [one[0].size for one in drawn])
+    return Sample(x, y, run, place)
 
 
 def _first_chunks(source: Source, task: Task, rows: int) -> Iterator[Chunk]:

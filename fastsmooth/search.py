@@ -245,6 +245,12 @@ class _Job:
             points[name] = _point_of(bandwidth, scores, fold_sums(scored, scores), scored)
         return points
 
+    def value(self, bandwidth: float, level: int, name: str, criterion: str) -> float:
+        """Return one criterion of one estimator: what a refinement needs, and no more."""
+        scored = self.scored.levels[level]
+        scores = score_level(self.fit(bandwidth, level), name, scored)
+        return _criteria_of(scores, scored)[criterion]
+
     def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
         return self.scores_of(self.fit(bandwidth, level))
 
@@ -285,7 +291,7 @@ def _bins_per_bandwidth(pyramid: Pyramid, shape: Shape) -> int:
     )
 
 
-def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
+def _criteria_of(scores: Scores, scored: Level) -> dict[str, float]:
     n, weight = float(scored.count.sum()), float(scored.first[0].sum())
     # Voters have predictions at every width of the grid; between its widths one may be missing.
     heard = weight - scores.lost
@@ -296,9 +302,14 @@ def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) ->
     aicc = math.inf
     if n - scores.trace - 2.0 > 0.0 and variance > 0.0:
         aicc = math.log(variance) + 1.0 + 2.0 * (scores.trace + 1.0) / (n - scores.trace - 2.0)
+    return {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}
+
+
+def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
+    weight = float(scored.first[0].sum())
+    shares = scored.folds[:, 0].sum(axis=1) / weight
     return _Point(
-        bandwidth, {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}, scores.trace,
-        folds / weight, scored.folds[:, 0].sum(axis=1) / weight,
+        bandwidth, _criteria_of(scores, scored), scores.trace, folds / weight, shares
     )  # fmt: skip
 
 
@@ -378,24 +389,27 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
         )
     # Of equals (y does not vary, say) the widest.
     place = int(np.flatnonzero(np.array(values) == min(values))[-1])
-    by_fold = criterion == "leave-block-out"
-    scores = job.left_out_scores if by_fold else job.scores
-    close = _REFINED_BY_FOLD if by_fold else REFINED
-    level: int | None = None if by_fold else job.level(float(grid[place]))
-
     unit = job.pyramid.plan.width
+    if criterion == "leave-block-out":
 
-    def at(log_h: float) -> tuple[float, _Point]:
-        point = scores(math.exp(log_h) * unit, level)[name]
-        return point.criteria[criterion], point
+        def at(log_h: float) -> float:
+            return job.left_out_scores(math.exp(log_h) * unit)[name].criteria[criterion]
 
+        close = _REFINED_BY_FOLD
+    else:
+        level = job.level(float(grid[place]))
+
+        def at(log_h: float) -> float:
+            return job.value(math.exp(log_h) * unit, level, name, criterion)
+
+        close = REFINED
     logs = np.log(grid / unit)
-    low, high = logs[max(place - 1, 0)], logs[min(place + 1, grid.shape[0] - 1)]
-    best = at(logs[place])
+    low, high = float(logs[max(place - 1, 0)]), float(logs[min(place + 1, grid.shape[0] - 1)])
+    best = (at(float(logs[place])), float(logs[place]))
     left, right = high - _GOLDEN * (high - low), low + _GOLDEN * (high - low)
     at_left, at_right = at(left), at(right)
     while high - low > close:
-        if at_left[0] <= at_right[0]:
+        if at_left <= at_right:
             high, right, at_right = right, left, at_left
             left = high - _GOLDEN * (high - low)
             at_left = at(left)
@@ -403,7 +417,11 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
             low, left, at_left = left, right, at_right
             right = low + _GOLDEN * (high - low)
             at_right = at(right)
-    return min((best, at_left, at_right), key=lambda pair: pair[0])[1]
+    chosen = min((best, (at_left, left), (at_right, right)), key=lambda pair: pair[0])[1]
+    bandwidth = math.exp(chosen) * unit
+    if criterion == "leave-block-out":
+        return job.left_out_scores(bandwidth)[name]
+    return job.scores(bandwidth, level)[name]
 
 
 def _paired_error(point: _Point, best: _Point) -> float:

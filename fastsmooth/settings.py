@@ -142,7 +142,7 @@ class Band:
         ``local`` lets the residual variance change with x; ``constant`` does not.
     least_rows : float
         Points with fewer effective rows are ``thin``; with a block also those whose window
-        meets fewer than twelve folds.
+        meets fewer than twelve folds, or whose error has fewer than four degrees of freedom.
     points : int
         Evenly spaced points from the lowest to the highest x (in log x on a log scale).
     at : tuple or None

@@ -8,9 +8,17 @@ from hypothesis import given
 from hypothesis import strategies as st
 from scipy import stats
 
-from fastsmooth.critical import arc_length_of, pointwise_value, simultaneous_value
+from fastsmooth.critical import chords_of_path, pointwise_value, tail_for_all
 
 INFINITE = math.inf
+
+
+def value_for_all(level, arc_length, stretches, degrees, own_scale=False):
+    """The critical value at points of the same degrees, from a path in four pieces."""
+    chords = arc_length * np.array([0.1, 0.2, 0.3, 0.4])
+    nu = np.full(4, degrees)
+    tail = tail_for_all(level, chords, nu, stretches, own_scale=own_scale)
+    return float(pointwise_value(1.0 - tail, nu)[0])
 
 
 def test_pointwise_values_are_t_quantiles():
@@ -41,22 +49,25 @@ def excess(c, arc_length, stretches, degrees, own_scale):
     st.booleans(),
 )
 def test_the_value_solves_its_equation(level, arc_length, stretches, degrees, own_scale):
-    c = simultaneous_value(level, arc_length, stretches, degrees, own_scale=own_scale)
-    if c > 0.0:
+    c = value_for_all(level, arc_length, stretches, degrees, own_scale)
+    if math.isfinite(c):
         assert excess(c, arc_length, stretches, degrees, own_scale) == pytest.approx(
             1.0 - level, rel=1e-4
         )
+    else:
+        # Only where the tail is so heavy that no value in reach would do.
+        assert excess(1e3, arc_length, stretches, degrees, own_scale) > 1.0 - level
 
 
 @given(st.floats(0.5, 0.999), st.one_of(st.just(INFINITE), st.floats(2.5, 500.0)), st.booleans())
 def test_a_curve_that_does_not_turn_is_one_point(level, degrees, own_scale):
-    c = simultaneous_value(level, 0.0, 1, degrees, own_scale=own_scale)
+    c = value_for_all(level, 0.0, 1, degrees, own_scale)
     assert c == pytest.approx(stats.t.ppf(0.5 + level / 2.0, degrees), abs=1e-4)
 
 
 def test_longer_paths_more_stretches_and_fewer_degrees_need_wider_bands():
     def value(arc_length=10.0, stretches=1, degrees=30.0, own_scale=False):
-        return simultaneous_value(0.95, arc_length, stretches, degrees, own_scale=own_scale)
+        return value_for_all(0.95, arc_length, stretches, degrees, own_scale)
 
     assert value(arc_length=20.0) > value()
     assert value(stretches=3) > value()
@@ -67,7 +78,19 @@ def test_longer_paths_more_stretches_and_fewer_degrees_need_wider_bands():
 
 def test_hopeless_degrees_give_an_endless_band():
     # With one degree and errors of its own at every point the tail never falls below 5 %.
-    assert simultaneous_value(0.95, 10.0, 1, 1.0, own_scale=True) == math.inf
+    assert value_for_all(0.95, 10.0, 1, 1.0, own_scale=True) == math.inf
+
+
+def test_degrees_that_change_along_the_path_change_the_value_with_them():
+    chords, degrees = np.array([4.0, 6.0]), np.array([8.0, 30.0])
+    tail = tail_for_all(0.95, chords, degrees, 2, own_scale=True)
+    c = stats.t.isf(tail / 2.0, degrees)
+    np.testing.assert_allclose(pointwise_value(1.0 - tail, degrees), c, rtol=1e-9)
+    pieces = chords / math.pi * (1.0 + c**2 / degrees) ** (-(degrees - 1.0) / 2.0)
+    assert pieces.sum() + 2.0 * tail == pytest.approx(0.05, rel=1e-6)
+    # It lies between what either would give alone.
+    alone = [tail_for_all(0.95, chords, np.full(2, nu), 2, own_scale=True) for nu in degrees]
+    assert alone[0] < tail < alone[1]
 
 
 # Arc length.
@@ -78,19 +101,19 @@ def test_the_arc_of_a_half_circle_is_pi():
     radius = 1.0 + np.cos(7.0 * angle) ** 2
     # Only directions count.
     vectors = radius * np.stack((np.cos(angle), np.sin(angle), np.zeros_like(angle)))
-    assert arc_length_of(vectors) == pytest.approx(math.pi, rel=1e-6)
+    assert chords_of_path(vectors).sum() == pytest.approx(math.pi, rel=1e-6)
 
 
 def test_a_straight_quarter_turn_is_one_chord():
-    assert arc_length_of(np.array([[1.0, 0.0], [0.0, 5.0]])) == pytest.approx(math.sqrt(2.0))
+    assert chords_of_path(np.array([[1.0, 0.0], [0.0, 5.0]])) == pytest.approx([math.sqrt(2.0)])
 
 
 def test_places_without_deviations_have_no_length():
     vectors = np.array([[1.0, 0.0, 0.0, 1.0], [0.0, 0.0, 2.0, 2.0]])
     # Only the last chord, from (0, 1) to (1, 2) / sqrt 5, joins two known directions.
     expected = math.hypot(math.sqrt(0.2), 1.0 - 2.0 * math.sqrt(0.2))
-    assert arc_length_of(vectors) == pytest.approx(expected)
-    assert arc_length_of(np.ones((3, 1))) == 0.0
+    assert chords_of_path(vectors).tolist() == pytest.approx([0.0, 0.0, expected])
+    assert chords_of_path(np.ones((3, 1))).size == 0
 
 
 # Simulated paths.
@@ -114,7 +137,7 @@ def smooth_paths(rng, runs, copies):
 
 def test_normal_paths_cross_the_value_as_often_as_they_may():
     paths, arc_length = smooth_paths(np.random.default_rng(1), 6000, 1)
-    c = simultaneous_value(0.95, arc_length, 1, INFINITE, own_scale=False)
+    c = value_for_all(0.95, arc_length, 1, INFINITE)
     share = np.mean(np.abs(paths[:, 0]).max(axis=1) > c)
     # Four standard errors of a share of 0.05 in 6000 runs are 0.0113; the formula is an upper
     # bound in one dimension, and a grid misses a few peaks.
@@ -130,13 +153,13 @@ def test_paths_with_errors_of_their_own_cross_as_often_as_they_may(degrees):
         paths, arc_length = smooth_paths(rng, runs // 5, degrees + 1)
         error = np.sqrt(np.mean(paths[:, 1:] ** 2, axis=1))
         high.append(np.abs(paths[:, 0] / error).max(axis=1))
-        arcs += [arc_length_of(one[1:]) for one in paths[:40]]
+        arcs += [chords_of_path(one[1:]).sum() for one in paths[:40]]
     high = np.concatenate(high)
-    c = simultaneous_value(0.95, arc_length, 1, degrees, own_scale=True)
+    c = value_for_all(0.95, arc_length, 1, degrees, own_scale=True)
     # Four standard errors of a share of 0.05 in 2500 runs are 0.0174.
     assert 0.0276 < np.mean(high > c) < 0.0674
     # The value for one common scale would be crossed more often than that.
-    common = simultaneous_value(0.95, arc_length, 1, degrees, own_scale=False)
+    common = value_for_all(0.95, arc_length, 1, degrees, own_scale=False)
     assert np.mean(high > common) > np.mean(high > c)
     # The paths behind the error tell the arc length themselves, without bias: the direction of
     # nu normal paths turns by sqrt(lambda) chi_(nu-1) / chi_nu, whose mean is sqrt(lambda).

@@ -31,6 +31,14 @@ def finest_level(x, y, folds, bins=8192):
     return Pyramid(table).levels[0]
 
 
+def made_of(moved=None, shares=None):
+    """Deviations at one place; the kernel weight and the variance have the same shares."""
+    column = np.array(moved if shares is None else shares, float)[:, np.newaxis]
+    zero = np.zeros_like(column)
+    known = zero if moved is None else np.array(moved)[:, np.newaxis]
+    return Deviations(known, zero, column, column)
+
+
 def deviations(at, x, y, folds, h, kernel, kind):
     level = finest_level(x, y, folds)
     places = (np.asarray(at, float) - level.origin) / level.width
@@ -63,7 +71,7 @@ def test_with_folds_of_one_row_it_is_the_error_of_a_mean():
 
 
 def test_two_equal_folds_worked_by_hand():
-    made = Deviations(np.array([[0.3], [-0.3]]), np.zeros((2, 1)), np.array([[0.5], [0.5]]))
+    made = made_of(moved=[0.3, -0.3], shares=[0.5, 0.5])
     # 1/2 (0.09 + 0.09) = 0.09
     assert made.std_error[0] == pytest.approx(0.3, rel=1e-12)
     assert made.degrees[0] == pytest.approx(1.0)
@@ -74,25 +82,53 @@ def test_two_equal_folds_worked_by_hand():
     [
         ((0.25, 0.25, 0.25, 0.25), 3.0),
         ((0.25, 0.25, 0.25, 0.25, 0.0), 3.0),
+        # 1 / (0.16 + 0.09 + 0.04 + 0.01) - 1
+        ((0.4, 0.3, 0.2, 0.1), 7.0 / 3.0),
         ((1.0, 0.0), 0.0),
     ],
 )
 def test_degrees_are_one_less_than_equal_folds(shares, degrees):
-    column = np.array(shares)[:, np.newaxis]
-    made = Deviations(np.zeros_like(column), np.zeros_like(column), column)
-    assert made.degrees[0] == pytest.approx(degrees, abs=1e-12)
-
-
-def test_unequal_folds_have_fewer_degrees():
-    shares = np.array([[0.4], [0.3], [0.2], [0.1]])
-    made = Deviations(np.zeros_like(shares), np.zeros_like(shares), shares)
-    assert 0.0 < made.degrees[0] < 3.0
+    assert made_of(shares=shares).degrees[0] == pytest.approx(degrees, abs=1e-12)
 
 
 def test_a_window_of_one_fold_has_no_error():
-    made = Deviations(np.array([[0.0], [0.1]]), np.zeros((2, 1)), np.array([[0.0], [1.0]]))
+    made = made_of(moved=[0.0, 0.1], shares=[0.0, 1.0])
     assert math.isnan(made.std_error[0])
     assert made.degrees[0] == 0.0
+
+
+def test_a_window_without_a_fit_has_no_degrees():
+    made = deviations([50.0], np.array([0.0, 1.0, 100.0]), np.zeros(3), [0, 1, 2], 5.0, "biweight", LINE)
+    assert made.degrees[0] == 0.0
+
+
+@pytest.mark.parametrize("kind", DEGREES)
+def test_shares_of_the_variance_are_sums_of_squared_weights(kind):
+    rows = cases.make_rows("clustered", 120, seed=12)
+    x, y = rows.wet_bulb_c, rows.power_kw
+    folds = np.random.default_rng(4).integers(0, 5, x.size).tolist()
+    made = deviations([6.0, 20.0], x, y, folds, 6.0, "biweight", kind)
+    for place, at in enumerate((6.0, 20.0)):
+        weights = local.fit_at(at, x.tolist(), y.tolist(), 6.0, "biweight", DEGREES[kind]).smoothing
+        squares = [
+            math.fsum(one**2 for one, own in zip(weights, folds, strict=True) if own == fold)
+            for fold in range(5)
+        ]
+        shares = [one / math.fsum(squares) for one in squares]
+        np.testing.assert_allclose(made.noise_shares[:, place], shares, rtol=2e-3, atol=1e-5)
+        expected = 1.0 / math.fsum(one**2 for one in shares) - 1.0
+        assert made.degrees[place] == pytest.approx(expected, rel=2e-3)
+
+
+def test_one_fold_at_the_end_of_the_data_makes_the_fit():
+    # Four folds share the rows up to 10, a fifth has the few beyond: at 12 the line leans on it,
+    # although it has little of the kernel weight.
+    x = np.concatenate((np.linspace(0.0, 10.0, 400), np.linspace(11.5, 12.0, 8)))
+    folds = [*(place % 4 for place in range(400)), *([4] * 8)]
+    made = deviations([12.0], x, np.cos(x), folds, 8.0, "biweight", LINE)
+    assert made.shares[4, 0] < 0.2
+    assert made.noise_shares[4, 0] > 2.0 * made.shares[4, 0]
+    assert made.degrees[0] < 2.5
 
 
 # Against refits.

@@ -29,10 +29,10 @@ def table_of(x, y, folds, bins=BINS):
     return table
 
 
-def scores_of(x, y, folds, h, kernel, level=0):
-    pyramid = Pyramid(table_of(x, y, folds))
+def scores_of(x, y, folds, h, kernel, bins=BINS):
+    pyramid = Pyramid(table_of(x, y, folds, bins))
     shape = SHAPES[kernel]
-    one = pyramid.levels[level]
+    one = pyramid.levels[0]
     return left_out_fold_scores(one, one, shape, h, least_weight(pyramid, shape))
 
 
@@ -59,7 +59,7 @@ def test_one_huge_part_leaves_the_others_untouched():
 @pytest.mark.parametrize("estimator", DEGREES)
 @pytest.mark.parametrize("kernel", ["biweight", "epanechnikov", "triangular", "gaussian"])
 def test_scores_are_those_of_refits_without_each_fold(kernel, estimator):
-    rows = cases.make_rows("clustered", 140, seed=5)
+    rows = cases.make_rows("clustered", 80, seed=5)
     x, y = rows.wet_bulb_c, rows.power_kw
     folds = np.random.default_rng(1).integers(0, 5, x.size).tolist()
     for h in (4.0, 9.0):
@@ -82,7 +82,9 @@ def test_ties_and_uneven_folds_are_left_out_too(rows):
     y = np.array([1.0, -1.0, *(float(one) for _, one, _ in rows)])
     folds = [4, 5, *(fold for _, _, fold in rows)]
     # A window of the whole range: whatever fold is left out, others remain in reach.
-    found, lost = scores_of(x, y, folds, 40.0, "epanechnikov")["local-constant"]
+    found, lost = scores_of(x, y, folds, 40.0, "epanechnikov", bins=512)[
+        "local-constant"
+    ]
     assert lost == 0.0
     expected = oracle.scores_per_fold(x.tolist(), y.tolist(), folds, 40.0, "epanechnikov", 0)
     np.testing.assert_allclose(
@@ -190,7 +192,9 @@ def test_rows_that_repeat_within_a_block_do_not_fool_it():
     by_block, by_row = curve_of(x, y, day, block="day"), curve_of(x, y, day)
     truth = np.sin(by_block.x / 3.0)
     assert by_row.bandwidth < 0.3 * by_block.bandwidth
-    assert np.mean((by_block.estimate - truth) ** 2) < 0.25 * np.mean((by_row.estimate - truth) ** 2)
+    # Its windows hold so few places that some points have none.
+    miss_by_block = np.mean((by_block.estimate - truth) ** 2)
+    assert miss_by_block < 0.25 * np.nanmean((by_row.estimate - truth) ** 2)
 
 
 def test_leave_block_out_needs_a_block():

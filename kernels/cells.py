@@ -1,0 +1,753 @@
+"""cells"""
+
+from typing import NamedTuple
+
+import numpy as np
+
+from .compiled import (
+    READ_1D,
+    READ_2D,
+    READ_3D,
+    WRITE_1D,
+    WRITE_2D,
+    WRITE_3D,
+    helper,
+    kernel,
+    sum_kernel,
+    types,
+)
+
+_SLOTS = 256  # rows evaluated at a time
+_BLOCK = 128  # rows between the checkpoints of an arm
+_COLUMNS = _SLOTS + 3 * _BLOCK  # of an arm's table: as many rows as its slots meet, if not more
+_REACH = 16  # windows that end before this many rows on either side are summed row by row
+_STRIDE = 8  # added to the length of work rows, so that they do not share cache sets
+_ONE = np.uint64(1)
+# Columns of `Work.arms`: where the arm begins, the block of its last segment (-1: none), how many
+# blocks its growing carry holds, segments and columns in use. One more row holds the cell's first
+# row and the row after its last, and the edges of the last window.
+_ORIGIN, _AT, _CARRIED, _SEGMENTS, _FILLED = range(5)
+_CELL_START, _CELL_END, _LOW, _HIGH = range(4)
+# Columns of `Work.segments`: first row, rows, first column.
+_FIRST, _ROWS, _COLUMN = range(3)
+# Rows of `Work.places`: where the window begins, where it ends, the row after the slot's own; then
+# for every arm the column of its table.
+_LOWS, _HIGHS, _OWN, _PLACE = range(4)
+
+
+class Work(NamedTuple):
+    """Work space for one range of rows, allocated once.
+
+    Arms come in pairs, one that shortens from row to row (even index) and one that grows (odd);
+    kernels in u have one pair, kernels in |u| two: left and right of x_i.
+    """
+
+    arms: np.ndarray  # (arms + 1, 5)
+    segments: np.ndarray  # (arms, slots, 3)
+    places: np.ndarray  # (3 + arms, slots)
+    centres: np.ndarray  # (arms + 1, slots) each segment's centre; last row: the cell's
+    terms: np.ndarray  # (4, columns) v, w v^q, w y v^q, w of the rows in the segments
+    carries: np.ndarray  # (arms, blocks, rows) power sums up to each block; see `_start_arm`
+    tables: np.ndarray  # (arms, rows, columns) growing power sums over each segment
+    moments: np.ndarray  # (pairs of arms, rows, slots) power sums about the slot's centre
+    sums: np.ndarray  # (3 degree + 3, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h
+
+
+_INTEGERS_2D = types.int64[:, ::1]
+_INTEGERS_3D = types.int64[:, :, ::1]
+_WORK_TYPES = (
+    _INTEGERS_2D, _INTEGERS_3D, _INTEGERS_2D, WRITE_2D, WRITE_2D, WRITE_3D, WRITE_3D, WRITE_3D,
+    WRITE_2D,
+)  # fmt: skip
+WORK = types.NamedTuple(_WORK_TYPES, Work)
+
+
+@helper
+def _round_up(pairs):
+    """Pairs of power sums are taken four at a time."""
+    return (pairs + 3) // 4 * 4
+
+
+@helper
+def _load(x, y, first, count, centre, per_unit, column, terms):
+    """Terms of rows first, first + 1, ...: v = (x - centre) per_unit; v; y."""
+    xs = x[first : first + count]
+    ys = y[first : first + count]
+    v = terms[0, column : column + count]
+    a = terms[1, column : column + count]
+    b = terms[2, column : column + count]
+    for k in range(count):
+        t = (xs[k] - centre) * per_unit
+        v[k] = t
+        a[k] = t
+        b[k] = ys[k]
+
+
+@helper
+def _weigh(weight, first, count, column, terms):
+    """Weigh the terms of rows first, first + 1, ..., and keep the weights beside them."""
+    ws = weight[first : first + count]
+    a = terms[1, column : column + count]
+    b = terms[2, column : column + count]
+    w = terms[3, column : column + count]
+    for k in range(count):
+        w[k] = ws[k]
+        a[k] *= ws[k]
+        b[k] *= ws[k]
+
+
+@kernel(types.void(READ_1D, READ_1D, types.int64, types.float64, types.float64, WRITE_2D))
+def _load_block(x, y, first, centre, per_unit, terms):
+    """Terms of rows first to first + _BLOCK."""
+    _load(x, y, first, _BLOCK, centre, per_unit, 0, terms)
+
+
+@kernel(types.void(READ_1D, types.int64, WRITE_2D))
+def _weigh_block(weight, first, terms):
+    """Weigh the terms of rows first to first + _BLOCK."""
+    _weigh(weight, first, _BLOCK, 0, terms)
+
+
+@sum_kernel(types.void(WRITE_2D, types.boolean, types.int64, types.int64, WRITE_3D))
+def _sum_block(terms, weighted, arm, at, carries):
+    """Put the power sums of a block's terms into carries[arm, at]."""
+    totals = carries[arm, at]
+    pairs = (totals.shape[0] - 1) // 2
+    v = terms[0]
+    a = terms[1]
+    b = terms[2]
+    w = terms[3]
+    total = 0.0
+    for k in range(_BLOCK):
+        total += w[k]
+    totals[0] = total if weighted else _BLOCK
+    for power in range(1, 1 + pairs, 4):
+        s1 = s2 = s3 = s4 = 0.0
+        t1 = t2 = t3 = t4 = 0.0
+        for k in range(_BLOCK):
+            u = v[k]
+            p = a[k]
+            q = b[k]
+            s1 += p
+            t1 += q
+            p *= u
+            q *= u
+            s2 += p
+            t2 += q
+            p *= u
+            q *= u
+            s3 += p
+            t3 += q
+            p *= u
+            q *= u
+            s4 += p
+            t4 += q
+            a[k] = p * u
+            b[k] = q * u
+        totals[power] = s1
+        totals[power + 1] = s2
+        totals[power + 2] = s3
+        totals[power + 3] = s4
+        totals[pairs + power] = t1
+        totals[pairs + power + 1] = t2
+        totals[pairs + power + 2] = t3
+        totals[pairs + power + 3] = t4
+
+
+@kernel(
+    types.void(WRITE_2D, _INTEGERS_3D, types.int64, types.int64, types.boolean,
+               types.int64, types.int64, WRITE_3D)
+)  # fmt: skip
+def _scan_four(terms, segments, arm, count, down, s_row, t_row, tables):
+    """Growing sums of four pairs of powers over each segment, from its first column on.
+
+    A segment's rows lie in `terms` from its first column + 1 on, and are taken from the last
+    to the first where `down`; afterwards `terms` holds the next powers.
+    Written out: eight sums live in registers (1.4 ns a row).
+    """
+    v = terms[0]
+    a = terms[1]
+    b = terms[2]
+    r1 = tables[arm, s_row]
+    r2 = tables[arm, s_row + 1]
+    r3 = tables[arm, s_row + 2]
+    r4 = tables[arm, s_row + 3]
+    q1 = tables[arm, t_row]
+    q2 = tables[arm, t_row + 1]
+    q3 = tables[arm, t_row + 2]
+    q4 = tables[arm, t_row + 3]
+    stride = np.uint64(-1 if down else 1)
+    for segment in range(count):
+        rows = segments[arm, segment, _ROWS]
+        j = np.uint64(segments[arm, segment, _COLUMN])
+        i = j + np.uint64(rows) if down else j + _ONE
+        s1 = r1[j]
+        s2 = r2[j]
+        s3 = r3[j]
+        s4 = r4[j]
+        t1 = q1[j]
+        t2 = q2[j]
+        t3 = q3[j]
+        t4 = q4[j]
+        for _ in range(rows):
+            u = v[i]
+            p = a[i]
+            q = b[i]
+            j += _ONE
+            s1 += p
+            t1 += q
+            r1[j] = s1
+            q1[j] = t1
+            p *= u
+            q *= u
+            s2 += p
+            t2 += q
+            r2[j] = s2
+            q2[j] = t2
+            p *= u
+            q *= u
+            s3 += p
+            t3 += q
+            r3[j] = s3
+            q3[j] = t3
+            p *= u
+            q *= u
+            s4 += p
+            t4 += q
+            r4[j] = s4
+            q4[j] = t4
+            a[i] = p * u
+            b[i] = q * u
+            i += stride
+
+
+@kernel(
+    types.void(READ_2D, _INTEGERS_3D, types.int64, types.int64, types.boolean, WRITE_3D)
+)
+def _scan_one(terms, segments, arm, count, down, tables):
+    """Growing sums of the weights; otherwise as `_scan_four`."""
+    values = terms[3]
+    out = tables[arm, 0]
+    for segment in range(count):
+        rows = segments[arm, segment, _ROWS]
+        column = segments[arm, segment, _COLUMN]
+        total = out[column]
+        for k in range(rows):
+            total += values[column + rows - k if down else column + 1 + k]
+            out[column + 1 + k] = total
+
+
+@kernel(
+    types.int64(READ_1D, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_2D, WRITE_2D, WRITE_3D)
+)
+def _open_cell(x, start, slot, arms, places, centres, carries):
+    """Begin a cell with the row `start` of a slot; return the blocks of its longest arm."""
+    state = arms.shape[0] - 1
+    end = places[_HIGHS, slot]
+    arms[state, _CELL_START] = start
+    arms[state, _CELL_END] = end
+    # A row of the cell is in the windows of all rows of the cell. So where a window's rows all
+    # but coincide, its power sums are taken about one of them, and keep their relative accuracy.
+    centres[state, 0] = x[(start + end) // 2]
+    for arm in range(state):
+        arms[arm, _ORIGIN] = start if arm < 2 else end
+        arms[arm, _AT] = -1
+        arms[arm, _CARRIED] = 0
+        for row in range(carries.shape[2]):
+            carries[arm, 0, row] = 0.0
+    return max(start - places[_LOWS, slot], end - start - 1 if state > 2 else 0) // _BLOCK
+
+
+@kernel(
+    types.int64(types.int64, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_3D, _INTEGERS_2D,
+                WRITE_2D, READ_3D, WRITE_3D)
+)  # fmt: skip
+def _plan_slots(side, begin, end, arms, segments, places, centres, carries, tables):
+    """Plan the segments that a cell's slots need, and note in which columns they will find them.
+
+    A segment is the first rows of a block of an arm, on top of the arm's carry. Stops where the
+    tables are full, or the arm that grows comes to a block whose carry is wanting; returns the
+    slot at which it stopped.
+    """
+    a = 2 * side
+    b = a + 1
+    state = arms.shape[0] - 1
+    # An arm reaches from its origin down to, or up to, what these rows of `places` say.
+    down = _LOWS if side == 0 else _OWN
+    up = _OWN if side == 0 and state > 2 else _HIGHS
+    down_origin = arms[a, _ORIGIN]
+    up_origin = arms[b, _ORIGIN]
+    longest = places[up, end - 1] - up_origin
+    k = begin
+    going = True
+    while k < end and going:
+        down_at = (down_origin - places[down, k]) // _BLOCK
+        up_at = (places[up, k] - up_origin) // _BLOCK
+        full = max(arms[a, _FILLED], arms[b, _FILLED]) + _BLOCK + 1 > _COLUMNS
+        going = not full and up_at <= arms[b, _CARRIED]
+        if going:
+            # The slots whose arms end in the same two blocks.
+            lowest = down_origin - down_at * _BLOCK
+            highest = up_origin + (up_at + 1) * _BLOCK
+            low = k + 1
+            high = end
+            while low < high:
+                middle = (low + high) // 2
+                if places[down, middle] <= lowest and places[up, middle] < highest:
+                    low = middle + 1
+                else:
+                    high = middle
+            for arm in range(a, b + 1):
+                at = down_at if arm == a else up_at
+                if at != arms[arm, _AT]:
+                    if arm == a:
+                        first = places[down, k]
+                        rows = lowest - first
+                    else:
+                        first = highest - _BLOCK
+                        rows = min(longest - at * _BLOCK, _BLOCK - 1)
+                    segment = arms[arm, _SEGMENTS]
+                    column = arms[arm, _FILLED]
+                    segments[arm, segment, _FIRST] = first
+                    segments[arm, segment, _ROWS] = rows
+                    segments[arm, segment, _COLUMN] = column
+                    centres[arm, segment] = centres[state, 0]
+                    for row in range(carries.shape[2]):
+                        tables[arm, row, column] = carries[arm, at if arm == a else 0, row]
+                    arms[arm, _AT] = at
+                    arms[arm, _SEGMENTS] = segment + 1
+                    arms[arm, _FILLED] = column + rows + 1
+            shift = segments[a, arms[a, _SEGMENTS] - 1, _COLUMN] + lowest
+            for slot in range(k, low):
+                places[_PLACE + a, slot] = shift - places[down, slot]
+            shift = segments[b, arms[b, _SEGMENTS] - 1, _COLUMN] - (highest - _BLOCK)
+            for slot in range(k, low):
+                places[_PLACE + b, slot] = shift + places[up, slot]
+            k = low
+    return k
+
+
+@kernel(
+    types.void(READ_1D, READ_1D, types.float64, types.int64, _INTEGERS_2D, _INTEGERS_3D, READ_2D,
+               WRITE_2D)
+)  # fmt: skip
+def _load_segments(x, y, per_unit, arm, arms, segments, centres, terms):
+    """Terms of the planned segments of an arm, and an end to the plan."""
+    for segment in range(arms[arm, _SEGMENTS]):
+        _load(
+            x, y, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
+            centres[arm, segment], per_unit, segments[arm, segment, _COLUMN] + 1, terms,
+        )  # fmt: skip
+    arms[arm, _AT] = -1
+    arms[arm, _FILLED] = 0
+
+
+@kernel(types.void(READ_1D, types.int64, _INTEGERS_2D, _INTEGERS_3D, WRITE_2D))
+def _weigh_segments(weight, arm, arms, segments, terms):
+    """Weigh the terms of the planned segments of an arm."""
+    for segment in range(arms[arm, _SEGMENTS]):
+        _weigh(
+            weight, segments[arm, segment, _FIRST], segments[arm, segment, _ROWS],
+            segments[arm, segment, _COLUMN] + 1, terms,
+        )  # fmt: skip
+
+
+@kernel(
+    types.void(READ_3D, _INTEGERS_2D, types.int64, types.int64, types.int64, types.int64,
+               types.int64, WRITE_3D)
+)  # fmt: skip
+def _join(tables, places, side, first_row, last_row, begin, end, moments):
+    """Sum over a window = sum over the arm that shortens + sum over the arm that grows."""
+    down_columns = places[_PLACE + 2 * side]
+    up_columns = places[_PLACE + 2 * side + 1]
+    for row in range(first_row, last_row + 1):
+        out = moments[side, row]
+        down = tables[2 * side, row]
+        up = tables[2 * side + 1, row]
+        for k in range(np.uint64(begin), np.uint64(end)):
+            out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
+
+
+@kernel(types.void(_INTEGERS_2D, types.int64, types.int64, types.int64, types.int64, WRITE_3D))
+def _join_counts(places, down, up, side, count, moments):
+    """S_0 where all weights are 1: the rows between two rows of `places`."""
+    out = moments[side, 0]
+    lows = places[down]
+    highs = places[up]
+    for k in range(count):
+        out[k] = highs[k] - lows[k]
+
+
+@helper
+def first_beyond(x, start, place, reach):
+    """Return the first index from `start` on with x - place > reach, or n; by doubling steps."""
+    n = x.shape[0]
+    step = 1
+    low = start
+    high = start
+    while high < n and x[high] - place <= reach:
+        low = high + 1
+        high = min(n, high + step)
+        step *= 2
+    while low < high:
+        middle = (low + high) // 2
+        if x[middle] - place <= reach:
+            low = middle + 1
+        else:
+            high = middle
+    return low
+
+
+@helper
+def first_within(x, start, place, reach):
+    """Return the first index from `start` on with place - x <= reach, or n; by doubling steps."""
+    n = x.shape[0]
+    step = 1
+    low = start
+    high = start
+    while high < n and place - x[high] > reach:
+        low = high + 1
+        high = min(n, high + step)
+        step *= 2
+    while low < high:
+        middle = (low + high) // 2
+        if place - x[middle] > reach:
+            low = middle + 1
+        else:
+            high = middle
+    return low
+
+
+@helper
+def _step_high(x, j, place, reach):
+    """Move j to the first row beyond the window, six rows at a look."""
+    passed = np.uint64(6)
+    while passed == np.uint64(6):
+        passed = (
+            np.uint64(x[j] - place <= reach)
+            + np.uint64(x[j + np.uint64(1)] - place <= reach)
+            + np.uint64(x[j + np.uint64(2)] - place <= reach)
+            + np.uint64(x[j + np.uint64(3)] - place <= reach)
+            + np.uint64(x[j + np.uint64(4)] - place <= reach)
+            + np.uint64(x[j + np.uint64(5)] - place <= reach)
+        )
+        j += passed
+    return j
+
+
+@helper
+def _step_low(x, j, place, reach):
+    """Move j to the first row of the window, six rows at a look."""
+    passed = np.uint64(6)
+    while passed == np.uint64(6):
+        passed = (
+            np.uint64(place - x[j] > reach)
+            + np.uint64(place - x[j + np.uint64(1)] > reach)
+            + np.uint64(place - x[j + np.uint64(2)] > reach)
+            + np.uint64(place - x[j + np.uint64(3)] > reach)
+            + np.uint64(place - x[j + np.uint64(4)] > reach)
+            + np.uint64(place - x[j + np.uint64(5)] > reach)
+        )
+        j += passed
+    return j
+
+
+@kernel(types.void(READ_1D, types.float64, types.int64, types.int64, _INTEGERS_2D, _INTEGERS_2D))
+def _find_edges(x, bandwidth, first, count, arms, places):
+    """Windows of rows first, first + 1, ...: row r of slot k is in it when lows <= r < highs.
+
+    The last row of `arms` holds indices not above the first row's edges, and gets the last's.
+    Two halves go side by side, each looking six rows ahead: a jump on every comparison costs
+    four times as much on irregular data (measured 18 against 4.4 ns a row).
+    """
+    n = x.shape[0]
+    lows = places[_LOWS]
+    highs = places[_HIGHS]
+    own = places[_OWN]
+    state = arms.shape[0] - 1
+    low = first_within(x, arms[state, _LOW], x[first], bandwidth)
+    high = first_beyond(x, arms[state, _HIGH], x[first], bandwidth)
+    last = x[first + count - 1]
+    last_low = first_within(x, low, last, bandwidth)
+    last_high = first_beyond(x, high, last, bandwidth)
+    arms[state, _LOW] = last_low
+    arms[state, _HIGH] = last_high
+    half = count // 2 if last_high + 6 <= n else 0
+    if half > 0:
+        xs = x[first : first + count]
+        k1 = np.uint64(half)
+        l0 = np.uint64(low)
+        h0 = np.uint64(high)
+        l1 = np.uint64(first_within(x, low, xs[k1], bandwidth))
+        h1 = np.uint64(first_beyond(x, high, xs[k1], bandwidth))
+        for k in range(k1):
+            place = xs[k]
+            l0 = _step_low(x, l0, place, bandwidth)
+            lows[k] = l0
+            h0 = _step_high(x, h0, place, bandwidth)
+            highs[k] = h0
+            place = xs[k1 + k]
+            l1 = _step_low(x, l1, place, bandwidth)
+            lows[k1 + k] = l1
+            h1 = _step_high(x, h1, place, bandwidth)
+            highs[k1 + k] = h1
+        low = np.int64(l1)
+        high = np.int64(h1)
+    for k in range(2 * half, count):
+        place = x[first + k]
+        while place - x[low] > bandwidth:
+            low += 1
+        while high < n and x[high] - place <= bandwidth:
+            high += 1
+        lows[k] = low
+        highs[k] = high
+    for k in range(count):
+        own[k] = first + k + 1
+
+
+@kernel(types.boolean(READ_1D, types.float64, types.int64, types.int64))
+def _all_short(x, bandwidth, first, count):
+    """Whether all windows of these rows end before `_REACH` rows on either side."""
+    n = x.shape[0]
+    begin = max(first - _REACH, 0)
+    end = min(first + count, n - _REACH)
+    if end > begin and x[begin + _REACH] - x[begin] <= bandwidth:
+        return False
+    near = x[begin:end]
+    far = x[begin + _REACH : end + _REACH]
+    long = 0
+    for k in range(end - begin):
+        long += far[k] - near[k] <= bandwidth
+    return long == 0
+
+
+@kernel(
+    types.int64(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
+                types.int64, types.int64, WRITE_2D, WRITE_2D)
+)  # fmt: skip
+def _add_neighbours(
+    x, y, weight, coefficients, bandwidth, degree, first, count, offset, terms, sums
+):
+    """Add to the sums of each slot the row `offset` places away; return how many were in reach."""
+    n = x.shape[0]
+    begin = max(0, -offset - first)
+    end = max(min(count, n - offset - first), begin)
+    size = end - begin
+    here = x[first + begin : first + end]
+    there = x[first + begin + offset : first + end + offset]
+    ys = y[first + begin + offset : first + end + offset]
+    ws = weight[first + begin + offset : first + end + offset]
+    u = terms[0]
+    g = terms[1]
+    w = terms[2]
+    per_unit = 1.0 / bandwidth
+    top = coefficients.shape[0] - 1
+    highest = coefficients[top]
+    met = 0
+    for k in range(size):
+        d = there[k] - here[k]
+        inside = abs(d) <= bandwidth
+        met += inside
+        u[k] = d * per_unit if inside else 0.0
+        g[k] = highest if inside else 0.0
+        w[k] = 1.0 if inside else 0.0
+    if weight.shape[0] > 0:
+        for k in range(size):
+            w[k] *= ws[k]
+            g[k] *= ws[k]
+    for q in range(top - 1, -1, -1):
+        c = coefficients[q]
+        for k in range(size):
+            g[k] = g[k] * abs(u[k]) + c * w[k]
+    for j in range(degree + 1):
+        s = sums[j, begin:end]
+        t = sums[2 * degree + 1 + j, begin:end]
+        for k in range(size):
+            s[k] += g[k]
+            t[k] += g[k] * ys[k]
+            g[k] *= u[k]
+    for j in range(degree + 1, 2 * degree + 1):
+        s = sums[j, begin:end]
+        for k in range(size):
+            s[k] += g[k]
+            g[k] *= u[k]
+    return met
+
+
+@kernel(
+    types.void(WRITE_3D, READ_1D, types.int64, types.boolean, types.int64, types.int64, WRITE_2D)
+)
+def _add_sums(moments, coefficients, side, left, degree, count, sums):
+    """Add kernel sums made of power sums about a centre; last row of `sums`: (centre - x_i) / h.
+
+    Moved to x_i by sum w (v + s)^r = sum w v (v + s)^(r-1) + s sum w (v + s)^(r-1), in place.
+    `left`: the rows lie left of x_i, where |u|^q = (-1)^q u^q.
+    """
+    top = coefficients.shape[0] - 1
+    pairs = (moments.shape[1] - 1) // 2
+    shift = sums[3 * degree + 2]
+    for first, last in ((0, top + 2 * degree), (1 + pairs, 1 + pairs + top + degree)):
+        for start in range(first + 1, last + 1):
+            for row in range(last, start - 1, -1):
+                upper = moments[side, row]
+                lower = moments[side, row - 1]
+                for k in range(count):
+                    upper[k] += shift[k] * lower[k]
+    for j in range(3 * degree + 2):
+        row = j if j <= 2 * degree else 1 + pairs + j - (2 * degree + 1)
+        out = sums[j]
+        for q in range(top + 1):
+            c = coefficients[q]
+            if c == 0.0:
+                continue
+            if left and q % 2 == 1:
+                c = -c
+            source = moments[side, row + q]
+            for k in range(count):
+                out[k] += c * source[k]
+
+
+
+
+@kernel(
+    types.void(READ_1D, types.int64, types.int64, types.int64, types.float64, types.float64,
+               types.int64, WRITE_2D)
+)  # fmt: skip
+def _place_slots(x, first, begin, end, centre, per_unit, row, sums):
+    """Distances from the rows of slots begin to end to their cell's centre, in bandwidths."""
+    here = x[first + begin : first + end]
+    out = sums[row, begin:end]
+    for k in range(end - begin):
+        out[k] = (centre - here[k]) * per_unit
+
+
+@kernel(WORK(types.int64, READ_1D, types.int64))
+def make_work(n, coefficients, degree):
+    """Allocate the work space for n rows, a kernel and a local polynomial of some degree."""
+    top = coefficients.shape[0] - 1
+    sides = 1
+    for q in range(1, top + 1, 2):
+        if coefficients[q] != 0.0:
+            sides = 2
+    pairs = _round_up(max(top + 2 * degree, top + degree + 1))
+    rows = 2 * pairs + 1
+    count = 2 * sides
+    arms = np.zeros((count + 1, 5), np.int64)
+    slots = _SLOTS + _STRIDE
+    columns = _COLUMNS + _STRIDE
+    return Work(
+        arms,
+        np.zeros((count, _SLOTS, 3), np.int64),
+        np.zeros((_PLACE + count, slots), np.int64),
+        np.zeros((count + 1, _SLOTS)),
+        np.zeros((4, columns)),
+        np.empty((count, n // _BLOCK + 2, rows)),
+        np.zeros((count, rows, columns)),
+        np.zeros((sides, rows, slots)),
+        np.zeros((3 * degree + 3, slots)),
+    )
+
+
+@kernel(types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
+                   types.int64, *_WORK_TYPES))  # fmt: skip
+def fill_sums(
+    x, y, weight, coefficients, bandwidth, degree, first, count,
+    arms, segments, places, centres, terms, carries, tables, moments, sums,
+):  # fmt: skip
+    """Put the kernel sums of rows first, first + 1, ... (at most `_SLOTS`) into `sums`.
+
+    Ranges must follow each other: the work arrays carry the cell from one call to the next.
+    """
+    for row in range(3 * degree + 2):
+        for k in range(count):
+            sums[row, k] = 0.0
+    state = arms.shape[0] - 1
+    if _all_short(x, bandwidth, first, count):
+        _add_neighbours(x, y, weight, coefficients, bandwidth, degree, first, count, 0, terms, sums)
+        offset = 1
+        met = 1
+        while met > 0 and offset < _REACH:
+            met = 0
+            for sign in range(-1, 2, 2):
+                met += _add_neighbours(
+                    x, y, weight, coefficients, bandwidth, degree, first, count, sign * offset,
+                    terms, sums,
+                )  # fmt: skip
+            offset += 1
+        arms[state, _CELL_END] = first + count
+        return
+    _find_edges(x, bandwidth, first, count, arms, places)
+    sides = moments.shape[0]
+    powers = carries.shape[2]
+    pairs = (powers - 1) // 2
+    top = coefficients.shape[0] - 1
+    weighted = weight.shape[0] > 0
+    per_unit = 1.0 / bandwidth
+    done = 0
+    while done < count:
+        # As many slots as the tables have room for.
+        k = done
+        full = False
+        while k < count and not full:
+            if first + k >= arms[state, _CELL_END]:
+                blocks = _open_cell(x, first + k, k, arms, places, centres, carries)
+                # An arm that shortens needs its farthest block first: all are summed now.
+                for arm in range(0, state, 2):
+                    for at in range(blocks):
+                        start = arms[arm, _ORIGIN] - (at + 1) * _BLOCK
+                        if start >= 0:
+                            centre = centres[state, 0]
+                            _load_block(x, y, start, centre, per_unit, terms)
+                            if weighted:
+                                _weigh_block(weight, start, terms)
+                            _sum_block(terms, weighted, arm, at + 1, carries)
+                            for row in range(powers):
+                                carries[arm, at + 1, row] += carries[arm, at, row]
+            stop = min(count, arms[state, _CELL_END] - first)
+            centre = centres[state, 0]
+            _place_slots(x, first, k, stop, centre, per_unit, 3 * degree + 2, sums)
+            planned = stop
+            for side in range(sides):
+                arm = 2 * side + 1
+                up = _HIGHS if arm == state - 1 else _OWN
+                at = _plan_slots(
+                    side, k, planned, arms, segments, places, centres, carries, tables
+                )
+                while at < planned and (
+                    (places[up, at] - arms[arm, _ORIGIN]) // _BLOCK > arms[arm, _CARRIED]
+                ):
+                    start = arms[arm, _ORIGIN] + arms[arm, _CARRIED] * _BLOCK
+                    _load_block(x, y, start, centre, per_unit, terms)
+                    if weighted:
+                        _weigh_block(weight, start, terms)
+                    _sum_block(terms, weighted, arm, 1, carries)
+                    for row in range(powers):
+                        carries[arm, 0, row] += carries[arm, 1, row]
+                    arms[arm, _CARRIED] += 1
+                    at = _plan_slots(
+                        side, at, planned, arms, segments, places, centres, carries, tables
+                    )
+                planned = at
+            full = planned < stop
+            k = planned
+        for arm in range(state):
+            segments_used = arms[arm, _SEGMENTS]
+            down = arm % 2 == 0
+            _load_segments(x, y, per_unit, arm, arms, segments, centres, terms)
+            if weighted:
+                _weigh_segments(weight, arm, arms, segments, terms)
+                _scan_one(terms, segments, arm, segments_used, down, tables)
+            for q in range(0, pairs, 4):
+                _scan_four(terms, segments, arm, segments_used, down, 1 + q, 1 + pairs + q, tables)
+            arms[arm, _SEGMENTS] = 0
+        for side in range(sides):
+            s_first = 0 if weighted else 1
+            _join(tables, places, side, s_first, top + 2 * degree, done, k, moments)
+            _join(tables, places, side, 1 + pairs, 1 + pairs + top + degree, done, k, moments)
+        done = k
+    for side in range(sides):
+        if not weighted:
+            down_row = _LOWS if side == 0 else _OWN
+            up_row = _HIGHS if side == sides - 1 else _OWN
+            _join_counts(places, down_row, up_row, side, count, moments)
+        _add_sums(moments, coefficients, side, sides == 2 and side == 0, degree, count, sums)
