@@ -84,6 +84,7 @@ def make_curve(
     smoothing = smoothing or Smoothing()
     band = band or Band()
     _criterion(reading, smoothing)
+    _check_band(smoothing, band)
     block = None if reading.blocks is None else reading.blocks.column
     columns = Columns(x, y, weight, count, block=block)
     with open_source(data, columns, where=reading.where) as source:
@@ -138,6 +139,17 @@ def _criterion(reading: Reading, smoothing: Smoothing) -> str:
     if smoothing.criterion is not None:
         return smoothing.criterion
     return "leave-one-out" if reading.block is None else "leave-block-out"
+
+
+def _check_band(smoothing: Smoothing, band: Band) -> None:
+    """Refuse a band for the whole curve with a kernel that jumps: its weights turn without end."""
+    from fastsmooth.kernels.shapes import SHAPES
+
+    if band.kind == "simultaneous" and SHAPES[smoothing.kernel].smoothness == 0:
+        raise InputError(
+            "--band simultaneous", "come with a kernel without a jump",
+            f"--kernel is {smoothing.kernel}", "leave --kernel out",
+        )  # fmt: skip
 
 
 def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> float | None:

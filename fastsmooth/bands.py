@@ -360,9 +360,7 @@ def _value_for_all(
     return pointwise_value(1.0 - tail, degrees)
 
 
-def _weight_chords(
-    places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: str
-) -> Floats:
+def _weight_chords(places: Floats, fits: Fits, noise: Noise, shape: Shape, kind: str) -> Floats:
     from fastsmooth.kernels import arcs
 
     weights = weights_of(_all_sums(places, fits, noise, shape).s, fits.bandwidth_bins, kind)

@@ -31,7 +31,7 @@ class Deviations:
     shares : (folds, n) float64
         The fold's share of the window's kernel weight.
     noise_shares : (folds, n) float64
-        The fold's share of the variance that the fit would have if rows were independent; NaN
+        The fold's share of the variance that the fit would have if rows were independent; 0
         where the window carries no fit.
     """
 
@@ -47,16 +47,19 @@ class Deviations:
 
     @property
     def degrees(self) -> Floats:
-        """Degrees of freedom, (n,): one less than the equal folds that would be as sharp.
+        """Degrees of freedom, (n,): one less than the effective number of folds.
 
-        (sum v)^2 / sum v^2 - 1 over the folds' shares v of the variance (Satterthwaite 1946,
-        Biometrics Bull. 2:110), taken under independent rows (Bell & McCaffrey 2002, Survey
-        Methodology 28:169). Shares of the kernel weight would not do: where a window ends at the
+        That number is exp(-sum v log v) (Hill 1973, Ecology 54:427) over the folds' shares v of
+        the variance under independent rows, as in Bell & McCaffrey (2002, Survey Methodology
+        28:169). Satterthwaite's 1 / sum v^2 is smaller, and right for the spread of the error;
+        but the error shares its folds with the fit, and far out the ratio of the two follows t
+        with these degrees. Shares of the kernel weight would not do: where a window ends with the
         last hot day, that day makes the fit, however many rows the others have.
         """
+        v = self.noise_shares
         with np.errstate(invalid="ignore", divide="ignore"):
-            equal = self.noise_shares.sum(axis=0) ** 2 / (self.noise_shares**2).sum(axis=0)
-        return np.maximum(np.nan_to_num(equal) - 1.0, 0.0)
+            entropy = -np.sum(np.where(v > 0.0, v * np.log(v), 0.0), axis=0)
+        return np.maximum(np.exp(entropy) - 1.0, 0.0)
 
     @property
     def std_error(self) -> Floats:
@@ -135,5 +138,5 @@ def leave_out_folds(
     with np.errstate(invalid="ignore", divide="ignore"):
         shares = np.clip(s[:, 0] / s[:, 0].sum(axis=0), 0.0, None)
         noise = np.array([weights.variance(one) for one in v])
-        noise_shares = noise / noise.sum(axis=0)
+        noise_shares = np.nan_to_num(noise / noise.sum(axis=0))
     return Deviations(moved, slope_moved, shares, noise_shares)

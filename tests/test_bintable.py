@@ -9,7 +9,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from fastsmooth.bintable import BinTable, Pyramid, Tally
@@ -164,6 +164,7 @@ def squares_about_reference(level):
 
 
 @pytest.mark.parametrize("plan", [PLAIN, WEIGHTED], ids=["plain", "weighted"])
+@settings(max_examples=20)
 @given(seed=st.integers(0, 10_000))
 def test_a_coarser_level_is_a_table_of_twice_the_width(plan, seed):
     rng = np.random.default_rng(seed)

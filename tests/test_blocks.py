@@ -2,6 +2,7 @@
 
 from collections import Counter
 from datetime import UTC, date, datetime, timedelta
+from itertools import pairwise
 
 import numpy as np
 import pyarrow as pa
@@ -159,7 +160,7 @@ def test_chunks_and_order_do_not_matter_for_values(values, cuts, random):
     whole, keys = deal(column, Block("plant"))
     cuts = sorted({0, len(values), *(min(cut, len(values)) for cut in cuts)})
     parts = [
-        deal(column.slice(a, b - a), Block("plant")) for a, b in zip(cuts, cuts[1:], strict=False)
+        deal(column.slice(a, b - a), Block("plant")) for a, b in pairwise(cuts)
     ]
     assert [fold for folds, _ in parts for fold in folds] == whole
     assert set().union(*(met for _, met in parts)) == keys
@@ -197,7 +198,9 @@ def test_instants_are_dealt_by_the_clock_of_the_zone(
     if tick == "s":
         moments = [moment.replace(microsecond=0) for moment in moments]
     elif tick == "ms":
-        moments = [moment.replace(microsecond=moment.microsecond // 1000 * 1000) for moment in moments]
+        moments = [
+            moment.replace(microsecond=moment.microsecond // 1000 * 1000) for moment in moments
+        ]
     instants = [moment.replace(tzinfo=UTC) for moment in moments]
     instants = sorted(instants) if in_order else instants
     column = pa.array(instants, pa.timestamp(tick, "UTC" if from_block else zone))

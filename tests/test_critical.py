@@ -1,14 +1,20 @@
 """Critical values: quantiles, published formulas, and paths simulated to see how high they go."""
 
 import math
+from itertools import pairwise
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy import stats
+from scipy import optimize, stats
 
+from fastsmooth import Band, InputError, Reading, Smoothing, make_curve
+from fastsmooth.blocks import fold_of_number
 from fastsmooth.critical import chords_of_path, pointwise_value, tail_for_all
+from fastsmooth.curve import OUTSIDE, THIN
+from tests.oracle import local
+from tests.oracle.folds import without
 
 INFINITE = math.inf
 
@@ -164,3 +170,98 @@ def test_paths_with_errors_of_their_own_cross_as_often_as_they_may(degrees):
     # The paths behind the error tell the arc length themselves, without bias: the direction of
     # nu normal paths turns by sqrt(lambda) chi_(nu-1) / chi_nu, whose mean is sqrt(lambda).
     assert np.mean(arcs) == pytest.approx(arc_length, rel=0.03)
+
+
+# Through the whole engine.
+
+
+def readings(days=40, rows_per_day=6, seed=9):
+    rng = np.random.default_rng(seed)
+    x = rng.uniform(0.0, 24.0, days * rows_per_day)
+    shift = (0.5 * rng.normal(size=days)).repeat(rows_per_day)
+    y = np.sin(x / 4.0) + shift + 0.2 * rng.normal(size=x.size)
+    return x, y, np.arange(days).repeat(rows_per_day)
+
+
+def curve_of(x, y, day, kind, block="day", **band):
+    return make_curve(
+        {"wet_bulb_c": x, "power_kw": y, "day": day}, "wet_bulb_c", "power_kw",
+        reading=Reading(block=block, folds=16, threads=1),
+        smoothing=Smoothing(bandwidth=8.0, widths=8), band=Band(kind=kind, least_rows=0.0, **band),
+    )  # fmt: skip
+
+
+def half_over_error(made):
+    return (made.upper - made.lower) / 2.0 / made.std_error
+
+
+def test_the_band_for_all_solves_the_equation_of_refitted_paths():
+    x, y, day = readings()
+    pointwise, for_all = (curve_of(x, y, day, kind) for kind in ("pointwise", "simultaneous"))
+    lists = x.tolist(), y.tolist()
+    folds = [fold_of_number(one, 16) for one in day.tolist()]
+    # Points of the band, and places half-way for the path.
+    places = np.linspace(float(x.min()), float(x.max()), 61).tolist()
+
+    def parts(at):
+        whole = local.fit_at(at, *lists, 8.0, "biweight", 2)
+        moved = [
+            local.fit_at(at, *(without(one, folds, fold) for one in lists), 8.0, "biweight", 2).value
+            - whole.value
+            for fold in range(16)
+        ]
+        shares = [
+            math.fsum(w * w for w, own in zip(whole.smoothing, folds, strict=True) if own == fold)
+            for fold in range(16)
+        ]
+        shares = [one / math.fsum(shares) for one in shares]
+        degrees = math.exp(-math.fsum(one * math.log(one) for one in shares)) - 1.0
+        length = math.sqrt(math.fsum(one * one for one in moved))
+        return [one / length for one in moved], degrees
+
+    units, degrees = zip(*(parts(at) for at in places), strict=True)
+    degrees = np.array(degrees)
+    chords = np.array([math.dist(a, b) for a, b in pairwise(units)])
+    between = (degrees[1:] + degrees[:-1]) / 2.0
+
+    def excess_of(log_p):
+        c = stats.t.isf(math.exp(log_p) / 2.0, between)
+        tails = (1.0 + c**2 / between) ** (-(between - 1.0) / 2.0)
+        return chords @ tails / math.pi + math.exp(log_p) - 0.05
+
+    p = math.exp(optimize.bisect(excess_of, math.log(1e-8), math.log(0.05)))
+    own = np.interp(for_all.x, places, degrees)
+    assert (for_all.status != OUTSIDE).all()
+    assert (for_all.status != THIN).all()
+    np.testing.assert_allclose(half_over_error(pointwise), stats.t.isf(0.025, own), rtol=2e-2)
+    np.testing.assert_allclose(half_over_error(for_all), stats.t.isf(p / 2.0, own), rtol=2e-2)
+    np.testing.assert_allclose(for_all.std_error, pointwise.std_error, rtol=1e-12)
+    np.testing.assert_allclose(for_all.estimate, pointwise.estimate, rtol=1e-12)
+
+
+@pytest.mark.parametrize("block", ["day", None])
+def test_a_band_for_all_is_wider_and_a_higher_level_wider_still(block):
+    x, y, day = readings()
+    pointwise = curve_of(x, y, day, "pointwise", block)
+    for_all = curve_of(x, y, day, "simultaneous", block)
+    strict = curve_of(x, y, day, "simultaneous", block, level=0.99)
+    known = np.isfinite(pointwise.lower)
+    assert known.sum() > 200
+    assert np.all(half_over_error(for_all)[known] > half_over_error(pointwise)[known])
+    assert np.all(half_over_error(strict)[known] > half_over_error(for_all)[known])
+
+
+def test_a_kernel_with_a_jump_has_no_band_for_all():
+    x, y, day = readings()
+    data = {"wet_bulb_c": x, "power_kw": y}
+    smoothing = Smoothing(kernel="uniform", widths=8)
+    with pytest.raises(InputError) as caught:
+        make_curve(
+            data, "wet_bulb_c", "power_kw", smoothing=smoothing, band=Band(kind="simultaneous")
+        )
+    assert str(caught.value) == (
+        "--band simultaneous must come with a kernel without a jump, but --kernel is uniform; "
+        "leave --kernel out."
+    )
+    made = make_curve(data, "wet_bulb_c", "power_kw", smoothing=smoothing, band=Band(points=9))
+    assert np.isfinite(made.lower).all()

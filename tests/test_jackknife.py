@@ -7,6 +7,7 @@ import pytest
 from fastsmooth.kernels.shapes import SHAPES
 from hypothesis import given
 from hypothesis import strategies as st
+from scipy import stats
 
 from fastsmooth import Band, Reading, Smoothing, make_curve
 from fastsmooth.bintable import BinTable, Pyramid
@@ -82,8 +83,8 @@ def test_two_equal_folds_worked_by_hand():
     [
         ((0.25, 0.25, 0.25, 0.25), 3.0),
         ((0.25, 0.25, 0.25, 0.25, 0.0), 3.0),
-        # 1 / (0.16 + 0.09 + 0.04 + 0.01) - 1
-        ((0.4, 0.3, 0.2, 0.1), 7.0 / 3.0),
+        # 0.5^-0.5 0.25^-0.25 0.25^-0.25 = 2^0.5 2^0.5 2^0.5
+        ((0.5, 0.25, 0.25), 2.0**1.5 - 1.0),
         ((1.0, 0.0), 0.0),
     ],
 )
@@ -98,7 +99,9 @@ def test_a_window_of_one_fold_has_no_error():
 
 
 def test_a_window_without_a_fit_has_no_degrees():
-    made = deviations([50.0], np.array([0.0, 1.0, 100.0]), np.zeros(3), [0, 1, 2], 5.0, "biweight", LINE)
+    made = deviations(
+        [50.0], np.array([0.0, 1.0, 100.0]), np.zeros(3), [0, 1, 2], 5.0, "biweight", LINE
+    )
     assert made.degrees[0] == 0.0
 
 
@@ -116,7 +119,7 @@ def test_shares_of_the_variance_are_sums_of_squared_weights(kind):
         ]
         shares = [one / math.fsum(squares) for one in squares]
         np.testing.assert_allclose(made.noise_shares[:, place], shares, rtol=2e-3, atol=1e-5)
-        expected = 1.0 / math.fsum(one**2 for one in shares) - 1.0
+        expected = math.exp(-math.fsum(one * math.log(one) for one in shares)) - 1.0
         assert made.degrees[place] == pytest.approx(expected, rel=2e-3)
 
 
@@ -128,7 +131,28 @@ def test_one_fold_at_the_end_of_the_data_makes_the_fit():
     made = deviations([12.0], x, np.cos(x), folds, 8.0, "biweight", LINE)
     assert made.shares[4, 0] < 0.2
     assert made.noise_shares[4, 0] > 2.0 * made.shares[4, 0]
-    assert made.degrees[0] < 2.5
+    assert made.degrees[0] < 3.0
+
+
+@pytest.mark.parametrize(("folds", "evenness"), [(32, 2.0), (32, 0.4), (14, 1.0)])
+def test_far_out_the_ratio_follows_t_with_these_degrees(folds, evenness):
+    """Means of independent normal rows in folds of unequal size, over their jackknife error."""
+    rng = np.random.default_rng(int(10 * evenness) + folds)
+    shares = rng.gamma(evenness, size=folds)
+    shares /= shares.sum()
+    runs = 100_000
+    means = rng.normal(size=(folds, runs)) / np.sqrt(shares)[:, np.newaxis]
+    whole = shares @ means
+    # (m - share mean_g) / (1 - share) is the mean without the fold.
+    moved = (shares / (1.0 - shares))[:, np.newaxis] * (whole - means)
+    columns = np.repeat(shares[:, np.newaxis], runs, axis=1)
+    made = Deviations(moved, np.zeros_like(moved), columns, columns)
+    ratio = np.abs(whole / made.std_error)
+    degrees = float(made.degrees[0])
+    for tail, least in ((0.05, 0.9), (0.01, 0.85), (0.001, 0.6)):
+        beyond = np.mean(ratio > stats.t.isf(tail / 2.0, degrees)) / tail
+        # Three standard errors of the share in so many runs.
+        assert least < beyond < 1.0 + 3.0 / math.sqrt(tail * runs) + 0.05
 
 
 # Against refits.
@@ -152,9 +176,7 @@ def test_each_fold_is_really_left_out(kernel, kind):
             )  # fmt: skip
             # The binned sums of 8192 bins stay within some 1e-5 of the rows' own.
             assert made.moved[fold, place] == pytest.approx(left.value - whole, abs=2e-5)
-        assert made.std_error[place] == pytest.approx(
-            oracle.jackknife_error(one, *lists), rel=1e-4
-        )
+        assert made.std_error[place] == pytest.approx(oracle.jackknife_error(one, *lists), rel=1e-4)
 
 
 @given(st.integers(0, 10**6), st.integers(2, 9), st.floats(2.0, 8.0))
@@ -172,9 +194,7 @@ def test_on_few_places_binning_loses_nothing(seed, count, h):
     assert level.folds.shape[0] == len(set(folds))
     assert made.folds_met[0] == len(met)
     if len(met) >= 2:
-        error = oracle.jackknife_error(
-            12.0, x.tolist(), y.tolist(), folds, h, "triangular", 0
-        )
+        error = oracle.jackknife_error(12.0, x.tolist(), y.tolist(), folds, h, "triangular", 0)
         assert made.std_error[0] == pytest.approx(error, rel=2e-3, abs=1e-9)
     assert made.shares.sum(axis=0)[0] == pytest.approx(1.0)
 

@@ -36,11 +36,7 @@ def scores_of(x, y, folds, h, kernel, bins=BINS):
     return left_out_fold_scores(one, one, shape, h, least_weight(pyramid, shape))
 
 
-@given(
-    st.lists(
-        st.lists(st.floats(-1e6, 1e6), min_size=3, max_size=3), min_size=1, max_size=9
-    )
-)
+@given(st.lists(st.lists(st.floats(-1e6, 1e6), min_size=3, max_size=3), min_size=1, max_size=9))
 def test_others_are_all_but_one(parts):
     found = others(np.array(parts))
     for place in range(len(parts)):
@@ -82,9 +78,7 @@ def test_ties_and_uneven_folds_are_left_out_too(rows):
     y = np.array([1.0, -1.0, *(float(one) for _, one, _ in rows)])
     folds = [4, 5, *(fold for _, _, fold in rows)]
     # A window of the whole range: whatever fold is left out, others remain in reach.
-    found, lost = scores_of(x, y, folds, 40.0, "epanechnikov", bins=512)[
-        "local-constant"
-    ]
+    found, lost = scores_of(x, y, folds, 40.0, "epanechnikov", bins=512)["local-constant"]
     assert lost == 0.0
     expected = oracle.scores_per_fold(x.tolist(), y.tolist(), folds, 40.0, "epanechnikov", 0)
     np.testing.assert_allclose(
@@ -130,9 +124,7 @@ def test_the_search_takes_the_criterion_from_fold_tables():
         best = oracle.scores_per_fold(*lists, trail.bandwidth, "biweight", degree)
         shares = [folds.count(fold) / len(folds) for fold in range(12)]
         for place in (0, 7):
-            own = oracle.scores_per_fold(
-                *lists, float(trail.bandwidths[place]), "biweight", degree
-            )
+            own = oracle.scores_per_fold(*lists, float(trail.bandwidths[place]), "biweight", degree)
             differences = [(own[fold] - best[fold]) / len(folds) for fold in range(12)]
             assert trail.excess[place] == pytest.approx(math.fsum(differences), rel=0.05, abs=1e-4)
             assert trail.excess_std_error[place] == pytest.approx(

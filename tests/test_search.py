@@ -6,15 +6,15 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from fastsmooth.kernels.shapes import SHAPES
-from hypothesis import assume, given
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from fastsmooth import InputError, Reading, Search, Smoothing, search_bandwidth
 from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.plan import Plan
 from fastsmooth.search import narrowest_width, search_table
-from fastsmooth.trail import Trail
 from fastsmooth.source import Columns
+from fastsmooth.trail import Trail
 from tests import cases
 from tests.oracle import local
 
@@ -75,6 +75,7 @@ def test_binned_leave_one_out_is_really_leaving_out(estimator, kernel, with_weig
         )
 
 
+@settings(max_examples=25)
 @given(seed=st.integers(0, 10_000))
 def test_a_count_of_two_is_the_row_twice(seed):
     rng = np.random.default_rng(seed)
@@ -149,6 +150,7 @@ def test_seconds_since_1970_do_as_well_as_seconds_since_midnight():
     assert large.bandwidth == pytest.approx(small.bandwidth, rel=1e-5)
 
 
+@settings(max_examples=15)
 @given(seed=st.integers(0, 1000))
 def test_order_of_rows_matters_to_rounding_only(seed):
     x, y = sine(200)

@@ -5,13 +5,9 @@ import math
 
 def autocorrelation(z, run, place, lag):
     """Mean product over the pairs so many places apart in one run, over the mean square; pairs."""
-    rows = [
-        (one, of, at) for one, of, at in zip(z, run, place, strict=True) if math.isfinite(one)
-    ]
+    rows = [(one, of, at) for one, of, at in zip(z, run, place, strict=True) if math.isfinite(one)]
     at_place = {(of, at): one for one, of, at in rows}
-    products = [
-        one * at_place[of, at + lag] for one, of, at in rows if (of, at + lag) in at_place
-    ]
+    products = [one * at_place[of, at + lag] for one, of, at in rows if (of, at + lag) in at_place]
     if not products:
         return math.nan, 0
     square = math.fsum(one * one for one, _, _ in rows) / len(rows)

@@ -29,36 +29,6 @@ def straight(x, y, at, *, estimator="local-linear", block=None, folds=32):
     )  # fmt: skip
 
 
-# JCGM 100:2008, Guide to the Expression of Uncertainty in Measurement, H.3: calibration of a
-# thermometer by a straight line through eleven corrections b against readings t.
-GUM_T = np.array(
-    [21.521, 22.012, 22.512, 23.003, 23.507, 23.999, 24.513, 25.002, 25.503, 26.010, 26.511]
-)
-GUM_B = np.array([-171, -169, -166, -159, -164, -165, -156, -157, -159, -161, -160]) / 1000.0
-
-
-def test_the_line_and_its_uncertainty_are_those_of_the_guide():
-    mean = float(GUM_T.mean())
-    made = straight(GUM_T, GUM_B, [mean])
-    value, slope = float(made.estimate[0]), float(made.slope[0])
-    u_value, u_slope = float(made.std_error[0]), float(made.slope_std_error[0])
-    assert made.residual_sd[0] == pytest.approx(0.0035, abs=5e-5)
-    assert slope == pytest.approx(0.00218, abs=5e-6)
-    assert u_slope == pytest.approx(0.00067, abs=5e-6)
-
-    # At the mean of t value and slope are uncorrelated, so the rest follows: (H.12), (H.13).
-    def correction(t):
-        return value + slope * (t - mean), math.hypot(u_value, u_slope * (t - mean))
-
-    intercept, u_intercept = correction(20.0)
-    assert intercept == pytest.approx(-0.1712, abs=5e-5)
-    assert u_intercept == pytest.approx(0.0029, abs=5e-5)
-    assert -u_slope * (mean - 20.0) / u_intercept == pytest.approx(-0.930, abs=5e-4)
-    at_thirty, u_at_thirty = correction(30.0)
-    assert at_thirty == pytest.approx(-0.1494, abs=5e-5)
-    assert u_at_thirty == pytest.approx(0.0041, abs=5e-5)
-
-
 # Cluster-robust errors of least squares.
 
 
@@ -121,15 +91,15 @@ def test_days_agree_with_weights_that_fall_with_the_lag():
     # The mean of an autoregression: days as blocks and the estimator of Newey & West (1987,
     # Econometrica 55:703) estimate the same variance from the same residuals.
     rng = np.random.default_rng(4)
-    n, rho = 25_600, 0.9
+    n, rho = 12_800, 0.9
     news = math.sqrt(1.0 - rho * rho) * rng.normal(size=n)
     y = np.empty(n)
     y[0] = rng.normal()
     for place in range(1, n):
         y[place] = rho * y[place - 1] + news[place]
-    x, day = rng.uniform(0.0, 10.0, n), np.arange(n) // 400
+    x, day = rng.uniform(0.0, 10.0, n), np.arange(n) // 200
     made = straight(x, y, [5.0], estimator="local-constant", block=day, folds=64)
-    fit = sm.OLS(y, np.ones(n)).fit(cov_type="HAC", cov_kwds={"maxlags": 200})
+    fit = sm.OLS(y, np.ones(n)).fit(cov_type="HAC", cov_kwds={"maxlags": 100})
     independent = sm.OLS(y, np.ones(n)).fit()
     # Theory: sd sqrt((1 + rho) / (1 - rho) / n). Either has a standard error of some ten percent.
     theory = math.sqrt((1.0 + rho) / (1.0 - rho) / n)
@@ -177,9 +147,7 @@ def test_critical_values_are_those_of_the_tube_formula(arc_length, value):
 @pytest.mark.parametrize("arc_length", [6.01, 11.28, 20.50])
 def test_with_an_estimated_scale_the_tails_are_those_of_t(arc_length):
     def excess(c):
-        return (
-            arc_length / math.pi * (1.0 + c * c / 20.0) ** -10.0 + 2.0 * stats.t.sf(c, 20) - 0.05
-        )
+        return arc_length / math.pi * (1.0 + c * c / 20.0) ** -10.0 + 2.0 * stats.t.sf(c, 20) - 0.05
 
     assert value_for_all(arc_length, 20.0) == pytest.approx(
         optimize.bisect(excess, 1.0, 10.0, xtol=1e-10), abs=1e-6
@@ -216,7 +184,7 @@ def arc_of(kernel, bandwidth, points, design, degree):
 def test_inside_the_arc_grows_by_a_constant_of_the_kernel(kernel, per_bandwidth):
     h, bandwidths = 250.0, 4.0
     design = np.arange(4000) + 0.5
-    points = np.linspace(1500.0, 1500.0 + bandwidths * h, 201)
+    points = np.linspace(1500.0, 1500.0 + bandwidths * h, 801)
     found = arc_of(kernel, h, points, design, 0)
     assert found == pytest.approx(bandwidths * per_bandwidth, rel=3e-3)
 
@@ -225,7 +193,7 @@ def test_inside_the_arc_grows_by_a_constant_of_the_kernel(kernel, per_bandwidth)
 def test_a_local_line_with_both_ends_has_the_known_arc(h, arc_length):
     # 400 equispaced rows on a unit interval, Epanechnikov.
     design = np.arange(400) + 0.5
-    points = np.linspace(0.5, 399.5, 1 + math.ceil(20 / h))
+    points = np.linspace(0.5, 399.5, 1 + math.ceil(200 / h))
     assert arc_of("epanechnikov", 400.0 * h, points, design, 1) == pytest.approx(
         arc_length, rel=6e-3
     )
