@@ -48,6 +48,7 @@ KERNEL = "biweight"
 NOISE_SD_KW = 1.0
 FIRST_DAY = 20_454  # 2026-01-01
 
+KINDS = ("pointwise", "simultaneous")
 # What the bands owe.
 POINTWISE = (0.92, 0.97)
 SIMULTANEOUS = (0.90, 0.98)
@@ -223,7 +224,7 @@ def one_run(cell: Cell, seed: int, run: int) -> Run:
                 band=Band(level=LEVEL, kind=kind), by_block=by_block, extent=(low, high),
                 occupied=occupied,
             )
-            for kind in ("pointwise", "simultaneous")
+            for kind in KINDS
         )  # fmt: skip
         return pointwise, simultaneous
 
@@ -266,6 +267,7 @@ class Result:
     excess: float
     excess_by_row: float
     pointwise: Floats
+    pointwise_error: float
     simultaneous: Floats
     half_width: Floats
     half_width_for_all: Floats
@@ -274,11 +276,23 @@ class Result:
 
     @property
     def kept(self) -> bool:
-        """Whether the cell's bands by block keep what they owe."""
-        return bool(
-            POINTWISE[0] <= self.pointwise[0] <= POINTWISE[1]
-            and SIMULTANEOUS[0] <= self.simultaneous[0] <= SIMULTANEOUS[1]
+        """Whether the shares covered lie in the ranges that the bands owe."""
+        return self.within(0.0)
+
+    def within(self, allowance: float) -> bool:
+        """Whether they do, or miss them by no more standard errors of the study than allowed."""
+        return all(
+            low - allowance * error <= value <= high + allowance * error
+            for value, error, (low, high) in (
+                (float(self.pointwise[0]), self.pointwise_error, POINTWISE),
+                (float(self.simultaneous[0]), self.simultaneous_error, SIMULTANEOUS),
+            )
         )
+
+    @property
+    def simultaneous_error(self) -> float:
+        """Standard error of a share at the level itself, in so many runs."""
+        return math.sqrt(LEVEL * (1.0 - LEVEL) / self.runs)
 
     @property
     def distance(self) -> float:
@@ -299,6 +313,8 @@ def summarise(cell: Cell, runs: list[Run], seconds: float) -> Result:
     mean_on_grid = on_grid.mean(axis=0)
     best = int(np.argmin(mean_on_grid))
 
+    each = np.array([run.pointwise[0] for run in runs])
+
     def mean(name: str) -> Floats:
         return np.mean([getattr(run, name) for run in runs], axis=0)
 
@@ -307,7 +323,9 @@ def summarise(cell: Cell, runs: list[Run], seconds: float) -> Result:
         best_width=float(common_widths()[best]),
         excess=float(errors[:, 0].mean() / mean_on_grid[best]),
         excess_by_row=float(errors[:, 1].mean() / mean_on_grid[best]),
-        pointwise=mean("pointwise"), simultaneous=mean("simultaneous"),
+        pointwise=mean("pointwise"),
+        pointwise_error=float(each.std(ddof=1) / math.sqrt(len(runs))),
+        simultaneous=mean("simultaneous"),
         half_width=mean("half_width"), half_width_for_all=mean("half_width_for_all"),
         supported=float(mean("supported")), seconds=seconds,
     )  # fmt: skip
@@ -365,7 +383,9 @@ def markdown(results: list[Result], runs: int, seed: int, picture: str) -> str:
     """Tell the study in a table."""
     kept, excess = sum(result.kept for result in results), mean_excess(results)
     worst = max(results, key=lambda result: result.excess)
-    spread = math.sqrt(LEVEL * (1.0 - LEVEL) / runs)
+    by_chance = sum(result.within(2.0) for result in results) - kept
+    spread = results[0].simultaneous_error
+    pooled = [float(np.mean([getattr(r, name)[0] for r in results])) for name in KINDS]
     lines = [
         "# Coverage of the bands",
         "",
@@ -382,8 +402,10 @@ def markdown(results: list[Result], runs: int, seed: int, picture: str) -> str:
         "residual variance. Half widths in kW; the noise has a standard deviation near 1.",
         "",
         f"- Pointwise {POINTWISE[0]:.0%} to {POINTWISE[1]:.0%} and simultaneous "
-        f"{SIMULTANEOUS[0]:.0%} to {SIMULTANEOUS[1]:.0%}: {kept} of {len(results)} cells. A share "
-        f"of 95 % in {runs} runs has a standard error of {spread:.1%}.",
+        f"{SIMULTANEOUS[0]:.0%} to {SIMULTANEOUS[1]:.0%}: {kept} of {len(results)} cells; "
+        f"{by_chance} more miss them by less than two standard errors of the study (*by chance?*; "
+        f"a share of 95 % in {runs} runs has a standard error of {spread:.1%}). All cells "
+        f"together: pointwise {pooled[0]:.1%}, simultaneous {pooled[1]:.1%}.",
         f"- Error of the chosen width on average over cells: {excess:.2f} times the best width's "
         f"(wanted: at most {MOST_EXCESS:.2f}); largest {worst.excess:.2f} ({worst.cell}).",
         "",
@@ -396,7 +418,7 @@ def markdown(results: list[Result], runs: int, seed: int, picture: str) -> str:
         "|---|---|---|---|---|---|---|---|---|---|---|---|",
     ]
     for r in results:
-        mark = "" if r.kept else " **out**"
+        mark = "" if r.kept else " *by chance?*" if r.within(2.0) else " **out**"
         lines.append(
             f"| {r.cell}{mark} | {r.pointwise[0]:.3f} | {r.simultaneous[0]:.3f} "
             f"| {r.half_width[0]:.3f} | {r.half_width_for_all[0]:.3f} | {r.supported:.2f} "
@@ -418,9 +440,7 @@ def draw(results: list[Result], runs: int, path: Path) -> None:
     figure = Figure(figsize=(9.0, 1.2 + 0.26 * len(results)), layout="constrained")
     axes = figure.subplots(1, 2, sharey=True)
     places = np.arange(len(results))[::-1]
-    for ax, name, owed in zip(
-        axes, ("pointwise", "simultaneous"), (POINTWISE, SIMULTANEOUS), strict=True
-    ):
+    for ax, name, owed in zip(axes, KINDS, (POINTWISE, SIMULTANEOUS), strict=True):
         ax.axvspan(*owed, color="#dfe9df", zorder=0)
         ax.axvline(LEVEL, color="#5a7d5a", linewidth=0.8)
         for place, label, colour in (

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,11 +15,12 @@ from fastsmooth.errors import InputError
 from fastsmooth.kernels.shapes import SHAPES
 from fastsmooth.passes import Progress, bins_for, count_finer, count_rows, silent
 from fastsmooth.search import search_table
-from fastsmooth.settings import Band, Reading, Smoothing
+from fastsmooth.settings import Band, Reading, Smoothing, check_text
 from fastsmooth.source import Columns, Source, open_source
 from fastsmooth.trail import Search
 
 Floats = NDArray[np.float64]
+T = TypeVar("T")
 
 _MOST_SEARCHES = 3
 
@@ -80,9 +81,14 @@ def make_curve(
     >>> round(float(made.at(10.0)[0]), 1)
     24.0
     """
-    reading = reading or Reading()
-    smoothing = smoothing or Smoothing()
-    band = band or Band()
+    reading = _group("reading", reading, Reading)
+    smoothing = _group("smoothing", smoothing, Smoothing)
+    band = _group("band", band, Band)
+    for argument, column in {"--x": x, "--y": y}.items():
+        check_text(argument, column, "name a column of DATA", "name one")
+    for argument, own in {"--weight": weight, "--count": count}.items():
+        if own is not None:
+            check_text(argument, own, "name a column of DATA")
     _criterion(reading, smoothing)
     _check_band(smoothing, band)
     block = None if reading.blocks is None else reading.blocks.column
@@ -130,6 +136,18 @@ def search_bandwidth(
     ).search  # fmt: skip
 
 
+def _group(argument: str, given: T | None, kind: type[T]) -> T:
+    """Return the settings given, or the defaults; refuse another group's."""
+    if given is None:
+        return kind()
+    if not isinstance(given, kind):
+        name = kind.__name__
+        raise InputError(
+            f"{argument}=", f"be a {name}", f"it is {given!r}", f"write {argument}={name}(...)"
+        )
+    return given
+
+
 def _criterion(reading: Reading, smoothing: Smoothing) -> str:
     if smoothing.criterion == "leave-block-out" and reading.block is None:
         raise InputError(
@@ -156,7 +174,7 @@ def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> fl
     """The caller's bandwidth on the plan's scale."""
     if smoothing.bandwidth is None:
         return None
-    width = source.axis.width_from_user(smoothing.bandwidth)
+    width = source.axis.width_from_user(smoothing.bandwidth, "--bandwidth")
     if reading.scale == "log":
         if not width > 1.0:
             raise InputError(
@@ -173,7 +191,7 @@ def _own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
     """The caller's points on the plan's scale, ascending."""
     if band.at is None:
         return None
-    places = np.sort(np.array([source.axis.from_user(one) for one in band.at], np.float64))
+    places = np.sort([source.axis.from_user(one, "--at") for one in band.at])
     if reading.scale == "log":
         if not places[0] > 0.0:
             raise InputError(

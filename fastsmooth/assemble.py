@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
@@ -23,6 +24,7 @@ from fastsmooth.curve import EDGE, OK, Curve, Density
 from fastsmooth.fitness import fit_facts
 from fastsmooth.landmarks import find_landmarks
 from fastsmooth.passes import Counted
+from fastsmooth.search import left_out_error
 from fastsmooth.serial import serial_facts
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.smoother import fit_level, least_weight
@@ -39,6 +41,7 @@ _FINER_FOR_CURVE = 4
 _ERROR_MARGIN = 8.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
+_SUPPORT_POINTS = 256
 
 
 @dataclass(frozen=True)
@@ -87,13 +90,21 @@ def assemble(
     fits = fit_level(level, shape, bandwidth, empty)
     noise = estimate_noise(fits, estimator, shape, band.noise)
     occupied = Occupied(plan.origin, plan.width, np.flatnonzero(pyramid.levels[0].first[0]))
-    points = fit_points(
-        places, fits, noise, shape, estimator=estimator, reference=plan.reference, band=band,
-        by_block=plan.block is not None, extent=(low, high), occupied=occupied,
-    )  # fmt: skip
+
+    def evaluate(at: Floats, as_band: Band) -> Points:
+        return fit_points(
+            at, fits, noise, shape, estimator=estimator, reference=plan.reference, band=as_band,
+            by_block=plan.block is not None, extent=(low, high), occupied=occupied,
+        )  # fmt: skip
+
+    points = evaluate(places, band)
     error = _binning_error(points, places, level, bandwidth, shape, estimator, plan.reference)
     trail = chosen.search.trails[estimator]
-    fit = fit_facts(fits, estimator, trail.score, plan.reference)
+    score = trail.score
+    if smoothing.bandwidth is not None:
+        by_fold = chosen.search.criterion == "leave-block-out"
+        score = left_out_error(pyramid, shape, bandwidth, estimator, by_fold=by_fold)
+    fit = fit_facts(fits, estimator, score, plan.reference)
     engine = {
         "name": "binned", "bins": plan.bins, "bins_per_bandwidth": bandwidth / plan.width,
         "fewest_bins_per_bandwidth": shape.fewest_bins_per_bandwidth,
@@ -109,12 +120,17 @@ def assemble(
         "engine": {k: _finite(v) for k, v in engine.items()},
         "fit": fit,
         "landmarks": None,
-        "plan": plan.to_dict(),
+        "plan": json.loads(json.dumps(plan.to_dict())),
         "versions": dict(_versions()),
     }
     if band.landmarks or band.crossings:
+        grid, on_grid = places, points
+        if chosen.places is not None:
+            # The caller's few points do not show where the curve is supported.
+            grid = np.linspace(low, high, _SUPPORT_POINTS)
+            on_grid = evaluate(grid, replace(band, kind="pointwise"))
         marks = find_landmarks(
-            _stretches(places, points), level, shape, bandwidth / level.width,
+            _stretches(grid, on_grid), level, shape, bandwidth / level.width,
             estimator=estimator, reference=plan.reference, confidence=band.level,
             crossings=band.crossings,
         )  # fmt: skip
@@ -156,6 +172,8 @@ def _settings(
         "bandwidth": _in_axis(chosen.bandwidth, plan.scale == "log") if own else None,
         "widths": smoothing.widths, "level": band.level, "band": band.kind, "bias": band.bias,
         "noise": band.noise, "least_rows": band.least_rows, "folds": plan.folds,
+        "points": band.points, "at": None if band.at is None else [str(one) for one in band.at],
+        "landmarks": band.landmarks, "crossings": list(band.crossings), "strict": reading.strict,
     }  # fmt: skip
 
 
@@ -206,6 +224,7 @@ def _search_in_axis(found: Search, log: bool) -> Search:
         low, high = trail.flat_zone
         return replace(
             trail, bandwidths=np.exp(trail.bandwidths), bandwidth=math.exp(trail.bandwidth),
+            leave_one_out_bandwidth=math.exp(trail.leave_one_out_bandwidth),
             flat_zone=(math.exp(low), math.exp(high)),
         )  # fmt: skip
 

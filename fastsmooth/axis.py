@@ -33,6 +33,7 @@ WIDTH_PATTERN = re.compile(
 )
 FINE_FRACTION = re.compile(r"\.[0-9]{7}")
 OFFSET = re.compile(r"[T ][0-9:.]+(Z|[-+][0-9]{2}(:?[0-9]{2})?)$")
+_ARGUMENT = "a value of x"
 
 
 @dataclass(frozen=True)
@@ -112,7 +113,7 @@ class Axis:
             integers = integers.astype(np.int32)
         return pa.array(integers, mask=~held).cast(self.data_type())
 
-    def from_user(self, value: object) -> float:
+    def from_user(self, value: object, argument: str = _ARGUMENT) -> float:
         """Read one value that a user gave: a text, a number, a time, a date or a duration.
 
         A time without a zone is read in the column's zone.
@@ -121,6 +122,8 @@ class Axis:
         ----------
         value : str, int, float, datetime.datetime, datetime.date, datetime.timedelta
             The value. Durations take seconds as a number, or a text such as ``2 h 10 min``.
+        argument : str
+            What the value was given for, for the refusal.
 
         Returns
         -------
@@ -132,25 +135,62 @@ class Axis:
         InputError
             The value does not belong on this axis.
         """
-        if isinstance(value, np.generic):
-            value = str(value) if isinstance(value, np.datetime64) else value.item()
+        if isinstance(value, np.generic) and value.dtype.kind not in "mM":
+            value = value.item()
         if self.kind == "number":
-            return self._number(value)
+            return self._number(value, argument)
         if self.kind == "duration":
-            return self.width_from_user(value)
+            return self.width_from_user(value, argument)
+        if isinstance(value, np.datetime64):
+            # Spelled as a date or to the second at least, which is how texts are read.
+            coarse = {"Y": "D", "M": "D", "W": "D", "h": "s", "m": "s"}
+            unit = np.datetime_data(value.dtype)[0]
+            value = str(value.astype(f"datetime64[{coarse.get(unit, unit)}]"))
         if isinstance(value, date):
             value = value.isoformat()
         if not isinstance(value, str):
-            raise self._refusal(value, f"be a {self.kind}", "write it as in 2026-01-31")
-        return self._moment(value)
+            remedy = "write it as in 2026-01-31"
+            raise self._refusal(value, f"be a {self.kind}", remedy, argument)
+        return self._moment(value, argument)
 
-    def width_from_user(self, value: object) -> float:
+    def floats_from_user(self, values: Any, argument: str = _ARGUMENT) -> NDArray[np.float64]:
+        """Read many values that a user gave.
+
+        Parameters
+        ----------
+        values : array_like
+            Axis floats as they are (NaN included), or anything that `from_user` reads.
+        argument : str
+            What the values were given for, for the refusal.
+
+        Returns
+        -------
+        float64 array
+            Axis values, in the shape of `values`.
+
+        Raises
+        ------
+        InputError
+            A value does not belong on this axis.
+        """
+        array = np.asarray(values)
+        if array.dtype.kind in "fiu":
+            return array.astype(np.float64)
+        # A column of times keeps its zone as a list, but not as an array.
+        listing = getattr(values, "to_pylist", None) or getattr(values, "to_list", None)
+        ones = array.ravel() if listing is None else listing()
+        floats = [self.from_user(one, argument) for one in ones]
+        return np.array(floats, np.float64).reshape(array.shape)
+
+    def width_from_user(self, value: object, argument: str = _ARGUMENT) -> float:
         """Read a width along the axis that a user gave.
 
         Parameters
         ----------
         value : str, int, float, datetime.timedelta
             A number (seconds on a temporal axis), or a text such as ``2 h 10 min``.
+        argument : str
+            What the width was given for, for the refusal.
 
         Returns
         -------
@@ -171,7 +211,7 @@ class Axis:
             if pieces and not WIDTH_PATTERN.sub("", value).strip():
                 seconds = dict(WIDTH_UNITS)
                 return math.fsum(float(piece[1]) * seconds[piece[2]] for piece in pieces)
-        return self._number(value)
+        return self._number(value, argument)
 
     def label(self, value: float) -> str:
         """Write one axis value for people.
@@ -262,7 +302,7 @@ class Axis:
     def _ticks(self) -> int:
         return TICKS_PER_SECOND[self.unit]
 
-    def _number(self, value: object) -> float:
+    def _number(self, value: object, argument: str) -> float:
         remedy = "write a number"
         if self.kind != "number":
             remedy = "write seconds, or a width such as '2 h 10 min'"
@@ -270,15 +310,16 @@ class Axis:
             try:
                 number = float(value)
             except ValueError:
-                raise self._refusal(value, "be a number", remedy) from None
+                raise self._refusal(value, "be a number", remedy, argument) from None
             if math.isfinite(number):
                 return number
-        raise self._refusal(value, "be a finite number", remedy)
+        raise self._refusal(value, "be a finite number", remedy, argument)
 
-    def _refusal(self, value: object, requirement: str, remedy: str) -> InputError:
-        return InputError("a value of x", requirement, f"{value!r} was given", remedy)
+    def _refusal(self, value: object, requirement: str, remedy: str, argument: str) -> InputError:
+        shown = str(value) if isinstance(value, np.generic) else repr(value)
+        return InputError(argument, requirement, f"{shown} was given", remedy)
 
-    def _moment(self, text: str) -> float:
+    def _moment(self, text: str, argument: str) -> float:
         try:
             moment = parse_moment(text.strip(), self.zone)
         except ValueError as error:
@@ -286,7 +327,7 @@ class Axis:
             if "zone" in str(error):
                 requirement += " without a zone, as the column has none"
             raise self._refusal(
-                text, requirement, "write it as in 2026-01-31 or 2026-01-31T06:30"
+                text, requirement, "write it as in 2026-01-31 or 2026-01-31T06:30", argument
             ) from error
         per_second = TICKS_PER_SECOND[moment.type.unit]
         if self.unit == "day":

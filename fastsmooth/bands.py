@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.bintable import Level
-from fastsmooth.critical import chords_of_path, pointwise_value, tail_for_all
+from fastsmooth.critical import chords_of_path, pointwise_value, simulated_tail, tail_for_all
 from fastsmooth.curve import EDGE, FEWEST_FOLDS, OK, OUTSIDE, THIN
 from fastsmooth.jackknife import leave_out_folds
 from fastsmooth.localweights import (
@@ -338,13 +338,14 @@ def _value_for_all(
     ends = np.flatnonzero(np.diff(np.concatenate(([0], good.astype(int), [0])))).reshape(-1, 2)
     if not ends.size:
         return pointwise_value(band.level, degrees)
-    chords, known = [], []
+    chords, known, moved = [], [], []
     for start, stop in ends.tolist():
         low, high = ((x[i] - level.origin) / level.width for i in (start, stop - 1))
         steps = int(np.clip(np.ceil((high - low) / h * _POINTS_PER_BANDWIDTH), 1, _MOST_POINTS))
         places = np.linspace(low, high, steps + 1)
         if by_block:
             left_out = leave_out_folds(places, level, shape, h, kind)
+            moved.append(left_out.moved)
             chords.append(chords_of_path(left_out.moved))
             # Between two points that count there may be a place that would not.
             along = np.maximum(left_out.degrees, _FEWEST_DEGREES)
@@ -357,6 +358,10 @@ def _value_for_all(
         band.level, np.concatenate(chords), np.concatenate(known), ends.shape[0],
         own_scale=by_block,
     )  # fmt: skip
+    if by_block:
+        # Counting crossings never gives too much: what simulation gives beyond it is safe.
+        typical = float(np.median(degrees[good]))
+        tail = max(tail, simulated_tail(band.level, np.concatenate(moved, axis=1), typical))
     return pointwise_value(1.0 - tail, degrees)
 
 

@@ -40,7 +40,8 @@ class Block:
     unit : str or None
         For a time column: ``hour``, ``day``, ``week`` (from Monday) or ``month``.
     zone : str or None
-        Time zone in which units begin; None means the column's own (UTC if it has none).
+        Time zone in which units begin, for a column of instants; None means the column's own.
+        A clock without a zone is taken as it is.
     key : callable or None
         Takes the column as an Arrow array and returns an array of keys to use in its place.
 
@@ -118,7 +119,7 @@ class Dealer:
         Raises
         ------
         InputError
-            A unit was given for a column that holds no times.
+            A unit was given for a column that holds no times, or a zone for one without a zone.
         """
         if self.block.key is not None:
             column = self.block.key(column)
@@ -150,6 +151,12 @@ class Dealer:
                 "--block", "name a time column when a unit is given",
                 f"'{self.block.column}' holds {kind}", f"write --block {self.block.column}",
             )  # fmt: skip
+        if self.block.zone is not None and kind.tz is None:
+            raise InputError(
+                "--block", "name a column of instants when a zone is given",
+                f"'{self.block.column}' holds {kind}, a clock without a zone",
+                f"write --block {self.block.column}:{self.block.unit}, which takes it as it is",
+            )  # fmt: skip
         valid = None
         if column.null_count:
             valid = column.is_valid().to_numpy(zero_copy_only=False)
@@ -163,24 +170,26 @@ class Dealer:
             int(ticks.min()), int(ticks.max()), kind.unit, self.block.unit or "day",
             self.block.zone or kind.tz or "UTC", kind.tz is not None,
         )  # fmt: skip
-        of_key = np.array([fold_of_number(key, self.folds) for key in keys.tolist()], np.int64)
-        if starts.size == 1:
-            folds = np.full(ticks.size, of_key[0])
-            met = set(keys.tolist())
+        # Logs are in time order more often than not; then a few cuts do for all rows. Only units
+        # that hold rows are dealt: one stray time makes the range of units long.
+        if bool((ticks[1:] >= ticks[:-1]).all()):
+            cuts = np.searchsorted(ticks, starts[1:])
+            lengths = np.diff(np.concatenate(([0], cuts, [ticks.size])))
+            used = np.flatnonzero(lengths)
+            folds = np.repeat(self._folds_of(keys[used]), lengths[used])
         else:
-            # Logs are in time order more often than not; then a few cuts do for all rows.
-            if bool((ticks[1:] >= ticks[:-1]).all()):
-                cuts = np.searchsorted(ticks, starts[1:])
-                lengths = np.diff(np.concatenate(([0], cuts, [ticks.size])))
-                folds = np.repeat(of_key, lengths)
-                met = set(keys[lengths > 0].tolist())
-            else:
-                place = np.searchsorted(starts, ticks, side="right") - 1
-                folds = of_key[place]
-                met = set(keys[np.unique(place)].tolist())
+            place = np.searchsorted(starts, ticks, side="right") - 1
+            used, own = np.unique(place, return_inverse=True)
+            folds = self._folds_of(keys[used])[own]
+        met = set(keys[used].tolist())
         if valid is not None:
             folds = np.where(valid, folds, -1)
         return folds, met
+
+    def _folds_of(self, numbers: NDArray[np.int64]) -> NDArray[np.int64]:
+        return np.array(
+            [fold_of_number(number, self.folds) for number in numbers.tolist()], np.int64
+        )
 
 
 def merge_keys(mine: set[Any], other: set[Any]) -> set[Any]:

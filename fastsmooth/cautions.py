@@ -76,8 +76,8 @@ def about_search(made: Curve) -> Iterator[Caution]:
         yield Caution(
             "width at the lower end",
             f"The best bandwidth {label(trail.bandwidth)} is the narrowest searched. Rows that "
-            f"repeat each other (serial correlation, duplicated files) drive it there; give "
-            f"--bandwidth or thin the rows.",
+            f"repeat each other (serial correlation, duplicated files, --count) or a coarsely "
+            f"rounded x drive it there: give --block, give --bandwidth, or thin the rows.",
         )
     elif trail.at_high_end:
         shape = "a straight line" if settings["estimator"] == "local-linear" else "a constant"
@@ -99,10 +99,12 @@ def about_search(made: Curve) -> Iterator[Caution]:
             "say how much to smooth.",
         )
     if made.search.rows_alone > _MANY_ALONE * made.trace["rows"]["used"]:
+        by_fold = made.search.criterion == "leave-block-out"
+        of_others = " in other folds" if by_fold else ""
         yield Caution(
             "rows alone",
-            f"{made.search.rows_alone:g} rows have no neighbour within the narrowest width and "
-            f"took no part in the choice of the bandwidth.",
+            f"{made.search.rows_alone:,.0f} rows have no neighbour{of_others} within the narrowest "
+            f"width and took no part in the choice of the bandwidth.",
         )
 
 

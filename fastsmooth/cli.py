@@ -199,12 +199,19 @@ def curve(
       fastsmooth curve 'data/*.parquet' --x wet_bulb_c --y power_kw --out curve.parquet \\
           --plot curve.png
     """
-    from fastsmooth.files_out import PICTURE_SUFFIXES, TABLE_SUFFIXES, check_writable
+    from fastsmooth.files_out import (
+        PICTURE_SUFFIXES,
+        TABLE_SUFFIXES,
+        check_writable,
+        keep_outside,
+    )
 
     if out is not None:
         check_writable(out, "--out", TABLE_SUFFIXES)
     if plot is not None:
         check_writable(plot, "--plot", PICTURE_SUFFIXES)
+    if out is not None:
+        keep_outside(out, data)
     with _progress(quiet) as progress:
         made = _make(data, options, progress)
         if out is not None:
@@ -223,14 +230,17 @@ def search(
     data: tuple[str, ...], out: str | None, as_json: bool, quiet: bool, **options: Any
 ) -> None:
     """Search the bandwidth for DATA and show the criterion of both estimators."""
-    from fastsmooth.files_out import TABLE_SUFFIXES, check_writable, write_table
+    from fastsmooth.curve import spare_data
+    from fastsmooth.files_out import TABLE_SUFFIXES, check_writable, keep_outside, write_table
     from fastsmooth.summary import search_facts, search_lines
 
     if out is not None:
         check_writable(out, "--out", TABLE_SUFFIXES)
+        keep_outside(out, data)
     with _progress(quiet) as progress:
         made = _make(data, options, progress)
         if out is not None:
+            spare_data([record["path"] for record in made.trace["files"]], out, "--out")
             write_table(made.search.table(), out)
     if as_json:
         _print_json({**search_facts(made.search), "grid": made.search.table().to_pydict()})

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, NamedTuple
@@ -11,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.axis import Axis
-from fastsmooth.errors import InputError
+from fastsmooth.errors import InputError, WriteError
 from fastsmooth.trail import Search
 
 if TYPE_CHECKING:
@@ -53,7 +54,7 @@ class Caution(NamedTuple):
     text: str
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Density:
     """Where the rows lie, for pictures.
 
@@ -84,7 +85,7 @@ class Density:
         return cls(**{name: np.array(value, np.float64) for name, value in plain.items()})
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Curve:
     """A reference curve: the mean of y as a function of x.
 
@@ -166,7 +167,7 @@ class Curve:
         Parameters
         ----------
         x : array_like
-            Places in axis floats.
+            Places in axis floats, or in the column's own terms (times, dates, texts).
 
         Returns
         -------
@@ -174,10 +175,21 @@ class Curve:
             Estimates; NaN outside the supported stretches. The spline departs from the exact
             curve by far less than the standard error; pass ``at=`` when making the curve for
             exact values.
+
+        Raises
+        ------
+        InputError
+            A place does not belong on the axis, or the curve was made at points of the caller's
+            own: a spline through those would run across stretches without data.
         """
+        if self.trace["settings"].get("at") is not None:
+            raise InputError(
+                "the curve", "have evenly spaced points to be read elsewhere",
+                "it was made with --at", "make it without, or at the places you need",
+            )  # fmt: skip
         from scipy.interpolate import CubicSpline
 
-        places = np.atleast_1d(np.asarray(x, np.float64))
+        places = np.atleast_1d(self.axis.floats_from_user(x))
         out = np.full(places.shape, np.nan)
         inside = np.isfinite(self.estimate)
         edges = np.flatnonzero(np.diff(np.concatenate(([0], inside.astype(int), [0]))))
@@ -273,6 +285,7 @@ class Curve:
         """
         from fastsmooth.files_out import write_curve
 
+        self._spare_data(path, "--out")
         write_curve(self, path)
 
     def plot(self, path: Any) -> None:
@@ -285,11 +298,27 @@ class Curve:
         """
         from fastsmooth.report.picture import draw
 
+        self._spare_data(path, "--plot")
         draw(self, path)
 
+    def _spare_data(self, path: Any, argument: str) -> None:
+        """Refuse to write over the data that the curve was made from."""
+        spare_data([record["path"] for record in self.trace["files"]], path, argument)
 
-def supported_stretches(curve: Curve) -> Sequence[tuple[float, float]]:
-    """Return the stretches of x, end to end, in which the curve has status ``ok`` or ``edge``."""
-    good = (curve.status == OK) | (curve.status == EDGE)
-    edges = np.flatnonzero(np.diff(np.concatenate(([0], good.astype(int), [0])))).reshape(-1, 2)
-    return [(float(curve.x[start]), float(curve.x[stop - 1])) for start, stop in edges.tolist()]
+
+def spare_data(data: Sequence[str], path: Any, argument: str) -> None:
+    """Refuse an output that is one of the data files.
+
+    Raises
+    ------
+    WriteError
+        It is, or it is no path.
+    """
+    if not isinstance(path, str | os.PathLike):
+        raise WriteError(argument, "name a file", f"it is {path!r}", "give a path")
+    place = os.path.realpath(path)
+    if any(os.path.realpath(one) == place for one in data):
+        raise WriteError(
+            argument, "leave the data alone", f"'{path}' is one of the files that were read",
+            "name another file",
+        )  # fmt: skip

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import errno
+import fnmatch
 import json
 import math
 import os
@@ -14,6 +15,7 @@ from typing import TYPE_CHECKING, Any, BinaryIO
 
 from fastsmooth.curve import CURVE_KEY, Curve
 from fastsmooth.errors import InputError, ReadError, WriteError
+from fastsmooth.files import file_format
 from fastsmooth.near import find_near
 
 if TYPE_CHECKING:
@@ -62,6 +64,34 @@ def check_writable(path: str | os.PathLike[str], argument: str, suffixes: Sequen
         )  # fmt: skip
     _check_place(os.path.realpath(name), name, argument)
     return suffix
+
+
+def keep_outside(path: str | os.PathLike[str], data: Sequence[str]) -> None:
+    """Refuse an output that the next reading of the same data would take for data.
+
+    Parameters
+    ----------
+    path : path
+        Where a table shall go.
+    data : sequence of str
+        Files, folders and globs that are read.
+
+    Raises
+    ------
+    WriteError
+        It lies in one of the folders, or matches one of the globs.
+    """
+    place = os.path.realpath(path)
+    if file_format(place) is None:
+        return
+    for one in data:
+        root = os.path.realpath(one)
+        inside = os.path.isdir(one) and os.path.commonpath([place, root]) == root
+        if inside or ("*" in one and fnmatch.fnmatch(place, root)):
+            raise WriteError(
+                "--out", "lie outside DATA", f"'{os.fspath(path)}' would be read as data next time",
+                "name another folder",
+            )  # fmt: skip
 
 
 def write_atomically(

@@ -32,7 +32,8 @@ class Landmark(NamedTuple):
     Attributes
     ----------
     kind : str
-        ``steepest``, ``lowest``, ``highest`` (turning points) or ``crossing``.
+        ``steepest`` (on a log scale, per factor of x), ``lowest``, ``highest`` (turning
+        points) or ``crossing``.
     x : float
         Where, on the plan's scale.
     lower, upper : float
@@ -91,13 +92,15 @@ def find_landmarks(
     Returns
     -------
     list of Landmark
-        In order of x.
+        In order of x; a crossing that is not reached has x NaN and comes last.
     """
     found: list[Landmark] = []
     steepest: tuple[float, _Stretch] | None = None
     for low, high in stretches:
         here = _Stretch(low, high, level, shape, bandwidth_bins, estimator)
         if here.x.shape[0] < 3:
+            continue
+        if not np.isfinite(here.slope[0]).any():
             continue
         top = float(np.nanmax(np.abs(here.slope[0])))
         if steepest is None or top > steepest[0]:
@@ -115,12 +118,15 @@ def find_landmarks(
                 found.append(mark._replace(value=target))
     if steepest is not None:
         _, here = steepest
-        row = here.row(0)
         found.append(
             here.landmark(
-                "steepest", row.peak_of_slope(), lambda one, _: one.peak_of_slope(), confidence
+                "steepest", here.row(0).steepest(), lambda one, x: one.peak_of_slope(x), confidence
             )
         )
+    reached = {mark.value for mark in found if mark.kind == "crossing"}
+    for wanted in crossings:
+        if wanted - reference not in reached:
+            found.append(Landmark("crossing", np.nan, np.nan, np.nan, wanted - reference))
     found.sort(key=lambda mark: mark.x)
     return [mark._replace(value=mark.value + reference) for mark in found]
 
@@ -139,11 +145,21 @@ class _Row(NamedTuple):
     def zero_of_value(self, near: float, target: float) -> float:
         return self._nearest(_zeros(self.x, self.value - target), near)
 
-    def peak_of_slope(self) -> float:
+    def steepest(self) -> float:
+        """The steepest place of the whole stretch, to the grid."""
+        place = float(self.x[int(np.nanargmax(np.abs(self.slope)))])
+        refined = self.peak_of_slope(place)
+        return refined if np.isfinite(refined) else place
+
+    def peak_of_slope(self, near: float) -> float:
+        """The steepest place near another; NaN if it is an end of what is looked at."""
+        close = np.flatnonzero(np.abs(self.x - near) <= self.window)
         size = np.abs(self.slope)
-        top = int(np.nanargmax(size))
-        if top in (0, size.shape[0] - 1):
-            return float(self.x[top])
+        if not np.isfinite(size[close]).any():
+            return np.nan
+        top = int(close[np.nanargmax(size[close])])
+        if top in (close[0], close[-1]):
+            return np.nan
         left, middle, right = size[top - 1 : top + 2]
         bend = left - 2.0 * middle + right
         shift = 0.5 * (left - right) / bend if bend < 0.0 else 0.0
@@ -207,11 +223,12 @@ class _Stretch:
         without = np.array([find(self.row(f), place) for f in range(1, self.value.shape[0])])
         value = float(np.interp(place, self.x, self.value[0]))
         met = max(self.met, 2)
-        if not np.isfinite(without).all():
+        if not np.isfinite(without).all() or not np.isfinite(find(self.row(0), place)):
             return Landmark(kind, place, np.nan, np.nan, value)
         error = np.sqrt((met - 1.0) / met * float(((without - place) ** 2).sum()))
         half = float(pointwise_value(confidence, np.array([met - 1.0]))[0]) * error
-        return Landmark(kind, place, place - half, place + half, value)
+        low, high = float(self.x[0]), float(self.x[-1])
+        return Landmark(kind, place, max(place - half, low), min(place + half, high), value)
 
 
 def _zeros(x: Floats, y: Floats) -> list[float]:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from fastsmooth.bintable import BinTable
 from fastsmooth.blocks import Dealer
 from fastsmooth.curve import Caution
-from fastsmooth.errors import InputError
+from fastsmooth.errors import InputError, ReadError
 from fastsmooth.plan import (
     BINS,
     Plan,
@@ -139,19 +139,26 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
     check_scale(source, scale)
     sample = draw_sample(source, scale, reading.threads)
     trimmed = False
+    stated = None
     if reading.range is not None:
         bounds = user_range(source, reading.range, scale)
     else:
-        bounds = _statistics_bounds(source, scale) or find_range(source, scale, reading.threads)
+        stated = _statistics_bounds(source, scale)
+        bounds = stated or find_range(source, scale, reading.threads)
         full = bounds
         bounds = _plausible_bounds(bounds, sample)
         trimmed = bounds != full
     for passes in range(1, _MOST_PASSES + 1):
+        slots = 8 if source.columns.weight is None else 16
         plan = make_plan(
-            source, sample, bounds, scale=scale, block=block_words(reading), folds=reading.folds
-        )
+            source, sample, bounds, scale=scale, block=block_words(reading),
+            bins=min(BINS, most_bins(reading.folds, reading.threads, slots)), folds=reading.folds,
+        )  # fmt: skip
         table, shown = count_pass(source, plan, reading, progress)
         check_rows(table, source, reading)
+        if bounds == stated and _rows_outside(table):
+            bounds = full = _corrected_bounds(source, stated, reading, _rows_outside(table))
+            continue
         if passes == _MOST_PASSES:
             break
         if _mostly_empty(table):
@@ -236,6 +243,9 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
             f"'{reading.block}' is the same in all {table.tally.used} rows",
             "name a finer block, or leave it out",
         )  # fmt: skip
+    if reading.range is not None:
+        # The caller left these out; they are no fault of the data.
+        refused = {k: v for k, v in refused.items() if not k.endswith(" range")}
     if reading.strict and refused:
         counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
         raise InputError(
@@ -251,6 +261,27 @@ def _statistics_bounds(source: Source, scale: str) -> tuple[float, float] | None
     if scale == "log":
         return (math.log(low), math.log(high)) if low > 0.0 else None
     return low, high
+
+
+def _corrected_bounds(
+    source: Source, stated: tuple[float, float], reading: Reading, outside: int
+) -> tuple[float, float]:
+    """Return the range that the values have where it is the stated one but for rounding.
+
+    Raises
+    ------
+    ReadError
+        It is not: some values are not what was written.
+    """
+    low, high = find_range(source, reading.scale, reading.threads)
+    rounding = (stated[1] - stated[0]) * 2.0**-40
+    if low < stated[0] - rounding or high > stated[1] + rounding:
+        raise ReadError(
+            "DATA", "agree with its own statistics",
+            f"{outside} values of '{source.columns.x}' lie outside the range that the files state",
+            "copy or write the files again: some are damaged",
+        )  # fmt: skip
+    return min(low, stated[0]), max(high, stated[1])
 
 
 def _plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[float, float]:

@@ -281,7 +281,7 @@ def user_range(source: Source, given: tuple[object, object], scale: str) -> tupl
     InputError
         The ends are not ascending, or not positive on a log scale.
     """
-    low, high = (source.axis.from_user(end) for end in given)
+    low, high = (source.axis.from_user(end, "--range") for end in given)
     if not low < high:
         raise InputError(
             "--range", "ascend", f"{given[0]} to {given[1]} does not", "give the lower end first"
@@ -291,8 +291,19 @@ def user_range(source: Source, given: tuple[object, object], scale: str) -> tupl
             raise InputError(
                 "--range", "be positive with --scale log", f"it begins at {given[0]}", "raise it"
             )
-        return math.log(low), math.log(high)
+        low, high = math.log(low), math.log(high)
+    if not _can_be_cut(low, high, BINS):
+        raise InputError(
+            "--range", "span a width that can be cut into bins",
+            f"{given[0]} to {given[1]} is too {'wide' if high - low > 1.0 else 'narrow'}",
+            "leave it out, or give values that occur",
+        )  # fmt: skip
     return low, high
+
+
+def _can_be_cut(low: float, high: float, bins: int) -> bool:
+    width = bin_width(low, high, bins)
+    return high > low and 0.0 < width < math.inf and math.isfinite(1.0 / width)
 
 
 def check_scale(source: Source, scale: str) -> None:
@@ -348,7 +359,14 @@ def make_plan(
     """
     low, high = bounds
     width = bin_width(low, high, bins)
-    if not (high > low and 0.0 < width < math.inf and math.isfinite(1.0 / width)):
+    if high > low and math.isinf(width):
+        raise InputError(
+            "--x", "lie within a range of 1e308",
+            f"'{source.columns.x}' lies between {source.axis.label(low)} and "
+            f"{source.axis.label(high)}",
+            "leave the far values out with --range",
+        )  # fmt: skip
+    if not _can_be_cut(low, high, bins):
         raise InputError(
             "--x",
             "name a column that varies",
@@ -360,7 +378,8 @@ def make_plan(
     tasks = len(source.tasks)
     rows = source.rows_expected
     if rows is None:
-        run = 4096
+        # A stream of unknown length: the sample shows how short it may be.
+        run = min(_LONGEST_RUN_ROWS, max(1, sample.x.size // (4 * folds)))
     else:
         run = min(_LONGEST_RUN_ROWS, max(1, rows // (4 * folds)))
     few = tasks >= _TASKS_FOR_FEW_FOLDS and folds > _FEW_FOLDS

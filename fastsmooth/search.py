@@ -165,6 +165,20 @@ def search_table(
     return Search(criterion, shape.name, trails, rows_alone)
 
 
+def left_out_error(
+    pyramid: Pyramid, shape: Shape, bandwidth: float, estimator: str, *, by_fold: bool
+) -> float:
+    """Return the mean squared error of predicting left-out rows (or folds) at one width.
+
+    Infinite where more than one row in a hundred has no prediction.
+    """
+    job = _Job(pyramid, shape)
+    if not by_fold:
+        return job.value(bandwidth, job.level(bandwidth), estimator, "leave-one-out")
+    job.left_out = pyramid
+    return job.left_out_scores(bandwidth)[estimator].criteria["leave-block-out"]
+
+
 def _interval(table: BinTable) -> tuple[float, float]:
     """The widths to search: from what data and bins support up to the whole range."""
     low, high = table.extent.tolist()

@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
+import math
 import os
+from collections.abc import Iterable
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from numbers import Integral, Real
+from typing import TYPE_CHECKING, Any
 
 from fastsmooth.errors import InputError
 from fastsmooth.near import advise
@@ -30,12 +34,64 @@ def usable_cores() -> int:
     return os.cpu_count() or 1
 
 
-def one_of(argument: str, value: str, known: tuple[str, ...]) -> None:
+def one_of(argument: str, value: object, known: tuple[str, ...]) -> None:
     """Refuse a word that is none of the known ones."""
-    if value not in known:
+    if not isinstance(value, str) or value not in known:
         raise InputError(
-            argument, "be one of " + ", ".join(known), f"it is '{value}'", advise(value, known)
-        )
+            argument, "be one of " + ", ".join(known), f"it is {value!r}",
+            advise(str(value), known),
+        )  # fmt: skip
+
+
+def check_text(argument: str, value: object, names: str, remedy: str = "leave it out") -> None:
+    """Refuse what is no text."""
+    if not isinstance(value, str):
+        raise InputError(argument, names, f"it is {value!r}", remedy)
+
+
+def check_flag(argument: str, value: object) -> None:
+    """Refuse what is neither True nor False: any text counts as true."""
+    if not isinstance(value, bool):
+        raise InputError(argument, "be True or False", f"it is {value!r}", "leave it out")
+
+
+def whole_number(argument: str, value: Any, low: int, high: int | None = None) -> int:
+    """Return a whole number as a plain int, or refuse it."""
+    limits = f"be at least {low}" if high is None else f"be between {low} and {high}"
+    if not isinstance(value, Integral) or isinstance(value, bool):
+        kind = "be a whole number"
+        raise InputError(
+            argument, f"{kind}, {low} or more" if high is None else limits.replace("be", kind, 1),
+            f"it is {value!r}", "leave it out",
+        )  # fmt: skip
+    plain = int(value)
+    if plain < low or (high is not None and plain > high):
+        raise InputError(argument, limits, f"it is {plain}", "leave it out")
+    return plain
+
+
+def finite_number(
+    argument: str, value: Any, requirement: str, remedy: str = "leave it out"
+) -> float:
+    """Return a finite number as a plain float, or refuse it."""
+    if not isinstance(value, Real) or isinstance(value, bool) or not math.isfinite(value):
+        raise InputError(argument, requirement, f"it is {value!r}", remedy)
+    return float(value)
+
+
+def as_tuple(argument: str, value: Any, requirement: str, remedy: str) -> tuple[Any, ...]:
+    """Return several values as a tuple; refuse a single one, of which a text is one too."""
+    if isinstance(value, Iterable) and not isinstance(value, str | bytes):
+        # An array without dimensions says that it can be iterated, but cannot.
+        with contextlib.suppress(TypeError):
+            return tuple(value)
+    raise InputError(argument, requirement, f"it is {value!r}", remedy)
+
+
+def _set(settings: Any, **values: Any) -> None:
+    """Store the plain form of what was checked in a frozen group of settings."""
+    for name, value in values.items():
+        object.__setattr__(settings, name, value)
 
 
 @dataclass(frozen=True)
@@ -70,17 +126,26 @@ class Reading:
     block: Block | str | None = None
 
     def __post_init__(self) -> None:
-        if isinstance(self.block, str):
+        if self.block is not None:
             from fastsmooth.blocks import Block
 
-            object.__setattr__(self, "block", Block.parse(self.block))
+            if not isinstance(self.block, Block):
+                check_text("--block", self.block, "name a column, with or without a unit")
+                _set(self, block=Block.parse(str(self.block)))
+        if self.where is not None:
+            check_text("--where", self.where, "be an SQL condition")
+        if self.range is not None:
+            both, remedy = "hold the lowest and the highest x", "give two values"
+            ends = as_tuple("--range", self.range, both, remedy)
+            if len(ends) != 2:
+                raise InputError("--range", both, f"it is {self.range!r}", remedy)
+            _set(self, range=ends)
         one_of("--scale", self.scale, SCALES)
-        if self.threads < 1:
-            raise InputError("--threads", "be at least 1", f"it is {self.threads}", "leave it out")
-        if not 2 <= self.folds <= 1024:
-            raise InputError(
-                "--folds", "be between 2 and 1024", f"it is {self.folds}", "leave it out"
-            )
+        check_flag("--strict", self.strict)
+        _set(
+            self, threads=whole_number("--threads", self.threads, 1),
+            folds=whole_number("--folds", self.folds, 2, 1024),
+        )  # fmt: skip
 
     @property
     def blocks(self) -> Block | None:
@@ -120,10 +185,7 @@ class Smoothing:
         one_of("--kernel", self.kernel, KERNELS)
         if self.criterion is not None:
             one_of("--criterion", self.criterion, CRITERIA)
-        if not 8 <= self.widths <= 1000:
-            raise InputError(
-                "--widths", "be between 8 and 1000", f"it is {self.widths}", "leave it out"
-            )
+        _set(self, widths=whole_number("--widths", self.widths, 8, 1000))
 
 
 @dataclass(frozen=True)
@@ -167,17 +229,23 @@ class Band:
         one_of("--band", self.kind, BANDS)
         one_of("--bias", self.bias, BIASES)
         one_of("--noise", self.noise, NOISES)
-        if not 0.0 < self.level < 1.0:
-            raise InputError(
-                "--level", "lie between 0 and 1", f"it is {self.level}", "write 0.95 for 95 percent"
-            )
-        if not self.least_rows >= 0.0:
-            raise InputError(
-                "--least-rows", "be 0 or more", f"it is {self.least_rows}", "leave it out"
-            )
-        if not 2 <= self.points <= 1_000_000:
-            raise InputError(
-                "--points", "be between 2 and 1000000", f"it is {self.points}", "leave it out"
-            )
-        if self.at is not None and not len(self.at):
-            raise InputError("--at", "hold a point", "it is empty", "give points or leave it out")
+        check_flag("--landmarks", self.landmarks)
+        share, remedy = "lie between 0 and 1", "write 0.95 for 95 percent"
+        level = finite_number("--level", self.level, share, remedy)
+        if not 0.0 < level < 1.0:
+            raise InputError("--level", share, f"it is {level}", remedy)
+        least = finite_number("--least-rows", self.least_rows, "be a finite number, 0 or more")
+        if least < 0.0:
+            raise InputError("--least-rows", "be 0 or more", f"it is {least}", "leave it out")
+        crossings = as_tuple("--crossing", self.crossings, "hold values of y", "put it in a tuple")
+        crossings = tuple(
+            finite_number("--crossing", one, "be a finite number") for one in crossings
+        )
+        points = whole_number("--points", self.points, 2, 1_000_000)
+        _set(self, level=level, least_rows=least, crossings=crossings, points=points)
+        if self.at is not None:
+            _set(self, at=as_tuple("--at", self.at, "hold points, one by one", "put it in a tuple"))
+            if not self.at:
+                raise InputError(
+                    "--at", "hold a point", "it is empty", "give points or leave it out"
+                )

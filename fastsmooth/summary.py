@@ -26,15 +26,18 @@ def curve_lines(made: Curve) -> list[str]:
     lines = [f"{settings['y']} against {settings['x']}", *_row_lines(made)]
     if settings["block"] is not None:
         blocks = made.trace["blocks"]
+        by_fold = made.search.criterion == "leave-block-out" and settings["bandwidth"] is None
+        rests = "width and band rest" if by_fold else "the band rests"
         lines.append(
             f"blocks     {blocks:,} by {settings['block']}, dealt to {settings['folds']} folds; "
-            f"width and band rest on leaving out folds"
+            f"{rests} on leaving out folds"
         )
     lines += _width_lines(made)
     kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(
         f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around "
-        f"the curve by {engine['residual_sd']:.4g} (residual sd)"
+        f"the curve by {engine['residual_sd']:.4g} (residual sd"
+        + (" of a row of weight 1)" if settings["weight"] is not None else ")")
     )
     lines.append(_fit_line(made))
     lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
@@ -55,7 +58,8 @@ def search_lines(made: Curve) -> list[str]:
     found = made.search
     names = list(found.trails)
     lines = [f"{made.settings['y']} against {made.settings['x']}", *_row_lines(made)]
-    lines.append(f"criterion  {found.criterion}, kernel {found.kernel}")
+    shown = "" if found.criterion != "plug-in" else "; the table shows leave-one-out"
+    lines.append(f"criterion  {found.criterion}, kernel {found.kernel}{shown}")
     lines.append("")
     lines.append(f"{'bandwidth':>22}" + "".join(f"{name:>18}" for name in names))
     grid = found.trails[names[0]].bandwidths
@@ -138,9 +142,15 @@ def _fit_line(made: Curve) -> str:
 def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
     label = made.axis.label
     words = {
-        "steepest": "steepest at", "lowest": "turns (lowest) at", "highest": "turns (highest) at",
+        "steepest": "steepest at",
+        "lowest": "turns (lowest) at",
+        "highest": "turns (highest) at",
         "crossing": f"crosses {mark['value']:g} at",
-    }  # fmt: skip
+    }
+    if made.scale == "log":
+        words["steepest"] = "steepest (per factor of x) at"
+    if mark["x"] is None:
+        return f"landmark   {mark['value']:g} is not reached on any supported stretch"
     text = f"landmark   {words[mark['kind']]} {label(mark['x'])}"
     if mark["lower"] is None or mark["upper"] is None:
         return text + " (no interval: some folds decide whether it is there)"
@@ -180,7 +190,11 @@ def _width_lines(made: Curve) -> list[str]:
         lines.append(f"           {made.search.criterion} would choose {label(mine.bandwidth)}")
     lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
     by_row = mine.leave_one_out_bandwidth
-    if made.search.criterion == "leave-block-out" and not 0.95 < by_row / mine.bandwidth < 1.05:
+    ratio = by_row / mine.bandwidth
+    if made.scale == "log":
+        ratio = math.log(by_row) / math.log(mine.bandwidth)
+    alike = 0.95 < ratio < 1.05
+    if made.search.criterion == "leave-block-out" and not alike:
         lines.append(
             f"           leave-one-out would choose {label(by_row)}: rows of one block resemble "
             f"each other, so it takes their common wander for signal"

@@ -17,9 +17,10 @@ from .compiled import (
     types,
 )
 
-_SLOTS = 1024  # rows evaluated at a time
-_BLOCK = 128  # rows between the checkpoints of an arm
-_COLUMNS = _SLOTS + 3 * _BLOCK  # of an arm's table: as many rows as its slots meet, if not more
+SLOTS = 1024  # rows evaluated at a time
+_BLOCK = 256  # rows between the checkpoints of an arm
+_CHUNK = 256  # rows at a time in loops over many work rows, which then fit the first-level cache
+_COLUMNS = SLOTS + 3 * _BLOCK  # of an arm's table: as many rows as its slots meet, if not more
 _REACH = 16  # windows that end before this many rows on either side are summed row by row
 _STRIDE = 8  # added to the length of work rows, so that they do not share cache sets
 _ONE = np.uint64(1)
@@ -50,7 +51,7 @@ class Work(NamedTuple):
     carries: np.ndarray  # (arms, blocks, rows) power sums up to each block; see `_start_arm`
     tables: np.ndarray  # (arms, rows, columns) growing power sums over each segment
     moments: np.ndarray  # (pairs of arms, rows, slots) power sums about the slot's centre
-    sums: np.ndarray  # (3 degree + 3, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h
+    sums: np.ndarray  # (3 degree + 4, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h, sum w
 
 
 _INTEGERS_2D = types.int64[:, ::1]
@@ -96,12 +97,12 @@ def _weigh(weight, first, count, column, terms):
         b[k] *= ws[k]
 
 
-@kernel(types.void(READ_1D, types.int64, WRITE_2D))
-def _copy_weights(weight, first, terms):
-    """Weights of rows first to first + _BLOCK into `terms`."""
-    ws = weight[first : first + _BLOCK]
+@kernel(types.void(READ_1D, types.int64, types.int64, WRITE_2D))
+def _copy_weights(weight, first, count, terms):
+    """Weights of rows first, first + 1, ... into `terms`."""
+    ws = weight[first : first + count]
     w = terms[3]
-    for k in range(_BLOCK):
+    for k in range(count):
         w[k] = ws[k]
 
 
@@ -367,12 +368,14 @@ def _join(tables, places, side, first_row, last_row, begin, end, moments):
     """Sum over a window = sum over the arm that shortens + sum over the arm that grows."""
     down_columns = places[_PLACE + 2 * side]
     up_columns = places[_PLACE + 2 * side + 1]
-    for row in range(first_row, last_row + 1):
-        out = moments[side, row]
-        down = tables[2 * side, row]
-        up = tables[2 * side + 1, row]
-        for k in range(np.uint64(begin), np.uint64(end)):
-            out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
+    for start in range(begin, end, _CHUNK):
+        stop = min(end, start + _CHUNK)
+        for row in range(first_row, last_row + 1):
+            out = moments[side, row]
+            down = tables[2 * side, row]
+            up = tables[2 * side + 1, row]
+            for k in range(np.uint64(start), np.uint64(stop)):
+                out[k] = down[np.uint64(down_columns[k])] + up[np.uint64(up_columns[k])]
 
 
 @kernel(types.void(_INTEGERS_2D, types.int64, types.int64, types.int64, types.int64, WRITE_3D))
@@ -529,52 +532,49 @@ def _all_short(x, bandwidth, first, count):
 
 
 @kernel(
-    types.int64(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
-                types.int64, types.int64, WRITE_2D, WRITE_2D)
+    types.int64(READ_1D, READ_1D, types.float64, types.float64, types.float64, types.float64,
+                types.int64, types.float64, types.int64, types.int64, types.int64, types.int64,
+                types.int64, WRITE_2D, WRITE_2D)
 )  # fmt: skip
 def _add_neighbours(
-    x, y, weight, coefficients, bandwidth, degree, first, count, offset, terms, sums
+    x, y, c0, c1, c2, c3, power, bandwidth, degree, first, slot, size, offset, terms, sums
 ):
-    """Add to the sums of each slot the row `offset` places away; return how many were in reach."""
-    n = x.shape[0]
-    begin = max(0, -offset - first)
-    end = max(min(count, n - offset - first), begin)
-    size = end - begin
-    here = x[first + begin : first + end]
-    there = x[first + begin + offset : first + end + offset]
-    ys = y[first + begin + offset : first + end + offset]
-    ws = weight[first + begin + offset : first + end + offset]
+    """Add to the sums of slot, slot + 1, ... the row `offset` places away, where in reach.
+
+    K(u) = c0 + c1 r + c2 r^2 + c3 r^3 with r = |u|^power. The weights of those rows lie in
+    `terms`. Returns how many were in reach.
+    """
+    here = x[first : first + size]
+    there = x[first + offset : first + offset + size]
+    ys = y[first + offset : first + offset + size]
+    s0 = sums[0, slot : slot + size]
+    t0 = sums[2 * degree + 1, slot : slot + size]
     u = terms[0]
     g = terms[1]
-    w = terms[2]
+    w = terms[3]
     per_unit = 1.0 / bandwidth
-    top = coefficients.shape[0] - 1
-    highest = coefficients[top]
     met = 0
     for k in range(size):
         d = there[k] - here[k]
         inside = abs(d) <= bandwidth
         met += inside
-        u[k] = d * per_unit if inside else 0.0
-        g[k] = highest if inside else 0.0
-        w[k] = 1.0 if inside else 0.0
-    if weight.shape[0] > 0:
-        for k in range(size):
-            w[k] *= ws[k]
-            g[k] *= ws[k]
-    for q in range(top - 1, -1, -1):
-        c = coefficients[q]
-        for k in range(size):
-            g[k] = g[k] * abs(u[k]) + c * w[k]
-    for j in range(degree + 1):
-        s = sums[j, begin:end]
-        t = sums[2 * degree + 1 + j, begin:end]
+        v = d * per_unit if inside else 0.0
+        m = abs(v)
+        r = v * v if power == 2 else (m if power == 1 else m * m * m)
+        p = w[k] * (c0 + r * (c1 + r * (c2 + r * c3))) if inside else 0.0
+        s0[k] += p
+        t0[k] += p * ys[k]
+        u[k] = v
+        g[k] = p * v
+    for j in range(1, degree + 1):
+        s = sums[j, slot : slot + size]
+        t = sums[2 * degree + 1 + j, slot : slot + size]
         for k in range(size):
             s[k] += g[k]
             t[k] += g[k] * ys[k]
             g[k] *= u[k]
     for j in range(degree + 1, 2 * degree + 1):
-        s = sums[j, begin:end]
+        s = sums[j, slot : slot + size]
         for k in range(size):
             s[k] += g[k]
             g[k] *= u[k]
@@ -585,35 +585,38 @@ def _add_neighbours(
     types.void(WRITE_3D, READ_1D, types.int64, types.boolean, types.int64, types.int64, WRITE_2D)
 )
 def _add_sums(moments, coefficients, side, left, degree, count, sums):
-    """Add kernel sums made of power sums about a centre; last row of `sums`: (centre - x_i) / h.
+    """Add kernel sums made of power sums about a centre.
 
     Moved to x_i by sum w (v + s)^r = sum w v (v + s)^(r-1) + s sum w (v + s)^(r-1), in place.
     `left`: the rows lie left of x_i, where |u|^q = (-1)^q u^q.
     """
     top = coefficients.shape[0] - 1
     pairs = (moments.shape[1] - 1) // 2
-    shift = sums[3 * degree + 2]
-    for first, last in ((0, top + 2 * degree), (1 + pairs, 1 + pairs + top + degree)):
-        for start in range(first + 1, last + 1):
-            for row in range(last, start - 1, -1):
-                upper = moments[side, row]
-                lower = moments[side, row - 1]
-                for k in range(count):
-                    upper[k] += shift[k] * lower[k]
-    for j in range(3 * degree + 2):
-        row = j if j <= 2 * degree else 1 + pairs + j - (2 * degree + 1)
-        out = sums[j]
-        for q in range(top + 1):
-            c = coefficients[q]
-            if c == 0.0:
-                continue
-            if left and q % 2 == 1:
-                c = -c
-            source = moments[side, row + q]
-            for k in range(count):
-                out[k] += c * source[k]
-
-
+    for begin in range(0, count, _CHUNK):
+        end = min(count, begin + _CHUNK)
+        size = end - begin
+        shift = sums[3 * degree + 2, begin:end]
+        for first, last in ((0, top + 2 * degree), (1 + pairs, 1 + pairs + top + degree)):
+            for start in range(first + 1, last + 1):
+                for row in range(last, start - 1, -1):
+                    upper = moments[side, row, begin:end]
+                    lower = moments[side, row - 1, begin:end]
+                    for k in range(size):
+                        upper[k] += shift[k] * lower[k]
+        for j in range(3 * degree + 2):
+            row = j if j <= 2 * degree else 1 + pairs + j - (2 * degree + 1)
+            out = sums[j, begin:end]
+            for q in range(top + 1):
+                c = -coefficients[q] if left and q % 2 == 1 else coefficients[q]
+                if c == 0.0:
+                    continue
+                source = moments[side, row + q, begin:end]
+                for k in range(size):
+                    out[k] += c * source[k]
+        weights = moments[side, 0, begin:end]
+        total = sums[3 * degree + 3, begin:end]
+        for k in range(size):
+            total[k] += weights[k]
 
 
 @kernel(
@@ -644,19 +647,19 @@ def make_work(n, coefficients, degree):
         arms[arm, _EDGE] = _OWN
     arms[0, _EDGE] = _LOWS
     arms[count - 1, _EDGE] = _HIGHS
-    slots = _SLOTS + _STRIDE
+    slots = SLOTS + _STRIDE
     columns = _COLUMNS + _STRIDE
     terms = np.ones((4, columns))
     return Work(
         arms,
-        np.zeros((count, _SLOTS + _COLUMNS // _BLOCK, 3), np.int64),
+        np.zeros((count, SLOTS + _COLUMNS // _BLOCK, 3), np.int64),
         np.zeros((_PLACE + count, slots), np.int64),
-        np.zeros((count + 1, _SLOTS + _COLUMNS // _BLOCK)),
+        np.zeros((count + 1, SLOTS + _COLUMNS // _BLOCK)),
         terms,
         np.empty((count, n // _BLOCK + 2, rows)),
         np.zeros((count, rows, columns)),
         np.zeros((sides, rows, slots)),
-        np.zeros((3 * degree + 3, slots)),
+        np.zeros((3 * degree + 4, slots)),
     )
 
 
@@ -666,34 +669,50 @@ def fill_sums(
     x, y, weight, coefficients, bandwidth, degree, first, count,
     arms, segments, places, centres, terms, carries, tables, moments, sums,
 ):  # fmt: skip
-    """Put the kernel sums of rows first, first + 1, ... (at most `_SLOTS`) into `sums`.
+    """Put the kernel sums of rows first, first + 1, ... (at most `SLOTS`) into `sums`.
 
     Ranges must follow each other: the work arrays carry the cell from one call to the next.
     """
-    for row in range(3 * degree + 2):
+    for row in range(sums.shape[0]):
         for k in range(count):
             sums[row, k] = 0.0
     state = arms.shape[0] - 1
+    top = coefficients.shape[0] - 1
+    n = x.shape[0]
+    weighted = weight.shape[0] > 0
     if _all_short(x, bandwidth, first, count):
-        _add_neighbours(x, y, weight, coefficients, bandwidth, degree, first, count, 0, terms, sums)
-        offset = 1
-        met = 1
-        while met > 0 and offset < _REACH:
-            met = 0
-            for sign in range(-1, 2, 2):
-                met += _add_neighbours(
-                    x, y, weight, coefficients, bandwidth, degree, first, count, sign * offset,
-                    terms, sums,
-                )  # fmt: skip
-            offset += 1
+        # Every kernel is at most a cubic in |u|, u^2 or |u|^3.
+        power = 1
+        while power < top and coefficients[power] == 0.0:
+            power += 1
+        c0 = coefficients[0]
+        c1 = coefficients[power] if top >= power else 0.0
+        c2 = coefficients[2 * power] if top >= 2 * power else 0.0
+        c3 = coefficients[3 * power] if top >= 3 * power else 0.0
+        for begin in range(0, count, _CHUNK):
+            end = min(count, begin + _CHUNK)
+            met = 1
+            distance = 0
+            while met > 0 and distance < _REACH:
+                met = 0
+                for sign in range(-1, 2 if distance > 0 else 0, 2):
+                    offset = sign * distance
+                    slot = max(begin, -offset - first)
+                    size = min(end, n - offset - first) - slot
+                    if size > 0:
+                        if weighted:
+                            _copy_weights(weight, first + slot + offset, size, terms)
+                        met += _add_neighbours(
+                            x, y, c0, c1, c2, c3, power, bandwidth, degree, first + slot, slot,
+                            size, offset, terms, sums,
+                        )  # fmt: skip
+                distance += 1
         arms[state, _CELL_END] = first + count
         return
     _find_edges(x, bandwidth, first, count, arms, places)
     sides = moments.shape[0]
     powers = carries.shape[2]
     pairs = (powers - 1) // 2
-    top = coefficients.shape[0] - 1
-    weighted = weight.shape[0] > 0
     per_unit = 1.0 / bandwidth
     done = 0
     while done < count:
@@ -720,7 +739,7 @@ def fill_sums(
                         at = arms[arm, _CARRIED]
                         start = origin + at * _BLOCK if grows else origin - (at + 1) * _BLOCK
                         if weighted:
-                            _copy_weights(weight, start, terms)
+                            _copy_weights(weight, start, _BLOCK, terms)
                         _sum_block(x, y, start, centre, per_unit, arm, at, terms, carries)
                         arms[arm, _CARRIED] = at + 1
                 for side in range(sides):

@@ -113,6 +113,7 @@ def build(
         search=Search(told["criterion"], told["kernel"], trails, 0.0),
         cautions=tuple(cautions),
         trace={
+            "files": [],
             "settings": told,
             "rows": {
                 "read": x.size + 17, "filtered": 12, "refused": {"y null": 5}, "used": x.size,

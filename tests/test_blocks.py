@@ -159,9 +159,7 @@ def test_chunks_and_order_do_not_matter_for_values(values, cuts, random):
     column = pa.array(values, pa.string())
     whole, keys = deal(column, Block("plant"))
     cuts = sorted({0, len(values), *(min(cut, len(values)) for cut in cuts)})
-    parts = [
-        deal(column.slice(a, b - a), Block("plant")) for a, b in pairwise(cuts)
-    ]
+    parts = [deal(column.slice(a, b - a), Block("plant")) for a, b in pairwise(cuts)]
     assert [fold for folds, _ in parts for fold in folds] == whole
     assert set().union(*(met for _, met in parts)) == keys
     order = list(range(len(values)))
@@ -210,6 +208,15 @@ def test_instants_are_dealt_by_the_clock_of_the_zone(
     assert keys == set(numbers)
 
 
+def test_a_zone_may_be_a_fixed_offset():
+    # 20:00 in Greenwich is 01:30 of the next day half past five hours further east.
+    instants = pa.array([datetime(2026, 3, 1, 20, tzinfo=UTC)], pa.timestamp("us", "+05:30"))
+    number = (date(2026, 3, 2) - date(1970, 1, 1)).days
+    assert deal(instants, Block("logged_at", "day")) == (
+        [oracle.fold_of_number(number, FOLDS)], {number},
+    )  # fmt: skip
+
+
 @pytest.mark.parametrize("zone", ZONES)
 @pytest.mark.parametrize("unit", UNITS)
 def test_days_on_which_clocks_change_are_whole(zone, unit):
@@ -250,6 +257,23 @@ def test_a_unit_needs_times():
     assert str(caught.value) == (
         "--block must name a time column when a unit is given, but 'plant' holds string; write "
         "--block plant."
+    )
+
+
+@pytest.mark.parametrize(
+    ("column", "holds"),
+    [
+        (pa.array([datetime(2026, 3, 1, 4)], pa.timestamp("us")), "timestamp[us]"),
+        (pa.array([date(2026, 3, 1)], pa.date32()), "timestamp[s]"),
+    ],
+)
+def test_a_zone_needs_instants(column, holds):
+    # Such a clock may show any zone's time: moving it by another would be a guess.
+    with pytest.raises(InputError) as caught:
+        deal(column, Block("logged_at", "day", MADRID))
+    assert str(caught.value) == (
+        f"--block must name a column of instants when a zone is given, but 'logged_at' holds "
+        f"{holds}, a clock without a zone; write --block logged_at:day, which takes it as it is."
     )
 
 

@@ -237,6 +237,51 @@ def test_strict_refuses_what_is_otherwise_counted(plant, tmp_path, capsys):
     assert "1 y NaN, 1 y infinite" in complaint
 
 
+def test_data_are_never_written_over(plant, tmp_path, capsys):
+    data = tmp_path / "0.parquet"
+    data.write_bytes((plant / "0.parquet").read_bytes())
+    link = tmp_path / "link.parquet"
+    link.symlink_to(data)
+    before = data.read_bytes()
+    for out in (data, link):
+        for command in ("curve", "search"):
+            code, _, complaint = run(
+                capsys, command, data, "--x", "wet_bulb_c", "--y", "power_kw", "--out", out
+            )
+            assert code == 2
+            assert "is one of the files that were read" in complaint
+    assert data.read_bytes() == before
+
+
+@pytest.mark.parametrize("data", ["", "/*.parquet"])
+def test_an_output_is_never_read_as_data_next_time(plant, tmp_path, capsys, data):
+    (tmp_path / "0.parquet").write_bytes((plant / "0.parquet").read_bytes())
+    answer = run(
+        capsys, "curve", f"{tmp_path}{data}", "--x", "wet_bulb_c", "--y", "power_kw",
+        "--out", tmp_path / "curve.parquet",
+    )  # fmt: skip
+    assert answer[0] == 2
+    assert "would be read as data next time" in answer[2]
+    assert os.listdir(tmp_path) == ["0.parquet"]
+
+
+def test_figures_belong_to_the_width_that_was_given(plant, capsys):
+    def r2(*options):
+        _, told, _ = run(
+            capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", "--json", *options
+        )
+        return json.loads(told)["fit"]["r2_left_out"]
+
+    assert r2("--bandwidth", "20") < r2() - 0.05
+
+
+def test_a_crossing_that_is_not_reached_is_told(plant, capsys):
+    _, told, _ = run(
+        capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", "--crossing", "1000"
+    )
+    assert "1000 is not reached on any supported stretch" in told
+
+
 def test_interruption_leaves_nothing(plant, tmp_path, monkeypatch, capsys):
     def interrupt(*_):
         raise KeyboardInterrupt

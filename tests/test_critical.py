@@ -11,7 +11,7 @@ from scipy import optimize, stats
 
 from fastsmooth import Band, InputError, Reading, Smoothing, make_curve
 from fastsmooth.blocks import fold_of_number
-from fastsmooth.critical import chords_of_path, pointwise_value, tail_for_all
+from fastsmooth.critical import chords_of_path, pointwise_value, simulated_tail, tail_for_all
 from fastsmooth.curve import OUTSIDE, THIN
 from tests.oracle import local
 from tests.oracle.folds import without
@@ -172,6 +172,59 @@ def test_paths_with_errors_of_their_own_cross_as_often_as_they_may(degrees):
     assert np.mean(arcs) == pytest.approx(arc_length, rel=0.03)
 
 
+# Simulated fields.
+
+
+def common_and_own(rng, runs, copies, points=80):
+    """Normal fields with three quarters of their variance common to all points."""
+    paths, _ = smooth_paths(rng, runs, copies)
+    common = rng.normal(size=(runs, copies, 1))
+    return math.sqrt(0.75) * common + 0.5 * paths[:, :, :points]
+
+
+def test_simulated_fields_cross_as_often_as_they_may():
+    rng = np.random.default_rng(11)
+    folds, runs = 16, 250
+    fields = common_and_own(rng, runs, folds)
+    crossed, crossed_counting = 0, 0
+    for field in fields:
+        # The mean of the folds over its jackknife error: degrees folds - 1, truth 0.
+        mean = field.mean(axis=0)
+        moved = (mean - field) / (folds - 1)
+        error = np.sqrt((folds - 1) / folds * np.sum(moved**2, axis=0))
+        highest = np.max(np.abs(mean / error))
+        tail = simulated_tail(0.90, moved, folds - 1.0)
+        crossed += highest > stats.t.isf(tail / 2.0, folds - 1)
+        chords = chords_of_path(moved)
+        counting = tail_for_all(0.90, chords, np.full(chords.size, folds - 1.0), 1, own_scale=True)
+        crossed_counting += highest > stats.t.isf(counting / 2.0, folds - 1)
+    # Three standard errors of a share of 0.1 in 250 runs are 0.057.
+    assert 0.043 < crossed / runs < 0.157
+    assert crossed_counting < crossed
+
+
+def test_simulation_agrees_with_counting_where_crossings_are_rare_and_apart():
+    paths, _ = smooth_paths(np.random.default_rng(12), 1, 40)
+    counting = tail_for_all(
+        0.98, chords_of_path(paths[0]), np.full(paths.shape[2] - 1, 39.0), 1, own_scale=True
+    )
+    # Some eighty of four thousand draws lie beyond: their number is known to a ninth.
+    assert simulated_tail(0.98, paths[0], 39.0) == pytest.approx(counting, rel=0.4)
+
+
+def test_simulation_is_the_same_every_time_and_knows_its_limits():
+    vectors = common_and_own(np.random.default_rng(13), 1, 16)[0]
+    assert simulated_tail(0.95, vectors, 15.0) == simulated_tail(0.95, vectors, 15.0)
+    holed = np.concatenate((vectors, np.zeros((16, 1)), np.full((16, 1), math.nan)), axis=1)
+    assert simulated_tail(0.95, holed, 15.0) == pytest.approx(
+        simulated_tail(0.95, vectors, 15.0), rel=1e-9
+    )
+    assert simulated_tail(0.995, vectors, 15.0) == 0.0
+    assert simulated_tail(0.95, np.zeros((16, 5)), 15.0) == 0.0
+    # A single point needs the pointwise value.
+    assert simulated_tail(0.95, vectors[:, :1], 15.0) == pytest.approx(0.05, rel=0.25)
+
+
 # Through the whole engine.
 
 
@@ -195,9 +248,21 @@ def half_over_error(made):
     return (made.upper - made.lower) / 2.0 / made.std_error
 
 
+def highest_of_t_fields(rng, units, nu, draws):
+    """The highest points of so many t fields, one after the other; `units` has a row per place."""
+    highest = []
+    for _ in range(draws):
+        fit, *errors = (units @ rng.normal(size=units.shape[1]) for _ in range(nu + 1))
+        square = sum(one * one for one in errors) / nu
+        highest.append(float(np.max(np.abs(fit) / np.sqrt(square))))
+    return highest
+
+
 def test_the_band_for_all_solves_the_equation_of_refitted_paths():
     x, y, day = readings()
     pointwise, for_all = (curve_of(x, y, day, kind) for kind in ("pointwise", "simultaneous"))
+    # Beyond 99 % crossings are counted, below it fields are simulated.
+    stricter = curve_of(x, y, day, "simultaneous", level=0.995)
     lists = x.tolist(), y.tolist()
     folds = [fold_of_number(one, 16) for one in day.tolist()]
     # Points of the band, and places half-way for the path.
@@ -206,7 +271,9 @@ def test_the_band_for_all_solves_the_equation_of_refitted_paths():
     def parts(at):
         whole = local.fit_at(at, *lists, 8.0, "biweight", 2)
         moved = [
-            local.fit_at(at, *(without(one, folds, fold) for one in lists), 8.0, "biweight", 2).value
+            local.fit_at(
+                at, *(without(one, folds, fold) for one in lists), 8.0, "biweight", 2
+            ).value
             - whole.value
             for fold in range(16)
         ]
@@ -227,14 +294,19 @@ def test_the_band_for_all_solves_the_equation_of_refitted_paths():
     def excess_of(log_p):
         c = stats.t.isf(math.exp(log_p) / 2.0, between)
         tails = (1.0 + c**2 / between) ** (-(between - 1.0) / 2.0)
-        return chords @ tails / math.pi + math.exp(log_p) - 0.05
+        return chords @ tails / math.pi + math.exp(log_p) - 0.005
 
-    p = math.exp(optimize.bisect(excess_of, math.log(1e-8), math.log(0.05)))
+    p = math.exp(optimize.bisect(excess_of, math.log(1e-8), math.log(0.005)))
     own = np.interp(for_all.x, places, degrees)
     assert (for_all.status != OUTSIDE).all()
     assert (for_all.status != THIN).all()
     np.testing.assert_allclose(half_over_error(pointwise), stats.t.isf(0.025, own), rtol=2e-2)
-    np.testing.assert_allclose(half_over_error(for_all), stats.t.isf(p / 2.0, own), rtol=2e-2)
+    np.testing.assert_allclose(half_over_error(stricter), stats.t.isf(p / 2.0, own), rtol=2e-2)
+    nu = round(float(np.median(own)))
+    highest = highest_of_t_fields(np.random.default_rng(1), np.array(units), nu, 4000)
+    p = 2.0 * stats.t.sf(np.quantile(highest, 0.95), nu)
+    # The quantile of 4000 draws has a standard error of some two percent.
+    np.testing.assert_allclose(half_over_error(for_all), stats.t.isf(p / 2.0, own), rtol=5e-2)
     np.testing.assert_allclose(for_all.std_error, pointwise.std_error, rtol=1e-12)
     np.testing.assert_allclose(for_all.estimate, pointwise.estimate, rtol=1e-12)
 
@@ -252,7 +324,7 @@ def test_a_band_for_all_is_wider_and_a_higher_level_wider_still(block):
 
 
 def test_a_kernel_with_a_jump_has_no_band_for_all():
-    x, y, day = readings()
+    x, y, _ = readings()
     data = {"wet_bulb_c": x, "power_kw": y}
     smoothing = Smoothing(kernel="uniform", widths=8)
     with pytest.raises(InputError) as caught:

@@ -8,7 +8,7 @@ import pyarrow as pa
 import pytest
 
 from fastsmooth import Band, Curve, InputError, Reading, Smoothing, make_curve
-from fastsmooth.curve import CURVE_KEY, STATUSES, supported_stretches
+from fastsmooth.curve import CURVE_KEY, STATUSES
 from tests import cases
 
 COLUMNS = (
@@ -53,17 +53,13 @@ def test_nothing_is_read_outside_or_in_the_gap(curve_with_a_gap):
     assert curve.bandwidth < 2.0
     assert np.isnan(curve.at([-5.5, 13.0, 29.0, np.nan])).all()
     assert np.isfinite(curve.at([-4.0, 10.0, 16.0, 27.0])).all()
-    stretches = supported_stretches(curve)
-    assert len(stretches) == 2
-    assert stretches[0][1] < 13.0 < stretches[1][0]
 
 
-def test_a_single_supported_point_is_itself():
+def test_points_of_ones_own_are_not_read_between():
     made = make(band=Band(at=(-90.0, 10.0, 90.0)))
     assert made.statuses == ["outside", "ok", "outside"]
-    assert made.at([10.0])[0] == made.estimate[1]
-    assert np.isnan(made.at([10.1])).all()
-    assert supported_stretches(made) == [(10.0, 10.0)]
+    with pytest.raises(InputError, match="the curve must have evenly spaced points"):
+        made.at([10.0])
 
 
 def test_default_points_run_from_end_to_end(curve):
@@ -189,7 +185,6 @@ def test_log_scale_is_the_curve_of_the_logarithm():
         plain.search.trails["local-linear"].bandwidth, rel=1e-3
     )
     assert trail.flat_zone[0] <= trail.bandwidth <= trail.flat_zone[1]
-    assert made.at([2.0])[0] == pytest.approx(made.estimate[1])
 
 
 # The rows that lie behind it.

@@ -3,9 +3,11 @@
 import math
 
 import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 
-from fastsmooth import InputError, Reading, Smoothing, make_curve
+from fastsmooth import InputError, ReadError, Reading, Smoothing, make_curve
 from fastsmooth.bintable import BinTable
 from fastsmooth.passes import bins_for, count_finer, count_pass, count_rows
 from fastsmooth.plan import BINS, Plan, draw_sample, make_plan
@@ -307,3 +309,19 @@ def test_shown_rows_are_rows_of_the_data(thousand):
     assert 0 < shown.shape[1] <= 100_000
     assert np.isin(shown[0], thousand).all()
     assert shown[1] == pytest.approx(np.cos(shown[0]))
+
+
+def test_values_outside_their_own_statistics_are_damage(tmp_path):
+    rng = np.random.default_rng(3)
+    x = rng.uniform(5.0, 25.0, 4000)
+    path = tmp_path / "a.parquet"
+    pq.write_table(
+        pa.table({"x": x, "y": x}), path, compression="none", use_dictionary=False,
+        write_page_checksum=False,
+    )  # fmt: skip
+    whole = bytearray(path.read_bytes())
+    place = bytes(whole).index(x[:4].tobytes())
+    whole[place + 800 : place + 1600] = bytes(800)  # a hundred values become 0
+    path.write_bytes(whole)
+    with pytest.raises(ReadError, match="100 values of 'x' lie outside the range"):
+        make_curve(path, "x", "y")

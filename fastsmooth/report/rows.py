@@ -157,6 +157,8 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
     for stretch in stretches(curve.status):
         if stretch.status == OUTSIDE:
             continue
+        if curve.trace["settings"].get("at") is not None:
+            break  # points of the caller's own: nothing is known of what lies between
         name = STATUSES[stretch.status]
         start, stop = _joined(curve.status, stretch)
         panel.plot(
@@ -165,7 +167,8 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
             gid=f"curve {name}", zorder=5,
         )  # fmt: skip
     alone = _alone(curve.estimate)
-    dots = np.isfinite(curve.estimate) if curve.x.size <= _FEW_POINTS else alone
+    own = curve.trace["settings"].get("at") is not None
+    dots = np.isfinite(curve.estimate) if own or curve.x.size <= _FEW_POINTS else alone
     panel.plot(
         x[dots], curve.estimate[dots], linestyle="none", marker="o", markersize=4.5, color=CURVE,
         markeredgecolor=PAPER, markeredgewidth=0.8, gid="curve points", zorder=6,
