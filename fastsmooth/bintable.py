@@ -249,14 +249,17 @@ class BinTable:
             if mine is None:
                 self.sums[fold] = other.sums[fold].copy()
                 continue
-            mine[bins] += other.sums[fold][bins]
+            # Sums that overflow are refused once all rows are in.
+            with np.errstate(over="ignore", invalid="ignore"):
+                mine[bins] += other.sums[fold][bins]
             mine[bins, _PILOT] = self.plan.pilot_per_bin[bins]
 
     def total(self) -> Floats:
         """Return the sums over all folds, (bins, slots); slot 7 holds the pilot."""
         total = np.zeros((self.plan.bins, self.slots))
-        for fold in sorted(self.sums):
-            total += self.sums[fold]
+        with np.errstate(over="ignore", invalid="ignore"):
+            for fold in sorted(self.sums):
+                total += self.sums[fold]
         total[:, _PILOT] = self.plan.pilot_per_bin
         return total
 

@@ -12,6 +12,7 @@ from fastsmooth.bands import Noise
 from fastsmooth.bintable import BinTable
 from fastsmooth.curve import FEWEST_FOLDS, OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
+from fastsmooth.quoting import sql_name, where_option
 from fastsmooth.smoother import Fits
 from fastsmooth.source import Source
 
@@ -183,5 +184,5 @@ def _about_spikes(made: Curve, sample: Sample, z: Floats) -> Iterator[Caution]:
             "repeated far value",
             f"{column} is {values[most]:g} in {counts[most]} of {sample.y.size} sampled rows, far "
             f"from all others: is it a code for a missing reading? Leave such rows out with "
-            f"--where '{column} <> {values[most]:g}'.",
+            f"{where_option(f'{sql_name(column)} <> {values[most]:g}')}.",
         )

@@ -189,11 +189,16 @@ def _missing(path: str) -> InputError:
             folder, name = os.path.split(folder)
         folder = folder or "."
     try:
-        names = sorted(entry for entry in os.listdir(folder) if not _is_hidden(entry))
+        with os.scandir(folder) as entries:
+            names = sorted(
+                entry.name
+                for entry in entries
+                if not _is_hidden(entry.name) and (entry.is_dir() or file_format(entry.name))
+            )
     except OSError:
         names = []
     if not names:
-        remedy = f"there is nothing to choose from in '{folder}'"
+        remedy = f"there are no data files in '{folder}'"
     else:
         remedy = f"{advise(name, names)} in '{folder}'"
     return InputError("DATA", requirement, f"'{path}' does not exist", remedy)

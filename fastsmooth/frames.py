@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import shutil
+import sys
 import tempfile
 import weakref
 from collections.abc import Callable, Iterator, Sequence
@@ -69,19 +70,35 @@ def open_frame(data: Any) -> Reader:
             "hand in a path, a dict of arrays, or a frame with __arrow_c_stream__",
         )
     if module in IN_MEMORY:
+        _check_names(data)
         with _streaming("the frame"):
             return TableReader(pa.RecordBatchReader.from_stream(data).read_all(), "the frame")
-    with _streaming("the stream"):
+    with _streaming("the stream", module):
         first = pa.RecordBatchReader.from_stream(data)
     schema = pa.schema(data) if hasattr(data, "__arrow_c_schema__") else first.schema
-    return StreamReader(lambda _: pa.RecordBatchReader.from_stream(data), schema, first)
+    return StreamReader(lambda _: pa.RecordBatchReader.from_stream(data), schema, first, module)
+
+
+def _check_names(frame: Any) -> None:
+    """Refuse a frame with two columns of one name, which cannot be handed over."""
+    names = [str(name) for name in frame.columns]
+    twice = next((name for name in names if names.count(name) > 1), None)
+    if twice is not None:
+        raise InputError(
+            "DATA", "name each column once", f"{names.count(twice)} columns are called '{twice}'",
+            "rename all but one",
+        )  # fmt: skip
 
 
 @contextmanager
-def _streaming(name: str) -> Iterator[None]:
+def _streaming(name: str, module: str = "") -> Iterator[None]:
+    """Tell of errors of a stream; `module` is that of the object that streams."""
+    # Database modules derive their errors from one class of this name (PEP 249).
+    own = getattr(sys.modules.get(module), "Error", None)
+    theirs = (own,) if isinstance(own, type) and issubclass(own, Exception) else ()
     try:
         yield
-    except (pa.ArrowException, OSError, TypeError, RuntimeError) as error:
+    except (pa.ArrowException, OSError, TypeError, ValueError, RuntimeError, *theirs) as error:
         first_line = str(error).strip().split("\n")[0][:160]
         raise ReadError(
             "DATA",
@@ -99,11 +116,14 @@ class StreamReader(Reader):
         open_stream: Callable[[Sequence[str]], pa.RecordBatchReader],
         schema: pa.Schema,
         first: pa.RecordBatchReader | None = None,
+        module: str = "",
     ) -> None:
         """Keep `open_stream`, which takes the columns wanted and may deliver more.
 
-        `first` is a stream that is open already, for the first pass.
+        `first` is a stream that is open already, for the first pass; `module` is that of the
+        object that streams.
         """
+        self._module = module
         self._open = open_stream
         self._first = first
         self._rows: int | None = None
@@ -116,7 +136,7 @@ class StreamReader(Reader):
     def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
         """Deliver a fresh stream; its length must be that of the pass before."""
         delivered = 0
-        with _streaming("the stream"):
+        with _streaming("the stream", self._module):
             first, self._first = self._first, None
             with self._open(columns) if first is None else first as stream:
                 for batch in rebatch((pick(batch, columns) for batch in stream), rows):

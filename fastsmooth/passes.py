@@ -25,8 +25,9 @@ from fastsmooth.plan import (
     no_usable_rows,
     user_range,
 )
+from fastsmooth.quoting import sql_name, where_option
 from fastsmooth.settings import Reading
-from fastsmooth.source import Chunk, Source, Task
+from fastsmooth.source import Chunk, Columns, Source, Task
 
 # The range is trimmed when all but one row in a thousand lie within an eighth of it.
 _TRIMMED_SHARE = 0.001
@@ -37,6 +38,9 @@ _SAMPLE_ENOUGH = 1000
 _MOST_PASSES = 4
 _SHOWN_ROWS = 50_000
 _FEW_GROUPS = 24
+# Mean weights and counts, and y, up to here (and down to the inverse) keep every sum finite.
+_LARGEST = 1e30
+_LARGEST_Y = 1e70
 _MANY_GROUPS = 64
 
 Floats = NDArray[np.float64]
@@ -211,7 +215,8 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
     Raises
     ------
     InputError
-        Negative weights or counts, no usable row, or any refused row when `strict`.
+        Negative weights or counts, sizes that cannot be computed with, no usable row, or any
+        refused row when `strict`.
     """
     refused = table.tally.refused
     for role in ("weight", "count"):
@@ -221,7 +226,8 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
             raise InputError(
                 f"--{role}", "name a column of positive finite numbers",
                 f"'{column}' is negative or infinite in {bad} rows",
-                f"leave those rows out with --where '{column} > 0'",
+                "leave those rows out with "
+                + where_option(f"{sql_name(column)} > 0 AND {sql_name(column)} < 1e30"),
             )  # fmt: skip
     if table.tally.used == 0:
         counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
@@ -232,11 +238,7 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
             f"every row was filtered or refused ({table.tally.filtered} filtered, {counts})",
             "check --where, --range and the columns",
         )  # fmt: skip
-    if not np.isfinite(table.total()).all():
-        raise InputError(
-            "--y", "stay below 1e150 in size", f"squares of '{source.columns.y}' overflow",
-            f"leave such rows out with --where '{source.columns.y} < 1e150'",
-        )  # fmt: skip
+    check_sizes(table.total(), table.tally.used, source.columns)
     if reading.block is not None and len(table.sums) < 2:
         raise InputError(
             "--block", "tell at least two blocks apart",
@@ -251,6 +253,57 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
         raise InputError(
             "DATA", "hold usable rows only with --strict", f"some were refused ({counts})",
             "clean the data, filter with --where, or leave --strict out",
+        )  # fmt: skip
+
+
+def check_sizes(total: Floats, rows: int, columns: Columns) -> None:
+    """Refuse values whose powers no float64 can hold: bands take y to the fourth.
+
+    Parameters
+    ----------
+    total : (bins, slots) float64
+        Sums over all folds; see `BinTable`.
+    rows : int
+        Rows in them.
+    columns : Columns
+        For the refusal.
+
+    Raises
+    ------
+    InputError
+        Counts, weights or y of a size that cannot be computed with, or counts below 1.
+    """
+    with np.errstate(over="ignore", invalid="ignore"):
+        sums = total.sum(axis=0)
+    precision, weighted = float(sums[0]), columns.weight is not None
+    counted = float(sums[8]) if weighted else precision
+    if columns.count is not None and not rows * (1.0 - 1e-9) <= counted <= rows * _LARGEST:
+        raise InputError(
+            "--count", f"hold numbers of equal rows, on average between 1 and {_LARGEST:.0e}",
+            f"the mean of '{columns.count}' is {counted / rows:.3g}",
+            "name it with --weight if only its ratios matter",
+        )  # fmt: skip
+    # Squared weights overflow first.
+    mean = precision / counted if weighted and math.isfinite(float(sums[9])) else math.inf
+    if weighted and not 1.0 / _LARGEST <= mean <= _LARGEST:
+        size = "larger" if mean > 1.0 else "smaller"
+        raise InputError(
+            "--weight", f"lie between {1.0 / _LARGEST:.0e} and {_LARGEST:.0e} on average",
+            f"the mean of '{columns.weight}' is {size}",
+            "multiply it by a constant, because only ratios matter, or leave far values out with "
+            + where_option(f"{sql_name(str(columns.weight))} < {_LARGEST:.0e}"),
+        )  # fmt: skip
+    mean_square = float(sums[6]) / precision
+    if not (mean_square < _LARGEST_Y**2 and np.isfinite(total).all()):
+        raise InputError(
+            "--y", f"stay below {_LARGEST_Y:.0e} in size", f"'{columns.y}' goes beyond it",
+            "leave such rows out with "
+            + where_option(f"ABS({sql_name(columns.y)}) < {_LARGEST_Y:.0e}"),
+        )  # fmt: skip
+    if mean_square < _LARGEST_Y**-2 and total[:, 3].any():
+        raise InputError(
+            "--y", f"differ by more than {1.0 / _LARGEST_Y:.0e}",
+            f"values of '{columns.y}' differ by less", "write it in a smaller unit",
         )  # fmt: skip
 
 

@@ -130,7 +130,8 @@ def _fit_line(made: Curve) -> str:
     fit = made.trace["fit"]
 
     def percent(name: str) -> str:
-        return "none" if fit[name] is None else f"{100 * fit[name]:.3g} %"
+        # Adding zero turns a negative one into a plain one.
+        return "none" if fit[name] is None else f"{round(100 * fit[name], 6) + 0.0:.3g} %"
 
     r2 = "none" if fit["r2_left_out"] is None else f"{fit['r2_left_out']:.4g}"
     return (

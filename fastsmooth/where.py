@@ -23,6 +23,7 @@ from sqlglot.errors import SqlglotError
 from fastsmooth.casts import plain_type
 from fastsmooth.errors import InputError
 from fastsmooth.near import advise
+from fastsmooth.quoting import sql_name
 from fastsmooth.terms import (
     BatchRows,
     ExpressionRows,
@@ -308,9 +309,10 @@ class _Translator:
         if name not in self._schema.names:
             if len(parts) > 1:
                 raise refusal(
-                    f"'{name}' names a table", f"write the column alone, as in {parts[-1]} > 5"
+                    f"'{name}' names a table",
+                    f"write the column alone, as in {sql_name(parts[-1])} > 5",
                 )
-            known = self._schema.names
+            known = [sql_name(one) for one in self._schema.names]
             raise refusal(f"'{name}' is no column of DATA", advise(name, known))
         if len(self._schema.get_all_field_indices(name)) > 1:
             raise refusal(f"DATA has several columns called '{name}'", "rename all but one")
