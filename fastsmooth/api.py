@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.assemble import Chosen, assemble
-from fastsmooth.bintable import Pyramid
+from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.curve import Curve
 from fastsmooth.errors import InputError
 from fastsmooth.kernels.shapes import SHAPES
@@ -23,6 +23,9 @@ Floats = NDArray[np.float64]
 T = TypeVar("T")
 
 _MOST_SEARCHES = 3
+# A given width must not vanish beside the range, and must be a finite number of bins.
+_NARROWEST_RANGES = 1e-12
+_WIDEST_BINS = 1e307
 
 
 def make_curve(
@@ -187,6 +190,21 @@ def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> fl
     return width
 
 
+def _check_width(width: float, table: BinTable) -> None:
+    """Refuse a width that no arithmetic resolves; one far beyond the range fits a line."""
+    low, high = table.extent.tolist()
+    received = ""
+    if width < _NARROWEST_RANGES * (high - low):
+        received = "it is below 1e-12 of it"
+    if not width / table.plan.width < _WIDEST_BINS:
+        received = "it is too wide to be counted in bins"
+    if received:
+        raise InputError(
+            "--bandwidth", "be comparable with the range of x", received,
+            "leave it out, or give a width that a picture could show",
+        )  # fmt: skip
+
+
 def _own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
     """The caller's points on the plan's scale, ascending."""
     if band.at is None:
@@ -221,6 +239,8 @@ def _count_and_search(
             by_block=reading.block is not None, widths=smoothing.widths,
             threads=reading.threads,
         )  # fmt: skip
+        if fixed is not None:
+            _check_width(fixed, counted.table)
         bandwidth = fixed or found.trails[smoothing.estimator].bandwidth
         plan = counted.table.plan
         if bandwidth >= fine * plan.width or tried == _MOST_SEARCHES:

@@ -23,7 +23,7 @@ from fastsmooth.localweights import (
     weights_of,
 )
 from fastsmooth.settings import Band
-from fastsmooth.smoother import Fits, chords_of, kernel_sums
+from fastsmooth.smoother import Fits, chords_of, kernel_sums, width_in_bins
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -258,7 +258,7 @@ def fit_points(
         Which bins of the finest level hold rows.
     """
     level, h = fits.level, fits.bandwidth_bins
-    places = (x - level.origin) / level.width
+    places = _in_bins(x, level)
     sums = _all_sums(places, fits, noise, shape)
     own = CONSTANT if estimator == "local-constant" else LINE
     centred = PARABOLA if band.bias == "corrected" else own
@@ -300,13 +300,19 @@ def fit_points(
 
 def values_at(x: Floats, level: Level, bandwidth: float, shape: Shape, estimator: str) -> Floats:
     """Return the estimate less the plan's reference at x (plan's scale), from one level."""
-    h = bandwidth / level.width
+    h = width_in_bins(bandwidth, level)
     unused = np.zeros((3, level.bins))
-    places = (x - level.origin) / level.width
+    places = _in_bins(x, level)
     sums = sums_at(places, level.first[0:3], level.response, shape, h, unused, unused)
     kind = CONSTANT if estimator == "local-constant" else LINE
     with np.errstate(invalid="ignore", divide="ignore"):
         return weights_of(sums.s, h, kind).apply(sums.t)
+
+
+def _in_bins(x: Floats, level: Level) -> Floats:
+    """Places in bins of the level; those beyond its ends, where nothing is claimed, at the ends."""
+    high = level.origin + level.width * level.bins
+    return np.asarray((np.clip(x, level.origin, high) - level.origin) / level.width)
 
 
 def _all_sums(places: Floats, fits: Fits, noise: Noise, shape: Shape) -> PointSums:
@@ -403,6 +409,8 @@ def _support(
     """Status by support: a point must lie between rows of its own window."""
     low, high = extent
     status = np.full(x.shape[0], OK)
+    beyond = (x < low) | (x > high)
+    x = np.clip(x, low, high)
     status[(x - reach < low) | (x + reach > high)] = EDGE
     place = (x - occupied.origin) / occupied.width
     bin_of_x = np.floor(place).astype(np.int64)
@@ -412,6 +420,6 @@ def _support(
     right = occupied.bins[np.clip(at + np.where(in_bin, 0, 1), 0, occupied.bins.size - 1)]
     to_left = np.where(in_bin, 0.0, place - (left + 1)) * occupied.width
     to_right = np.where(in_bin, 0.0, right - place) * occupied.width
-    cut_off = (to_left > reach) | (to_right > reach) | (x < low) | (x > high)
+    cut_off = (to_left > reach) | (to_right > reach) | beyond
     status[cut_off] = OUTSIDE
     return status

@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 UNITS = ("hour", "day", "week", "month")
 # More keys than this are counted no further; so many blocks need no counting.
 _MOST_KEYS = 100_000
+_LONG_SPAN_SECONDS = 20 * 365 * 86_400
+_LONG_GAP_SECONDS = 365 * 86_400
 _SECONDS = {"s": 1, "ms": 1_000, "us": 1_000_000, "ns": 1_000_000_000}
 _MASK = (1 << 64) - 1
 
@@ -131,6 +133,15 @@ class Dealer:
         import pyarrow as pa
         import pyarrow.compute as pc
 
+        kind = column.type
+        if pa.types.is_nested(kind):
+            raise InputError(
+                "--block", "name a column of plain values", f"'{self.block.column}' holds {kind}",
+                "name another column",
+            )  # fmt: skip
+        if pa.types.is_floating(kind):
+            # NaN is no block, and -0.0 is the same as 0.0.
+            column = pc.if_else(pc.is_nan(column), None, pc.add(column, 0.0))
         coded = column if pa.types.is_dictionary(column.type) else pc.dictionary_encode(column)
         values = coded.dictionary.to_pylist()
         folds = np.array([fold_of_key(value, self.folds) for value in values] + [-1], np.int64)
@@ -166,9 +177,30 @@ class Dealer:
         ticks = column.cast(pa.int64()).to_numpy()
         if not ticks.size:
             return np.empty(0, np.int64), set()
+        folds, met = self._deal_ticks(ticks, kind)
+        if valid is not None:
+            folds = np.where(valid, folds, -1)
+        return folds, met
+
+    def _deal_ticks(
+        self, ticks: NDArray[np.int64], kind: pa.DataType
+    ) -> tuple[NDArray[np.int64], set[Any]]:
+        low, high = int(ticks.min()), int(ticks.max())
+        if high - low > _LONG_SPAN_SECONDS * _SECONDS[kind.unit]:
+            # A stray time (a clock that was never set) makes the list of units between endless:
+            # stretches without rows are left out of it.
+            order = np.argsort(ticks, kind="stable")
+            gap = np.diff(ticks[order]) > _LONG_GAP_SECONDS * _SECONDS[kind.unit]
+            parts = np.split(order, np.flatnonzero(gap) + 1)
+            if len(parts) > 1:
+                folds, met = np.empty(ticks.size, np.int64), set[Any]()
+                for part in parts:
+                    folds[part], of_part = self._deal_ticks(ticks[part], kind)
+                    met |= of_part
+                return folds, met
         starts, keys = _unit_starts(
-            int(ticks.min()), int(ticks.max()), kind.unit, self.block.unit or "day",
-            self.block.zone or kind.tz or "UTC", kind.tz is not None,
+            low, high, kind.unit, self.block.unit or "day", self.block.zone or kind.tz or "UTC",
+            kind.tz is not None,
         )  # fmt: skip
         # Logs are in time order more often than not; then a few cuts do for all rows. Only units
         # that hold rows are dealt: one stray time makes the range of units long.
@@ -181,10 +213,7 @@ class Dealer:
             place = np.searchsorted(starts, ticks, side="right") - 1
             used, own = np.unique(place, return_inverse=True)
             folds = self._folds_of(keys[used])[own]
-        met = set(keys[used].tolist())
-        if valid is not None:
-            folds = np.where(valid, folds, -1)
-        return folds, met
+        return folds, set(keys[used].tolist())
 
     def _folds_of(self, numbers: NDArray[np.int64]) -> NDArray[np.int64]:
         return np.array(

@@ -10,7 +10,14 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from fastsmooth.errors import EXIT_INTERRUPTED, EXIT_OK, EXIT_REFUSED, FastsmoothError
+from fastsmooth.errors import (
+    EXIT_INTERRUPTED,
+    EXIT_OK,
+    EXIT_REFUSED,
+    FastsmoothError,
+    InputError,
+)
+from fastsmooth.near import advise, find_near
 from fastsmooth.settings import BANDS, BIASES, CRITERIA, ESTIMATORS, KERNELS, NOISES, SCALES
 
 if TYPE_CHECKING:
@@ -28,7 +35,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except FastsmoothError as refusal:
         return _complain(str(refusal), refusal.exit_code)
     except click.ClickException as misuse:
-        return _complain(misuse.format_message(), EXIT_REFUSED)
+        return _complain(_reword(misuse), EXIT_REFUSED)
     except (KeyboardInterrupt, click.Abort):
         return _complain("Interrupted; nothing was left half-written.", EXIT_INTERRUPTED)
     except BrokenPipeError:
@@ -41,6 +48,34 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def run() -> None:
     """Enter from the shell."""
     sys.exit(main())
+
+
+def _reword(misuse: click.ClickException) -> str:
+    """Say what the parser refuses in the form of all refusals: what, why, and what to do."""
+    context = getattr(misuse, "ctx", None)
+    help_ = f"see '{context.command_path if context else 'fastsmooth'} --help'"
+    parameter = getattr(misuse, "param", None)
+    name = "" if parameter is None else parameter.opts[0]
+    if isinstance(parameter, click.Argument):
+        name = parameter.human_readable_name.upper()
+    if isinstance(misuse, click.MissingParameter) and name:
+        return str(InputError(name, "be given", "it is missing", help_))
+    if isinstance(misuse, click.BadParameter) and parameter is not None:
+        kinds = {"integer": "be a whole number", "float": "be a number"}
+        requirement = kinds.get(parameter.type.name, f"be {parameter.type.name}")
+        return str(InputError(name, requirement, misuse.message.rstrip("."), help_))
+    if isinstance(misuse, click.NoSuchOption):
+        known = [] if context is None else [
+            one for each in context.command.get_params(context) for one in each.opts
+        ]  # fmt: skip
+        near = find_near(misuse.option_name, known)
+        remedy = advise(misuse.option_name, known) if near else help_
+        what = f"be an option of '{context.command_path}'" if context else "be a known option"
+        return str(InputError(misuse.option_name, what, "there is none of this name", remedy))
+    message = misuse.format_message()
+    # A call without a command shows the help, and a question names what was meant.
+    done = "\n" in message or message.endswith("?")
+    return message if done else f"{message.rstrip('.')}; {help_}."
 
 
 def _complain(sentence: str, code: int) -> int:

@@ -7,6 +7,7 @@ import shutil
 import sys
 import tempfile
 import weakref
+from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from typing import Any
@@ -81,13 +82,13 @@ def open_frame(data: Any) -> Reader:
 
 def _check_names(frame: Any) -> None:
     """Refuse a frame with two columns of one name, which cannot be handed over."""
-    names = [str(name) for name in frame.columns]
-    twice = next((name for name in names if names.count(name) > 1), None)
-    if twice is not None:
-        raise InputError(
-            "DATA", "name each column once", f"{names.count(twice)} columns are called '{twice}'",
-            "rename all but one",
-        )  # fmt: skip
+    names = Counter(str(name) for name in getattr(frame, "columns", ()))
+    for name, times in names.most_common(1):
+        if times > 1:
+            raise InputError(
+                "DATA", "name each column once", f"{times} columns are called '{name}'",
+                "rename all but one",
+            )  # fmt: skip
 
 
 @contextmanager

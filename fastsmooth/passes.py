@@ -279,7 +279,7 @@ def check_sizes(total: Floats, rows: int, columns: Columns) -> None:
     counted = float(sums[8]) if weighted else precision
     if columns.count is not None and not rows * (1.0 - 1e-9) <= counted <= rows * _LARGEST:
         raise InputError(
-            "--count", f"hold numbers of equal rows, on average between 1 and {_LARGEST:.0e}",
+            "--count", "hold numbers of equal rows, on average between 1 and 1e30",
             f"the mean of '{columns.count}' is {counted / rows:.3g}",
             "name it with --weight if only its ratios matter",
         )  # fmt: skip
@@ -288,21 +288,21 @@ def check_sizes(total: Floats, rows: int, columns: Columns) -> None:
     if weighted and not 1.0 / _LARGEST <= mean <= _LARGEST:
         size = "larger" if mean > 1.0 else "smaller"
         raise InputError(
-            "--weight", f"lie between {1.0 / _LARGEST:.0e} and {_LARGEST:.0e} on average",
+            "--weight", "lie between 1e-30 and 1e30 on average",
             f"the mean of '{columns.weight}' is {size}",
             "multiply it by a constant, because only ratios matter, or leave far values out with "
-            + where_option(f"{sql_name(str(columns.weight))} < {_LARGEST:.0e}"),
+            + where_option(f"{sql_name(str(columns.weight))} < 1e30"),
         )  # fmt: skip
     mean_square = float(sums[6]) / precision
-    if not (mean_square < _LARGEST_Y**2 and np.isfinite(total).all()):
+    if not (mean_square * rows < _LARGEST_Y**2 and np.isfinite(total).all()):
         raise InputError(
-            "--y", f"stay below {_LARGEST_Y:.0e} in size", f"'{columns.y}' goes beyond it",
+            "--y", "stay below 1e70 in size", f"'{columns.y}' goes beyond it",
             "leave such rows out with "
-            + where_option(f"ABS({sql_name(columns.y)}) < {_LARGEST_Y:.0e}"),
+            + where_option(f"ABS({sql_name(columns.y)}) < 1e70"),
         )  # fmt: skip
     if mean_square < _LARGEST_Y**-2 and total[:, 3].any():
         raise InputError(
-            "--y", f"differ by more than {1.0 / _LARGEST_Y:.0e}",
+            "--y", "differ by more than 1e-70",
             f"values of '{columns.y}' differ by less", "write it in a smaller unit",
         )  # fmt: skip
 

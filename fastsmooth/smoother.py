@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 _LEAST_WINDOW = 1e-6
 # Rows that spread by less than this many bins (standard deviation) carry no slope.
 _LEAST_SPREAD_BINS = 1.0 / 16.0
+# Over a window of so many ranges every kernel is flat to rounding: wider ones change nothing.
+_WIDEST_RANGES = 1e6
 
 
 @dataclass(frozen=True)
@@ -120,6 +122,11 @@ def least_spread(bandwidth_bins: float) -> float:
     return min((_LEAST_SPREAD_BINS / bandwidth_bins) ** 2, 1e-2)
 
 
+def width_in_bins(bandwidth: float, level: Level) -> float:
+    """Return a bandwidth in bins of the level, cut where all wider ones fit the same line."""
+    return min(bandwidth / level.width, _WIDEST_RANGES * level.bins)
+
+
 def fit_level(level: Level, shape: Shape, bandwidth: float, empty: float) -> Fits:
     """Fit both estimators at the bin centres of a level.
 
@@ -136,7 +143,7 @@ def fit_level(level: Level, shape: Shape, bandwidth: float, empty: float) -> Fit
     """
     from fastsmooth.kernels import localfit
 
-    h = bandwidth / level.width
+    h = width_in_bins(bandwidth, level)
     s = kernel_sums(level.first[0:3], shape, h, 3, squared=False)
     t = kernel_sums(level.response, shape, h, 2, squared=False)
     out = np.empty((6, level.bins))
@@ -224,7 +231,7 @@ def left_out_fold_scores(
     """
     from fastsmooth.kernels import localfit
 
-    folds, h = level.folds.shape[0], bandwidth / level.width
+    folds, h = level.folds.shape[0], width_in_bins(bandwidth, level)
     s, t = np.empty((folds, 3, level.bins)), np.empty((folds, 2, level.bins))
     for fold in range(folds):
         sums = level.folds[fold]

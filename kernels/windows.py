@@ -191,9 +191,7 @@ def _add_squares(repeats, variance, degree, first, count, terms, basis, totals):
     types.int64(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.float64, types.int64,
                 types.int64, types.int64, WRITE_2D, WRITE_2D, WRITE_1D)
 )  # fmt: skip
-def _fit_window(
-    x, y, weight, coefficients, place, bandwidth, low, high, degree, terms, basis, out
-):
+def _fit_window(x, y, weight, coefficients, place, bandwidth, low, high, degree, terms, basis, out):
     """Local polynomial at a place from the rows low to high, summed directly about their mean.
 
     Puts value, slope (per unit of x) and K(0) a into out[0:3]. Returns the degree reached: one
@@ -245,9 +243,7 @@ def _fit_window(
     types.void(READ_1D, READ_1D, READ_1D, READ_1D, READ_1D, READ_1D, READ_1D, types.float64,
                types.int64, WRITE_2D)
 )  # fmt: skip
-def fit_points(
-    points, x, y, weight, repeats, variance, coefficients, bandwidth, degree, out
-):
+def fit_points(points, x, y, weight, repeats, variance, coefficients, bandwidth, degree, out):
     """Local polynomial at any points, each window summed directly: meant for some hundred points.
 
     Parameters: `points` (p,); `repeats` (n,) c, or (0,) when all are 1; `variance` (n,) of one
@@ -332,9 +328,7 @@ def _fit_slots(sums, at_zero, per_unit, count, fits):
     types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
                WRITE_2D, WRITE_2D, WRITE_1D, WRITE_2D)
 )  # fmt: skip
-def _refit_slots(
-    x, y, weight, coefficients, bandwidth, first, count, terms, basis, fit, fits
-):
+def _refit_slots(x, y, weight, coefficients, bandwidth, first, count, terms, basis, fit, fits):
     """Fit the windows that look poor once more, directly; rows at one x share their window."""
     former = -1
     for k in range(count):

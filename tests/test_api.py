@@ -233,7 +233,7 @@ def test_progress_goes_through_its_stages():
         ),
         (
             lambda: Band(least_rows=float("nan")),
-            "--least-rows must be 0 or more, but it is nan; leave it out.",
+            "--least-rows must be a finite number, 0 or more, but it is nan; leave it out.",
         ),
         (
             lambda: Band(points=1),
@@ -267,10 +267,24 @@ def test_settings_are_checked_when_they_are_made(build, text):
             "--bandwidth must be a factor above 1 with --scale log, but it is 1; write 1.2 for "
             "windows that reach 20 percent up.",
         ),
-        ("wide", "linear", "a value of x must be a number, but 'wide' was given; write a number."),
+        ("wide", "linear", "--bandwidth must be a number, but 'wide' was given; write a number."),
+        (
+            [2.0], "linear",
+            "--bandwidth must be a finite number, but [2.0] was given; write a number.",
+        ),
+        (
+            1e-300, "linear",
+            "--bandwidth must be comparable with the range of x, but it is below 1e-12 of it; "
+            "leave it out, or give a width that a picture could show.",
+        ),
+        (
+            1.7e308, "linear",
+            "--bandwidth must be comparable with the range of x, but it is too wide to be counted "
+            "in bins; leave it out, or give a width that a picture could show.",
+        ),
         (
             float("nan"), "linear",
-            "a value of x must be a finite number, but nan was given; write a number.",
+            "--bandwidth must be a finite number, but nan was given; write a number.",
         ),
     ],
 )  # fmt: skip
@@ -285,7 +299,64 @@ def test_points_that_mean_nothing_are_refused():
         "--at must be positive with --scale log, but it holds -1; leave it out."
     )
     assert refused(band=Band(at=(float("inf"),))) == (
-        "a value of x must be a finite number, but inf was given; write a number."
+        "--at must be a finite number, but inf was given; write a number."
+    )
+
+
+@pytest.mark.parametrize("far", [1e300, -1.7e308])
+def test_points_far_beyond_the_rows_are_outside_and_disturb_no_other(far):
+    smoothing = Smoothing(bandwidth=2.0, widths=8)
+    made = make_curve((X, Y), "x", "y", smoothing=smoothing, band=Band(at=(10.0, far)))
+    plain = make_curve((X, Y), "x", "y", smoothing=smoothing, band=Band(at=(10.0,)))
+    near = made.x.tolist().index(10.0)
+    assert made.statuses[1 - near] == "outside"
+    assert made.statuses[near] == "ok"
+    assert (made.estimate[near], made.upper[near]) == (plain.estimate[0], plain.upper[0])
+
+
+@pytest.mark.parametrize("kernel", ["biweight", "uniform", "gaussian"])
+@pytest.mark.parametrize("width", [1e9, 1e300])
+def test_a_width_far_beyond_the_range_is_a_straight_line(kernel, width):
+    smoothing = Smoothing(kernel=kernel, bandwidth=width, widths=8)
+    made = make_curve((X, Y), "x", "y", smoothing=smoothing, band=Band(bias="ignored"))
+    slope, start = np.polyfit(X, Y, 1)
+    assert made.estimate == pytest.approx(start + slope * made.x, rel=1e-8)
+    assert made.slope == pytest.approx(np.full(256, slope), rel=1e-8)
+    assert np.isfinite(made.upper).all()
+    assert set(made.statuses) == {"edge"}
+    assert made.bandwidth == made.trace["settings"]["bandwidth"] == width
+
+
+# Sizes.
+
+
+@pytest.mark.parametrize("power", [-200, 200])
+def test_the_unit_of_y_changes_nothing_but_the_unit(power):
+    smoothing = Smoothing(widths=8)
+    made = make_curve((X, np.ldexp(Y, power)), "x", "y", smoothing=smoothing)
+    plain = make_curve((X, Y), "x", "y", smoothing=smoothing)
+    assert made.bandwidth == plain.bandwidth
+    for name in ("estimate", "lower", "upper", "slope", "residual_sd"):
+        rescaled = np.ldexp(getattr(made, name), -power)
+        assert rescaled == pytest.approx(getattr(plain, name), rel=1e-9)
+
+
+@pytest.mark.parametrize("options", [{"x": None}, {"y": 3}, {"weight": 5}, {"count": b"n"}])
+def test_columns_are_named_by_texts(options):
+    ((name, value),) = options.items()
+    remedy = "name one" if name in "xy" else "leave it out"
+    with pytest.raises(InputError) as caught:
+        make_curve(ROWS.columns(), **{"x": "wet_bulb_c", "y": "power_kw"} | options)
+    assert str(caught.value) == (
+        f"--{name} must name a column of DATA, but it is {value!r}; {remedy}."
+    )
+
+
+def test_a_group_of_settings_in_place_of_another_is_refused():
+    assert refused(reading=Smoothing()).startswith("reading= must be a Reading, but it is Smoothin")
+    assert refused(band=5) == "band= must be a Band, but it is 5; write band=Band(...)."
+    assert refused(smoothing="biweight") == (
+        "smoothing= must be a Smoothing, but it is 'biweight'; write smoothing=Smoothing(...)."
     )
 
 

@@ -1,5 +1,6 @@
 """Blocks: the same key goes to the same fold, whatever file, chunk or order it stands in."""
 
+import time
 from collections import Counter
 from datetime import UTC, date, datetime, timedelta
 from itertools import pairwise
@@ -368,3 +369,29 @@ def test_few_blocks_make_thin_points_and_a_caution():
     made = curve_of(readings(days=9, rows_per_day=200))
     assert "few blocks" in {caution.code for caution in made.cautions}
     assert set(made.status.tolist()) <= {THIN, OUTSIDE}
+
+
+def test_a_stray_time_costs_no_time_and_changes_no_other_fold():
+    hours = np.arange(50_000) * 600 + 1_700_000_000
+    stray = hours.copy()
+    stray[[7, 9]] = (-62_000_000_000, 200_000_000_000)  # the years 5 and 8307
+    dealer = Dealer(Block("t", "hour"), 16)
+    plain, _ = dealer.deal(pa.array(hours, pa.timestamp("s", "UTC")))
+    began = time.process_time()
+    folds, keys = dealer.deal(pa.array(stray, pa.timestamp("s", "UTC")))
+    assert time.process_time() - began < 1.0  # building every hour between takes minutes
+    same = np.delete(np.arange(50_000), [7, 9])
+    assert np.array_equal(folds[same], plain[same])
+    assert len(keys) == len(np.unique(hours // 3600)) + 2
+
+
+def test_nan_is_no_block_and_zero_has_no_sign():
+    folds, keys = Dealer(Block("b"), 8).deal(pa.array([0.0, -0.0, np.nan, 1.0, None]))
+    assert folds[0] == folds[1]
+    assert folds[2] == folds[4] == -1
+    assert keys == {0.0, 1.0}
+
+
+def test_nested_columns_are_no_blocks():
+    with pytest.raises(InputError, match="--block must name a column of plain values"):
+        Dealer(Block("b"), 8).deal(pa.array([[1], [2]]))

@@ -244,3 +244,11 @@ def test_cautions_are_in_the_table_and_come_back():
     x, y = clean()
     made = curve_of(np.append(x, 1e6), np.append(y, 20.0))
     assert Curve.from_table(made.table()).cautions == made.cautions
+
+
+def test_the_remedy_for_a_far_value_can_be_pasted():
+    x, y = clean()
+    y = y.copy()
+    y[:40] = -9999.0
+    made = make_curve({"x": x, "code d": y}, "x", "code d")
+    assert """--where '"code d" <> -9999'""" in text(made, "repeated far value")

@@ -198,7 +198,39 @@ REFUSALS = {
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--criterion", "leave-block-out"],
         "come with --block",
     ),
-    "missing option": (["{}", "--x", "wet_bulb_c"], "Missing option '--y'"),
+    "missing option": (
+        ["{}", "--x", "wet_bulb_c"],
+        "--y must be given, but it is missing; see 'fastsmooth curve --help'.",
+    ),
+    "missing data": (
+        ["--x", "a", "--y", "b"],
+        "DATA must be given, but it is missing; see 'fastsmooth curve --help'.",
+    ),
+    "unknown option": (
+        ["{}", "--x", "a", "--y", "b", "--fodls", "3"],
+        "--fodls must be an option of 'fastsmooth curve', but there is none of this name; use "
+        "'--folds'.",
+    ),
+    "option unlike any": (
+        ["{}", "--x", "a", "--y", "b", "--zzz"], "see 'fastsmooth curve --help'.",
+    ),
+    "no whole number": (
+        ["{}", "--x", "a", "--y", "b", "--folds", "ten"],
+        "--folds must be a whole number, but 'ten' is not a valid integer; see 'fastsmooth curve "
+        "--help'.",
+    ),
+    "no number": (
+        ["{}", "--x", "a", "--y", "b", "--level", "high"],
+        "--level must be a number, but 'high' is not a valid float; see 'fastsmooth curve --help'.",
+    ),
+    "one value of two": (
+        ["{}", "--x", "a", "--y", "b", "--range", "3"],
+        "Option '--range' requires 2 arguments; see 'fastsmooth",
+    ),
+    "width vanishes": (
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--bandwidth", "1e-300"],
+        "--bandwidth must be comparable with the range of x",
+    ),
     "suffix": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--out", "curve.xls"],
         "--out must name a file that ends in",
@@ -315,3 +347,20 @@ def test_an_own_width_is_compared_with_the_choice(plant, capsys):
     assert code == 0
     assert "20 given" in told
     assert "lies outside the flat zone" in told
+
+
+def test_a_command_that_is_none_is_answered_with_a_near_one(capsys):
+    assert run(capsys, "curv") == (
+        2, "", "fastsmooth: No such command 'curv'. Did you mean 'curve'?\n",
+    )  # fmt: skip
+
+
+def test_a_point_far_away_prints_no_warning(plant):
+    """In a process of its own, where a warning would be printed and not raised."""
+    done = subprocess.run(
+        [sys.executable, "-m", "fastsmooth", "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw",
+         "--at", "10,1e300"],
+        capture_output=True, text=True, check=True,
+    )  # fmt: skip
+    assert done.stderr == ""
+    assert "1 outside" in done.stdout

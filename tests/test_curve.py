@@ -9,6 +9,7 @@ import pytest
 
 from fastsmooth import Band, Curve, InputError, Reading, Smoothing, make_curve
 from fastsmooth.curve import CURVE_KEY, STATUSES
+from fastsmooth.errors import WriteError
 from tests import cases
 
 COLUMNS = (
@@ -216,3 +217,95 @@ def test_a_curve_does_not_change(curve):
     with pytest.raises(AttributeError):
         curve.bandwidth = 3.0
     assert replace(curve, bandwidth=3.0).bandwidth == 3.0
+
+
+# Places in the column's own terms.
+
+
+@pytest.fixture(scope="module")
+def curve_over_time():
+    stamps = np.datetime64("2026-01-01", "us") + np.arange(3000) * np.timedelta64(600, "s")
+    table = pa.table({
+        "logged_at": pa.array(stamps).cast(pa.timestamp("us", "Europe/Madrid")),
+        "power_kw": 30.0 + np.sin(np.arange(3000) / 300.0),
+    })  # fmt: skip
+    return make_curve(table, "logged_at", "power_kw", smoothing=Smoothing(widths=8))
+
+
+def test_times_are_read_in_the_columns_zone(curve_over_time):
+    """Noon in Madrid is 11 o'clock in the winter of UTC, 10 days after the origin."""
+    from datetime import UTC, datetime
+
+    told = curve_over_time.at([10 * 86_400.0 + 11 * 3600.0])
+    assert np.isfinite(told).all()
+    noon_utc = datetime(2026, 1, 11, 11, 0, tzinfo=UTC)
+    for same in (
+        "2026-01-11 12:00",
+        ["2026-01-11T12:00"],
+        np.array(["2026-01-11T12:00"], "M8[s]"),
+        np.array(["2026-01-11T12"], "M8[h]"),
+        np.datetime64("2026-01-11T12:00", "ns"),
+        noon_utc,
+        [noon_utc],
+        pa.array([noon_utc], pa.timestamp("us", "UTC")),
+        pa.array([noon_utc], pa.timestamp("us", "Europe/Madrid")),
+    ):
+        assert curve_over_time.at(same).tolist() == told.tolist()
+
+
+def test_a_curve_reads_its_own_table(curve_over_time):
+    told = curve_over_time.at(curve_over_time.table()["x"])
+    assert told == pytest.approx(curve_over_time.estimate, rel=1e-9, nan_ok=True)
+
+
+@pytest.mark.parametrize(
+    ("place", "shown"),
+    [("soon", "'soon'"), (np.datetime64("NaT"), "'NaT'"), (None, "None"), (True, "True")],
+)
+def test_what_is_no_time_is_refused(curve_over_time, place, shown):
+    with pytest.raises(InputError) as caught:
+        curve_over_time.at([place])
+    assert str(caught.value).startswith(
+        f"a value of x must be a timestamp, but {shown} was given; write it as in 2026-01-31"
+    )
+
+
+@pytest.mark.parametrize(
+    "place",
+    [np.datetime64("2026"), np.timedelta64(5, "ns"), np.timedelta64(5, "s"), "warm", True, 1j],
+)
+def test_what_is_no_number_is_refused_on_a_number_axis(curve, place):
+    with pytest.raises(InputError, match=r"^a value of x must be a (finite )?number, but "):
+        curve.at([place])
+
+
+def test_numbers_as_texts_are_numbers(curve):
+    assert curve.at(["10", "12.5"]).tolist() == curve.at([10.0, 12.5]).tolist()
+
+
+def test_a_span_of_nanoseconds_is_no_number_of_seconds():
+    spans = np.arange(500) * np.timedelta64(1, "ms")
+    data = {"since_start": spans, "power_kw": np.arange(500.0)}
+    made = make_curve(data, "since_start", "power_kw", smoothing=Smoothing(widths=8))
+    assert made.at(np.array([250_000_000], "m8[ns]")).tolist() == made.at([0.25]).tolist()
+
+
+def test_curves_are_told_apart_by_identity(curve):
+    assert curve == curve  # noqa: PLR0124 - arrays would make this an error
+    assert curve != make()
+    assert len({curve, curve}) == 1
+
+
+@pytest.mark.parametrize(("method", "option"), [("save", "--out"), ("plot", "--plot")])
+def test_a_result_goes_to_a_path(curve, method, option):
+    with pytest.raises(WriteError) as caught:
+        getattr(curve, method)(None)
+    assert str(caught.value) == f"{option} must name a file, but it is None; give a path."
+
+
+def test_a_bias_of_nothing_has_no_sign(curve):
+    from fastsmooth.summary import curve_lines
+
+    fit = {**curve.trace["fit"], "nmbe": -1e-17}
+    lines = curve_lines(replace(curve, trace={**curve.trace, "fit": fit}))
+    assert next(line for line in lines if line.startswith("fit ")).endswith("NMBE 0 %")

@@ -245,7 +245,7 @@ def test_negative_and_infinite_weights_are_refused(role, bad):
     text = refused(arrays(np.arange(10.0), rows=factor), **{role: "rows"})
     assert text == (
         f"--{role} must name a column of positive finite numbers, but 'rows' is negative or "
-        "infinite in 1 rows; leave those rows out with --where 'rows > 0'."
+        'infinite in 1 rows; leave those rows out with --where \'"rows" > 0 AND "rows" < 1e30\'.'
     )
 
 
@@ -283,13 +283,60 @@ def test_nothing_left_is_refused_with_the_counts():
     )
 
 
-@pytest.mark.parametrize("far", [1e200, -1e160])
-def test_squares_that_overflow_are_refused(thousand, far):
+@pytest.mark.parametrize("far", [1e300, -1e160, 1e75])
+def test_powers_that_overflow_are_refused(thousand, far):
     y = np.zeros(thousand.size)
     y[17] = far
     assert refused(arrays(thousand, y)) == (
-        "--y must stay below 1e150 in size, but squares of 'power_kw' overflow; leave such rows "
-        "out with --where 'power_kw < 1e150'."
+        "--y must stay below 1e70 in size, but 'power_kw' goes beyond it; leave such rows "
+        "out with --where 'ABS(power_kw) < 1e70'."
+    )
+    assert counted_of(arrays(thousand, y), where="ABS(power_kw) < 1e70").table.tally.filtered == 1
+
+
+@pytest.mark.parametrize("unit", [1e-300, 1e-160, 1e-80])
+def test_powers_that_underflow_are_refused(thousand, unit):
+    assert refused(arrays(thousand, unit * np.sin(thousand))) == (
+        "--y must differ by more than 1e-70, but values of 'power_kw' differ by less; write it in "
+        "a smaller unit."
+    )
+
+
+@pytest.mark.parametrize("value", [0.0, 3.7, 1e-200])
+def test_a_constant_y_is_no_underflow(thousand, value):
+    assert counted_of(arrays(thousand, np.full(thousand.size, value))).table.tally.used == 4000
+
+
+@pytest.mark.parametrize("role", ["weight", "count", "y"])
+def test_what_overflows_is_named(thousand, role):
+    columns = {"weight": np.ones(4000), "count": np.full(4000, 2.0), "y": np.sin(thousand)}
+    columns[role] = np.where(np.arange(4000) % 2 == 0, 1e299, columns[role])
+    data = {"wet_bulb_c": thousand, "power_kw": columns["y"], "sharpness": columns["weight"],
+            "n": columns["count"]}  # fmt: skip
+    told = refused(data, weight="sharpness", count="n")
+    assert told.startswith(f"--{role} must ")
+    assert "sharpness" not in told or role == "weight"
+
+
+@pytest.mark.parametrize(("value", "size"), [(1e299, "larger"), (1e40, "larger"), (1e-200, "smal")])
+def test_weights_whose_powers_no_float_holds_are_refused(thousand, value, size):
+    data = arrays(thousand, np.sin(thousand), rows=np.full(thousand.size, value))
+    told = refused(data, weight="rows")
+    assert told.startswith(
+        f"--weight must lie between 1e-30 and 1e30 on average, but the mean of 'rows' is {size}"
+    )
+    assert told.endswith(
+        "; multiply it by a constant, because only ratios matter, or leave far values out with "
+        "--where '\"rows\" < 1e30'."
+    )
+
+
+@pytest.mark.parametrize(("value", "mean"), [(1e299, "1e+299"), (0.5, "0.5")])
+def test_counts_that_are_no_counts_are_refused(thousand, value, mean):
+    data = arrays(thousand, np.sin(thousand), rows=np.full(thousand.size, value))
+    assert refused(data, count="rows") == (
+        "--count must hold numbers of equal rows, on average between 1 and 1e30, but the mean of "
+        f"'rows' is {mean}; name it with --weight if only its ratios matter."
     )
 
 

@@ -1059,3 +1059,16 @@ def test_weird_column_of_one_value_is_drawn():
     curve = build(x, cooling(x), 3.0, points=[1e6])
     assert curve.status[0] == OUTSIDE
     assert covered(figure(curve)) == []
+
+
+def test_names_with_line_breaks_are_drawn_with_spaces():
+    """A missing glyph is a warning, and warnings are errors."""
+    curve = build(valley)
+    settings = {**curve.trace["settings"], "x": "wet\nbulb\x07", "y": "power\tkw"}
+    caution = Caution("odd", "The column power\x07kw is odd. Rename it.")
+    made = figure(replace(curve, trace={**curve.trace, "settings": settings}, cautions=(caution,)))
+    made.canvas.draw()
+    drawn = " ".join(text.get_text() for text in made.texts)
+    assert "power kw" in drawn
+    assert "wet bulb" in drawn
+    assert drawn.isprintable()

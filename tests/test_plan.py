@@ -212,10 +212,15 @@ def test_constant_x_is_refused(value):
     )
 
 
-@pytest.mark.parametrize("bounds", [(-1.7e308, 1.7e308), (0.0, 1e-310)])
-def test_a_range_that_has_no_bins_is_refused(bounds):
+def test_a_range_that_has_no_bins_is_refused():
     with pytest.raises(InputError, match=r"^--x must name a column that varies"):
-        planned(np.array([0.0, 1.0]), bounds=bounds)
+        planned(np.array([0.0, 1.0]), bounds=(0.0, 1e-310))
+    with pytest.raises(InputError) as caught:
+        planned(np.array([0.0, 1.0]), bounds=(-1.7e308, 1.7e308))
+    assert str(caught.value) == (
+        "--x must lie within a range of 1e308, but 'wet_bulb_c' lies between -1.7e+308 and "
+        "1.7e+308; leave the far values out with --range."
+    )
 
 
 def test_readings_close_together_far_from_zero_are_not_constant():
@@ -227,6 +232,21 @@ def test_readings_close_together_far_from_zero_are_not_constant():
     ("given", "scale", "text"),
     [
         ((3, 1), "linear", "--range must ascend, but 3 to 1 does not; give the lower end first."),
+        (
+            ("-1e308", "1e308"), "linear",
+            "--range must span a width that can be cut into bins, but -1e308 to 1e308 is too "
+            "wide; leave it out, or give values that occur.",
+        ),
+        (
+            (0, 1e-310), "linear",
+            "--range must span a width that can be cut into bins, but 0 to 1e-310 is too narrow; "
+            "leave it out, or give values that occur.",
+        ),
+        (
+            (0, float("inf")), "linear",
+            "--range must be a finite number, but inf was given; write a number.",
+        ),
+        (("a", 5), "linear", "--range must be a number, but 'a' was given; write a number."),
         ((2, 2), "linear", "--range must ascend, but 2 to 2 does not; give the lower end first."),
         (
             ("-1", "5"), "log",

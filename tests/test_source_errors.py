@@ -57,7 +57,20 @@ def test_missing_folder_names_near_ones_of_the_last_that_exists(tmp_path):
         f"'{tmp_path}/plant/2026/a.parquet' does not exist; use 'plants' in '{tmp_path}'."
     )
     assert refusal(tmp_path / "plants" / "a.parquet").endswith(
-        f"does not exist; there is nothing to choose from in '{tmp_path}/plants'."
+        f"does not exist; there are no data files in '{tmp_path}/plants'."
+    )
+
+
+def test_what_is_no_data_is_not_suggested(tmp_path):
+    for name in ("readings.py", "readings.png", "readings.md"):
+        (tmp_path / name).touch()
+    assert refusal(tmp_path / "readings.parquet").endswith(
+        f"does not exist; there are no data files in '{tmp_path}'."
+    )
+    (tmp_path / "reading.csv").touch()
+    (tmp_path / "readings").mkdir()
+    assert refusal(tmp_path / "readings.parquet").endswith(
+        f"does not exist; use 'readings' or 'reading.csv' in '{tmp_path}'."
     )
 
 
@@ -371,3 +384,31 @@ def test_near_names_are_names(name, names):
     assert len(near) == len(set(near)) <= 3
     if name in names:
         assert name in near or sum(n.casefold() == name.casefold() for n in set(names)) > 3
+
+
+def test_a_frame_with_two_columns_of_one_name():
+    pandas = pytest.importorskip("pandas")
+    frame = pandas.DataFrame([[1.0, 2.0, 3.0]], columns=["wet_bulb_c", "power_kw", "power_kw"])
+    assert refusal(frame) == (
+        "DATA must name each column once, but 2 columns are called 'power_kw'; rename all but one."
+    )
+
+
+@pytest.mark.parametrize("bad", [0, 500_000])
+def test_a_query_that_fails_in_the_stream(bad):
+    import duckdb
+
+    relation = duckdb.connect().sql(
+        f"SELECT range::DOUBLE AS wet_bulb_c, CASE WHEN range >= {bad} THEN error('no such sensor')"
+        "::DOUBLE ELSE 1.0 END AS power_kw FROM range(600000)"
+    )
+    with pytest.raises(ReadError) as caught, open_source(relation, XY) as source:
+        for task in source.tasks:
+            for _ in source.chunks(task):
+                pass
+    told = str(caught.value)
+    assert told.startswith("DATA must deliver every row, but the stream broke off (")
+    assert told.endswith(
+        "Invalid Input Error: no such sensor); check what it holds, or write it to a Parquet file "
+        "and name that."
+    )

@@ -333,3 +333,11 @@ def test_filter_is_usable_by_data_sets(tmp_path):
     data = ds.dataset(tmp_path / "a.parquet")
     condition = parse_where("power_kw > 5", data.schema)
     assert data.to_table(filter=condition.expression)["power_kw"].to_pylist() == [6.0]
+
+
+def test_suggested_names_can_be_pasted():
+    schema = pa.schema([("code d", pa.float64()), ("order", pa.float64())])
+    with pytest.raises(InputError, match="""'code' is no column of DATA; use '"code d"'"""):
+        parse_where("code > 1", schema)
+    with pytest.raises(InputError, match='write the column alone, as in "order" > 5'):
+        parse_where('readings."order" > 1', schema)

@@ -107,7 +107,18 @@ class Shown(NamedTuple):
 def named(name: str, unit: str, note: str = "") -> str:
     """Write a column with its unit, and what its ticks have in common."""
     text = f"{name} ({unit})" if unit else name
-    return f"{text}, {note}" if note else text
+    return printable(f"{text}, {note}" if note else text)
+
+
+def printable(text: str) -> str:
+    """Put spaces for line breaks and other characters that no font draws.
+
+    Examples
+    --------
+    >>> printable("power\\nkw")
+    'power kw'
+    """
+    return "".join(one if one.isprintable() else " " for one in text)
 
 
 def short_number(value: float) -> str:

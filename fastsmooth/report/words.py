@@ -7,7 +7,7 @@ import re
 import numpy as np
 
 from fastsmooth.curve import EDGE, FEWEST_FOLDS, OUTSIDE, THIN, Curve
-from fastsmooth.report.scales import named
+from fastsmooth.report.scales import named, printable
 
 HOW_TO_READ_CRITERIA = (
     "Lower is better. Bars: the flat zone, within one standard error of the best."
@@ -122,6 +122,8 @@ def cautions(curve: Curve) -> tuple[str, list[str], str]:
     count = len(curve.cautions)
     if not count:
         return "", [], ""
-    sentences = [first_sentence(caution.text) for caution in curve.cautions[:MOST_CAUTIONS]]
+    sentences = [
+        printable(first_sentence(caution.text)) for caution in curve.cautions[:MOST_CAUTIONS]
+    ]
     rest = f"and {count - MOST_CAUTIONS} more" if count > MOST_CAUTIONS else ""
     return f"{count} caution{'s' if count > 1 else ''}", sentences, rest
