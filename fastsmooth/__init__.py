@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from fastsmooth.api import make_curve, search_bandwidth
+    from fastsmooth.blocks import Block
     from fastsmooth.curve import Caution, Curve
     from fastsmooth.errors import FastsmoothError, InputError, ReadError, WriteError
     from fastsmooth.files_out import load_curve
@@ -23,6 +24,7 @@ _HOMES = {
     "Reading": "settings",
     "Smoothing": "settings",
     "Band": "settings",
+    "Block": "blocks",
     "FastsmoothError": "errors",
     "InputError": "errors",
     "ReadError": "errors",
@@ -31,6 +33,7 @@ _HOMES = {
 
 __all__ = [
     "Band",
+    "Block",
     "Caution",
     "Curve",
     "FastsmoothError",

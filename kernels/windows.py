@@ -22,7 +22,7 @@ K(u) = sum_q coefficients[q] |u|^q; `bandwidth` h > 0, with 1 / h finite.
 
 import numpy as np
 
-from .cells import SLOTS, fill_sums, first_beyond, first_within, make_work
+from .cells import SLOTS, fill_sums, make_work
 from .compiled import (
     READ_1D,
     READ_2D,
@@ -33,6 +33,7 @@ from .compiled import (
     sum_kernel,
     types,
 )
+from .edges import first_beyond, first_within
 from .localfit import LOST, RESIDUAL, SCORE, SLOPE, TRACE, UNIT_LEVERAGE, VALUE
 
 # Rows of the output of `fit_windows`: VALUE, SLOPE, UNIT_LEVERAGE of the local constant, then

@@ -224,7 +224,7 @@ REFUSALS = {
         "--level must be a number, but 'high' is not a valid float; see 'fastsmooth curve --help'.",
     ),
     "one value of two": (
-        ["{}", "--x", "a", "--y", "b", "--range", "3"],
+        ["{}", "--x", "a", "--y", "b", "--out", "curve.parquet", "--range", "3"],
         "Option '--range' requires 2 arguments; see 'fastsmooth",
     ),
     "width vanishes": (
@@ -355,12 +355,10 @@ def test_a_command_that_is_none_is_answered_with_a_near_one(capsys):
     )  # fmt: skip
 
 
-def test_a_point_far_away_prints_no_warning(plant):
-    """In a process of its own, where a warning would be printed and not raised."""
-    done = subprocess.run(
-        [sys.executable, "-m", "fastsmooth", "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw",
-         "--at", "10,1e300"],
-        capture_output=True, text=True, check=True,
-    )  # fmt: skip
-    assert done.stderr == ""
-    assert "1 outside" in done.stdout
+def test_a_point_far_away_is_outside_without_a_warning(plant, capsys):
+    """Warnings are errors here."""
+    code, told, complaint = run(
+        capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", "--at", "10,1e300"
+    )
+    assert (code, complaint) == (0, "")
+    assert "1 outside" in told

@@ -1063,7 +1063,7 @@ def test_weird_column_of_one_value_is_drawn():
 
 def test_names_with_line_breaks_are_drawn_with_spaces():
     """A missing glyph is a warning, and warnings are errors."""
-    curve = build(valley)
+    curve = CASES["plain"]()
     settings = {**curve.trace["settings"], "x": "wet\nbulb\x07", "y": "power\tkw"}
     caution = Caution("odd", "The column power\x07kw is odd. Rename it.")
     made = figure(replace(curve, trace={**curve.trace, "settings": settings}, cautions=(caution,)))

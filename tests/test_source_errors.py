@@ -67,10 +67,13 @@ def test_what_is_no_data_is_not_suggested(tmp_path):
     assert refusal(tmp_path / "readings.parquet").endswith(
         f"does not exist; there are no data files in '{tmp_path}'."
     )
-    (tmp_path / "reading.csv").touch()
+    (tmp_path / "power.csv").touch()
+    assert refusal(tmp_path / "readings.parquet").endswith(
+        f"use one of 'power.csv' in '{tmp_path}'."
+    )
     (tmp_path / "readings").mkdir()
     assert refusal(tmp_path / "readings.parquet").endswith(
-        f"does not exist; use 'readings' or 'reading.csv' in '{tmp_path}'."
+        f"does not exist; use 'readings' in '{tmp_path}'."
     )
 
 
@@ -387,7 +390,8 @@ def test_near_names_are_names(name, names):
 
 
 def test_a_frame_with_two_columns_of_one_name():
-    pandas = pytest.importorskip("pandas")
+    import pandas
+
     frame = pandas.DataFrame([[1.0, 2.0, 3.0]], columns=["wet_bulb_c", "power_kw", "power_kw"])
     assert refusal(frame) == (
         "DATA must name each column once, but 2 columns are called 'power_kw'; rename all but one."
@@ -402,10 +406,13 @@ def test_a_query_that_fails_in_the_stream(bad):
         f"SELECT range::DOUBLE AS wet_bulb_c, CASE WHEN range >= {bad} THEN error('no such sensor')"
         "::DOUBLE ELSE 1.0 END AS power_kw FROM range(600000)"
     )
-    with pytest.raises(ReadError) as caught, open_source(relation, XY) as source:
-        for task in source.tasks:
-            for _ in source.chunks(task):
-                pass
+
+    def read():
+        with open_source(relation, XY) as source:
+            gather(source)
+
+    with pytest.raises(ReadError) as caught:
+        read()
     told = str(caught.value)
     assert told.startswith("DATA must deliver every row, but the stream broke off (")
     assert told.endswith(

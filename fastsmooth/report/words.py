@@ -6,7 +6,7 @@ import re
 
 import numpy as np
 
-from fastsmooth.curve import EDGE, FEWEST_FOLDS, OUTSIDE, THIN, Curve
+from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve
 from fastsmooth.report.scales import named, printable
 
 HOW_TO_READ_CRITERIA = (
@@ -95,7 +95,7 @@ def reading_notes(curve: Curve, coarse_cells: bool, unsampled: bool) -> str:
         notes.append("Dotted (edge): the window is cut off by the end of the data.")
     if (curve.status == THIN).any():
         least = curve.settings["least_rows"]
-        folds = f", or fewer than {FEWEST_FOLDS} folds of blocks" if curve.settings["block"] else ""
+        folds = ", or too few folds of blocks" if curve.settings["block"] else ""
         notes.append(f"Dashed (thin): fewer than {least:g} effective rows{folds}.")
     if coarse_cells:
         notes.append("Rows are not shown: far values of y make their cells too coarse.")
