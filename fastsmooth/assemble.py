@@ -130,7 +130,7 @@ def assemble(
             grid = np.linspace(low, high, _SUPPORT_POINTS)
             on_grid = evaluate(grid, replace(band, kind="pointwise"))
         marks = find_landmarks(
-            _stretches(grid, on_grid), level, shape, bandwidth / level.width,
+            _stretches(grid, on_grid), level, shape, fits.bandwidth_bins,
             estimator=estimator, reference=plan.reference, confidence=band.level,
             crossings=band.crossings,
         )  # fmt: skip

@@ -24,6 +24,7 @@ _MOST_POINTS = 600
 _REAL_SWING = 3.0
 # Without a fold, a place is looked for within so many bandwidths of where all data have it.
 _SEARCHED_BANDWIDTHS = 3.0
+_SAME_SLOPE = 1e-6
 
 
 class Landmark(NamedTuple):
@@ -102,8 +103,10 @@ def find_landmarks(
             continue
         if not np.isfinite(here.slope[0]).any():
             continue
-        top = float(np.nanmax(np.abs(here.slope[0])))
-        if steepest is None or top > steepest[0]:
+        top, least = (float(f(np.abs(here.slope[0]))) for f in (np.nanmax, np.nanmin))
+        # A straight line is equally steep everywhere.
+        bent = top - least > _SAME_SLOPE * top
+        if bent and (steepest is None or top > steepest[0]):
             steepest = (top, here)
         for place, kind in here.turning_points():
             found.append(

@@ -1072,3 +1072,14 @@ def test_names_with_line_breaks_are_drawn_with_spaces():
     assert "power kw" in drawn
     assert "wet bulb" in drawn
     assert drawn.isprintable()
+
+
+@pytest.mark.parametrize("width", [1e300, 1e-290])
+def test_a_given_width_beyond_all_searched_ones_is_told_but_not_drawn(width):
+    given = CASES["given"]()
+    settings = {**given.trace["settings"], "bandwidth": width}
+    far = figure(replace(given, bandwidth=width, trace={**given.trace, "settings": settings}))
+    far.canvas.draw()
+    assert len(find(figure(given), "given")) == 1
+    assert find(far, "given") == []
+    assert f"bandwidth {width:g}" in " ".join(texts(far))

@@ -38,6 +38,8 @@ _OTHER_WITHIN = 3.0
 _FLAT_DEPTHS = 4.0
 _ROUNDING = 1e-10
 _LINE_IN = 0.155
+# A given width so many times beyond those searched is told in words alone.
+_FAR_AWAY = 1e6
 
 
 @dataclass(frozen=True)
@@ -129,6 +131,9 @@ def draw_criteria(panel: Axes, lanes: Axes, place: Box, curve: Curve, ruler: Rul
     given = None
     if curve.settings["bandwidth"] is not None:
         given = float(_on_scale(curve, np.array([curve.bandwidth]))[0])
+        low, high = _width_ends(paths, None)
+        if paths and not low / _FAR_AWAY < given < high * _FAR_AWAY:
+            given = None  # showing it would make a point of all that was searched
     low, high = _width_ends(paths, given)
     bottom, top = valley_ends(paths)
     # Room for markers below, and for their labels above.
