@@ -136,37 +136,41 @@ class BinTable:
         """
         self.tally.add(Tally(chunk.rows, chunk.filtered, dict(chunk.refused)))
         x, y, weight, count = chunk.x, chunk.y, chunk.weight, chunk.count
-        rows = chunk.x.shape[0]
         if dealer is None:
-            plan = self.plan
-            first = row_in_task // plan.rows_per_run
-            last = (row_in_task + max(rows, 1) - 1) // plan.rows_per_run
-            runs = np.arange(first, last + 1)
-            starts = np.clip(runs * plan.rows_per_run - row_in_task, 0, rows)
-            folds = np.array([plan.fold_of_run(task_index, run) for run in runs.tolist()])
+            stretches = self._run_stretches(task_index, row_in_task, x.shape[0])
         else:
             per_row, keys = dealer.deal(chunk.extra[0])
             self.blocks = merge_keys(self.blocks, keys)
-            starts = np.concatenate(([0], np.flatnonzero(np.diff(per_row)) + 1))
-            if starts.shape[0] > max(4 * self.plan.folds, 8):
+            stretches = _stretches(per_row)
+            if len(stretches) > max(4 * self.plan.folds, 8):
                 # Blocks interleaved row by row: sorted by fold, each fold is one stretch.
                 order = np.argsort(per_row, kind="stable")
-                per_row = per_row[order]
                 x, y = x[order], y[order]
                 weight = None if weight is None else weight[order]
                 count = None if count is None else count[order]
-                starts = np.concatenate(([0], np.flatnonzero(np.diff(per_row)) + 1))
-            folds = per_row[starts] if rows else np.empty(0, np.int64)
-        stops = np.append(starts[1:], rows)
-        for fold, start, stop in zip(folds.tolist(), starts.tolist(), stops.tolist(), strict=False):
+                stretches = _stretches(per_row[order])
+        for fold, start, stop in stretches:
             if fold < 0:
                 self.tally.refuse("block null", stop - start)
-            elif start < stop:
+            else:
                 self.add_rows(
                     fold, x[start:stop], y[start:stop],
                     None if weight is None else weight[start:stop],
                     None if count is None else count[start:stop], tallied=True,
                 )  # fmt: skip
+
+    def _run_stretches(self, task_index: int, row: int, rows: int) -> list[tuple[int, int, int]]:
+        """Fold, first and last row (exclusive) of the runs in a chunk that begins at a row."""
+        # Plain integers: this is done for every chunk, and arrays of two items cost more.
+        length = self.plan.rows_per_run
+        stretches = []
+        start = 0
+        while start < rows:
+            run, within = divmod(row + start, length)
+            stop = min(rows, start + length - within)
+            stretches.append((self.plan.fold_of_run(task_index, run), start, stop))
+            start = stop
+        return stretches
 
     def add_rows(
         self,
@@ -326,6 +330,15 @@ class BinTable:
                     sums[bins[rows], slot] = table[name].to_numpy()[rows]
             made.sums[int(fold)] = sums
         return made
+
+
+def _stretches(per_row: NDArray[np.int64]) -> list[tuple[int, int, int]]:
+    """Fold, first and last row (exclusive) of each stretch of rows of one fold."""
+    if not per_row.size:
+        return []
+    starts = np.concatenate(([0], np.flatnonzero(per_row[1:] != per_row[:-1]) + 1))
+    stops = np.append(starts[1:], per_row.size)
+    return list(zip(per_row[starts].tolist(), starts.tolist(), stops.tolist(), strict=True))
 
 
 @dataclass(frozen=True)

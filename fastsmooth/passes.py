@@ -90,14 +90,18 @@ def count_pass(
     stride = max(1, (source.rows_expected or _SHOWN_ROWS * 64) // _SHOWN_ROWS)
 
     def count(parts: Iterator[tuple[Task, Iterator[Chunk]]]) -> tuple[BinTable, Floats]:
-        table, shown = BinTable(plan), []
+        table = BinTable(plan)
+        shown: tuple[list[Floats], list[Floats]] = ([], [])
         for task, chunks in parts:
             row = 0
             for chunk in chunks:
                 table.update(chunk, task.index, row, dealer)
                 row += chunk.x.shape[0]
-                shown.append(np.stack((chunk.x[::stride], chunk.y[::stride])))
-        return table, np.concatenate(shown, axis=1) if shown else np.empty((2, 0))
+                shown[0].append(chunk.x[::stride].copy())
+                shown[1].append(chunk.y[::stride].copy())
+        if not shown[0]:
+            return table, np.empty((2, 0))
+        return table, np.stack([np.concatenate(values) for values in shown])
 
     def report(rows: int) -> None:
         nonlocal done
@@ -106,7 +110,8 @@ def count_pass(
 
     total, shown = BinTable(plan), []
     groups = _groups(source.tasks, plan)
-    for part, few in source.map_groups(count, groups, reading.threads, progress=report):
+    heard = None if progress is silent else report
+    for part, few in source.map_groups(count, groups, reading.threads, progress=heard):
         total.merge(part)
         shown.append(few)
     rows = np.concatenate(shown, axis=1) if shown else np.empty((2, 0))

@@ -24,8 +24,8 @@ FOLDS = 32
 MEMORY_CAP_BYTES = 256 << 20
 _LONGEST_RUN_ROWS = 65_536
 _PILOT_NODES = 256
-_SAMPLE_TASKS = 32
-_SAMPLE_ROWS = 2048
+_SAMPLE_TASKS = 16
+_SAMPLE_ROWS = 4096
 # From this many tasks on, each task meets only a few folds, which keeps merging cheap.
 _TASKS_FOR_FEW_FOLDS = 16
 _FEW_FOLDS = 4
