@@ -19,11 +19,11 @@ import numpy as np
 import polars as pl
 import pyarrow as pa
 import pyarrow.parquet as pq
+from fastsmooth.kernels.shapes import SHAPES
 
 from bench.data import full_precision
 from bench.names import X, Y
 from fastsmooth import Band, Curve, Reading, Search, Smoothing, make_curve
-from fastsmooth.api import find_shape
 from fastsmooth.bands import Occupied, Points, estimate_noise, fit_points
 from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.passes import count_rows
@@ -241,7 +241,7 @@ def table_jobs() -> list[Job]:
     does not depend on the number of rows.
     """
     given = full_precision(SEARCH_ROWS, seed=0)
-    shape = find_shape(Smoothing().kernel)
+    shape = SHAPES[Smoothing().kernel]
     with open_source(given.columns(), Columns(X, Y)) as source:
         table = count_rows(source, Reading()).table
     assert table.plan.bins == BINS
@@ -318,7 +318,7 @@ def _evaluation(table: BinTable, pyramid: Pyramid, bandwidth: float) -> Job:
 
     On the finest level, where windows span the most bins.
     """
-    shape = find_shape(Smoothing().kernel)
+    shape = SHAPES[Smoothing().kernel]
     finest = pyramid.levels[0]
     band = Band()
     extent = (float(table.extent[0]), float(table.extent[1]))
