@@ -251,6 +251,5 @@ def _count_and_search(
         low, high = counted.table.extent.tolist()
         if (high - low) / bins > 0.8 * plan.width:
             break
-        del pyramid, found  # room for the finer tables
         counted = count_finer(source, counted, reading, bins, progress)
     return Chosen(counted, pyramid, found, shape, bandwidth, places)
