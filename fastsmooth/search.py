@@ -39,6 +39,7 @@ _COARSEST_BINS_PER_BANDWIDTH = 8
 _SHARE_SUPPORTED = 0.95
 _PLACES_PER_WINDOW = 4
 _FEWER_BINS = 4
+_FEWER_BINS_BY_FOLD = 8
 _MANY_ROWS = 1e5
 _LEAST_HEARD = 0.99
 _REFINED_BY_FOLD = 1e-2
@@ -272,7 +273,7 @@ class _Job:
         """Score every fold against the others."""
         assert self.left_out is not None
         # Few bins do: a fold's absence moves the fit far more than binning does.
-        fewer = max(4, self.shape.bins_per_bandwidth // _FEWER_BINS)
+        fewer = max(4, self.shape.bins_per_bandwidth // _FEWER_BINS_BY_FOLD)
         index = self.pyramid.level_for(bandwidth, fewer) if level is None else level
         scored = self.left_out.levels[index]
         weight = float(scored.first[0].sum())

@@ -220,4 +220,6 @@ def _times(passes: int) -> str:
 def _error_words(error: float | None) -> str:
     if error is None:
         return ""
+    if error < 1e-12:
+        return "; no binning error"
     return f"; binning error about {error:.1g} residual sd"
