@@ -199,7 +199,7 @@ def test_sums_for_every_degree(kernel, degree):
     u = (x[np.newaxis] - x[:, np.newaxis]) / h
     k = np.vectorize(SHAPES[kernel])(u)
     # Moving a power sum by up to a bandwidth multiplies its rounding by up to 2 per power.
-    close = 1e-11 * 4.0**degree
+    close = 1e-11 * 6.0**degree
     for j in range(3 * degree + 2):
         power = j if j <= 2 * degree else j - 2 * degree - 1
         terms = k * u**power * (1.0 if j <= 2 * degree else y)
