@@ -57,6 +57,7 @@ from .powersums import (
     copy_weights,
     join,
     join_counts,
+    kernel_profile,
     load_segments,
     scan_four,
     scan_one,
@@ -83,10 +84,12 @@ class Work(NamedTuple):
     places: np.ndarray  # (3 + arms, slots)
     centres: np.ndarray  # (arms + 1, slots) each segment's centre; last row: the cell's
     terms: np.ndarray  # (4, columns) v, w v^q, w y v^q, w of the rows in the segments
-    carries: np.ndarray  # (arms, blocks, rows) power sums up to each block; see `_start_arm`
+    carries: np.ndarray  # (arms, blocks, rows) power sums of an arm's first blocks
     tables: np.ndarray  # (arms, rows, columns) growing power sums over each segment
     moments: np.ndarray  # (pairs of arms, rows, slots) power sums about the slot's centre
-    sums: np.ndarray  # (3 degree + 4, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h, sum w
+    # (3 degree + 5, slots) S_0, S_1, ..., T_0, T_1, ..., (centre - x) / h; then, where windows are
+    # not summed row by row, sum w and sum w u^2, else zeros.
+    sums: np.ndarray
 
 
 _WORK_TYPES = (
@@ -223,7 +226,7 @@ def make_work(n, coefficients, degree):
         np.empty((count, n // BLOCK + 2, rows)),
         np.zeros((count, rows, columns)),
         np.zeros((sides, rows, slots)),
-        np.zeros((3 * degree + 4, slots)),
+        np.zeros((3 * degree + 5, slots)),
     )
 
 
@@ -245,14 +248,7 @@ def fill_sums(
     n = x.shape[0]
     weighted = weight.shape[0] > 0
     if all_short(x, bandwidth, _REACH, first, count):
-        # Every kernel is at most a cubic in |u|, u^2 or |u|^3.
-        power = 1
-        while power < top and coefficients[power] == 0.0:
-            power += 1
-        c0 = coefficients[0]
-        c1 = coefficients[power] if top >= power else 0.0
-        c2 = coefficients[2 * power] if top >= 2 * power else 0.0
-        c3 = coefficients[3 * power] if top >= 3 * power else 0.0
+        power, times = kernel_profile(coefficients)
         for begin in range(0, count, CHUNK):
             end = min(count, begin + CHUNK)
             met = 1
@@ -267,8 +263,8 @@ def fill_sums(
                         if weighted:
                             copy_weights(weight, first + slot + offset, size, terms)
                         met += add_neighbours(
-                            x, y, c0, c1, c2, c3, power, bandwidth, degree, first + slot, slot,
-                            size, offset, terms, sums,
+                            x, y, coefficients[0], power, times, bandwidth, degree, first + slot,
+                            slot, size, offset, terms, sums,
                         )  # fmt: skip
                 distance += 1
         arms[state, CELL_END] = first + count

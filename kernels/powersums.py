@@ -283,18 +283,40 @@ def join_counts(places, down, up, side, count, moments):
         out[k] = highs[k] - lows[k]
 
 
+@helper
+def kernel_profile(coefficients):
+    """Return (power, times) with K(u) = K(0) (1 - |u|^power)^times, the form of all our kernels."""
+    top = coefficients.shape[0] - 1
+    power = 1
+    while power < top and coefficients[power] == 0.0:
+        power += 1
+    return power, top // power
+
+
+@helper
+def kernel_factor(v, power, times):
+    """(1 - |v|^power)^times; keeps its digits where it comes to zero, as the expanded sum does not.
+
+    At |v| = 1, and beyond by rounding, it is zero to the last bit unless `times` is 0.
+    """
+    m = abs(v)
+    r = v * v if power == 2 else (m if power == 1 else m * m * m)
+    f = max(1.0 - r, 0.0)
+    return f if times == 1 else (f * f if times == 2 else (f * f * f if times == 3 else 1.0))
+
+
 @kernel(
-    types.int64(READ_1D, READ_1D, types.float64, types.float64, types.float64, types.float64,
-                types.int64, types.float64, types.int64, types.int64, types.int64, types.int64,
-                types.int64, WRITE_2D, WRITE_2D)
+    types.int64(READ_1D, READ_1D, types.float64, types.int64, types.int64, types.float64,
+                types.int64, types.int64, types.int64, types.int64, types.int64, WRITE_2D,
+                WRITE_2D)
 )  # fmt: skip
 def add_neighbours(
-    x, y, c0, c1, c2, c3, power, bandwidth, degree, first, slot, size, offset, terms, sums
+    x, y, peak, power, times, bandwidth, degree, first, slot, size, offset, terms, sums
 ):
     """Add to the sums of slot, slot + 1, ... the row `offset` places away, where in reach.
 
-    K(u) = c0 + c1 r + c2 r^2 + c3 r^3 with r = |u|^power. The weights of those rows lie in
-    `terms`. Returns how many were in reach.
+    K(u) = peak (1 - |u|^power)^times. The weights of those rows lie in `terms`. Returns how many
+    were in reach.
     """
     # Unsigned indices in place of slices, which would count references on every call.
     here = np.uint64(first)
@@ -308,9 +330,7 @@ def add_neighbours(
         inside = abs(d) <= bandwidth
         met += inside
         v = d * per_unit if inside else 0.0
-        m = abs(v)
-        r = v * v if power == 2 else (m if power == 1 else m * m * m)
-        p = terms[3, k] * (c0 + r * (c1 + r * (c2 + r * c3))) if inside else 0.0
+        p = terms[3, k] * peak * kernel_factor(v, power, times) if inside else 0.0
         sums[0, own + k] += p
         sums[t_row, own + k] += p * y[there + k]
         terms[0, k] = v
@@ -361,7 +381,9 @@ def add_sums(moments, coefficients, side, left, degree, count, sums):
                 source = moments[side, row + q, begin:end]
                 for k in range(size):
                     out[k] += c * source[k]
-        weights = moments[side, 0, begin:end]
-        total = sums[3 * degree + 3, begin:end]
-        for k in range(size):
-            total[k] += weights[k]
+        # Without the kernel: sum w, and sum w u^2 where there is a slope.
+        for extra in range(2 if degree > 0 else 1):
+            source = moments[side, 2 * extra, begin:end]
+            out = sums[3 * degree + 3 + extra, begin:end]
+            for k in range(size):
+                out[k] += source[k]

@@ -9,15 +9,16 @@ c is how many equal rows a row stands for, w its precision. Local constant (Nada
 1964): m = T_0 / S_0, a = 1 / S_0. Local linear (Stone 1977; Cleveland 1979): D = S_0 S_2 - S_1^2,
 m = (S_2 T_0 - S_1 T_1) / D, a = S_2 / D. One of the c copies of row i has the leverage
 L = w K(0) a, and is predicted without itself by y - (y - m) / (1 - L) (Allen 1974, Technometrics
-16:125). Where D < 1e-6 S_0 S_2 (1e-3 in short windows) the window is summed again, about its own
-mean; where D <= 1e-10 S_0 S_2 there is no line, and the local constant stands in for it.
+16:125). Where D / (S_0 S_2) is small (see `_SHARE_SHORT`) the window is summed again, about its
+own mean; where D <= 1e-10 S_0 S_2 there is no line, and the local constant stands in for it.
 
 Parallel work is the caller's: kernels take a range of rows. The last digits of a row's result
 depend on where its range begins, so fix the ranges before the number of threads.
 
 Parameters that all share: `x` (n,) ascending and finite; `y` (n,) finite, best less a common
-reference; `weight` (n,) c w > 0, or (0,) when all are 1; `coefficients` (degree of K + 1,) with
-K(u) = sum_q coefficients[q] |u|^q; `bandwidth` h > 0, with 1 / h finite.
+reference; `weight` (n,) c w > 0, or (0,) when all are 1; `coefficients` of one of the compact
+kernels in `shapes`, K(u) = sum_q coefficients[q] |u|^q = K(0) (1 - |u|^a)^b; `bandwidth` h > 0,
+with 1 / h finite.
 """
 
 import numpy as np
@@ -35,6 +36,7 @@ from .compiled import (
 )
 from .edges import first_beyond, first_within
 from .localfit import LOST, RESIDUAL, SCORE, SLOPE, TRACE, UNIT_LEVERAGE, VALUE
+from .powersums import kernel_factor, kernel_profile
 
 # Rows of the output of `fit_windows`: VALUE, SLOPE, UNIT_LEVERAGE of the local constant, then
 # (3 on) of the local line; and whether the local constant stands in for the line.
@@ -45,9 +47,11 @@ STAND_INS = 4
 SQUARES, VARIANCE, ROWS, DEGREE = 3, 4, 5, 6
 _LEAST_ROOM = 1e-10  # without this much room (1 - L) a row has no leave-one-out prediction
 _NO_LINE = 1e-10  # D / (S_0 S_2) up to which there is no line
-_SUSPECT = 1e-3  # below this, short windows are summed again
-_POOR = 1e-6  # below this, all are
-_SHORT = 256  # rows in a short window
+# Power sums lose as many digits as the least of D / (S_0 S_2), S_0 / (K(0) sum w) and
+# S_2 / (K(0) sum w u^2) has zeros. Below these shares a window is summed directly; where windows
+# are long only if it must be, since that costs time in proportion.
+_SHARE_SHORT, _SHARE_MIDDLING, _SHARE_LONG = 1e-3, 1e-6, 1e-9
+_SHORT, _LONG = 256, 65536  # rows in a short window; in a middling one
 _CHUNK = 512  # rows at a time in a window summed directly
 # Columns of a window's orthogonal basis, a row per degree: the recurrence; sums of w K times p^2,
 # p^2 u, p^2 u^2, p (y - mean); p and its slope at u = 0.
@@ -90,15 +94,12 @@ def _kernel_terms(x, weight, coefficients, place, per_unit, first, count, terms)
     ws = weight[first : first + count]
     u = terms[0]
     g = terms[1]
-    top = coefficients.shape[0] - 1
-    highest = coefficients[top]
+    peak = coefficients[0]
+    power, times = kernel_profile(coefficients)
     for k in range(count):
-        u[k] = (xs[k] - place) * per_unit
-        g[k] = highest
-    for q in range(top - 1, -1, -1):
-        c = coefficients[q]
-        for k in range(count):
-            g[k] = g[k] * abs(u[k]) + c
+        v = (xs[k] - place) * per_unit
+        u[k] = v
+        g[k] = peak * kernel_factor(v, power, times)
     if weight.shape[0] > 0:
         for k in range(count):
             g[k] *= ws[k]
@@ -200,6 +201,7 @@ def _fit_window(x, y, weight, coefficients, place, bandwidth, low, high, degree,
     explain; -1 where no row has weight (NaN).
     """
     per_unit = 1.0 / bandwidth
+    peak = coefficients[0]
     for row in range(3):
         out[row] = np.nan
     for j in range(degree + 1):
@@ -218,7 +220,7 @@ def _fit_window(x, y, weight, coefficients, place, bandwidth, low, high, degree,
             basis[0, _AT_ZERO] = 1.0
             out[0] = basis[0, _DOT] / norm
             out[1] = 0.0 if degree > 0 else np.nan
-            out[2] = coefficients[0] / norm
+            out[2] = peak / norm
         else:
             if not norm > _NO_LINE * basis[j - 1, _SECOND_MOMENT]:
                 return j - 1
@@ -235,7 +237,7 @@ def _fit_window(x, y, weight, coefficients, place, bandwidth, low, high, degree,
             basis[j, _BETA] = norm / basis[j - 1, _NORM]
             out[0] += basis[j, _DOT] / norm * value
             out[1] += basis[j, _DOT] / norm * slope * per_unit
-            out[2] += coefficients[0] * value * value / norm
+            out[2] += peak * value * value / norm
         basis[j, _ALPHA] = basis[j, _FIRST_MOMENT] / norm
     return degree
 
@@ -290,8 +292,7 @@ def fit_points(points, x, y, weight, repeats, variance, coefficients, bandwidth,
 def _fit_slots(sums, at_zero, per_unit, count, fits):
     """Both estimators from kernel sums, see `fit_windows`; return how many windows look poor.
 
-    Row REPLACED of `fits` gets 2 where D / (S_0 S_2) < 1e-6 or nearly all weight of the window
-    lies at its very ends (sums lose digits there), 1 where D / (S_0 S_2) < 1e-3, and else 0.
+    Row REPLACED of `fits` gets 1 for those, whose power sums lost three digits or more.
     """
     s0 = sums[0]
     s1 = sums[1]
@@ -299,6 +300,7 @@ def _fit_slots(sums, at_zero, per_unit, count, fits):
     t0 = sums[3]
     t1 = sums[4]
     total = sums[6]
+    second = sums[7]
     value = fits[VALUE]
     slope = fits[SLOPE]
     leverage = fits[UNIT_LEVERAGE]
@@ -310,10 +312,13 @@ def _fit_slots(sums, at_zero, per_unit, count, fits):
     for k in range(count):
         product = s0[k] * s2[k]
         determinant = product - s1[k] * s1[k]
-        suspect = not (determinant > _SUSPECT * product)
-        worse = not (determinant > _POOR * product) | (s0[k] < _POOR * at_zero * total[k])
-        poor[k] = (1.0 if suspect else 0.0) + (1.0 if worse else 0.0)
-        found += suspect | worse
+        good = (
+            (determinant > _SHARE_SHORT * product)
+            & (s0[k] >= _SHARE_SHORT * at_zero * total[k])
+            & (s2[k] >= _SHARE_SHORT * at_zero * second[k])
+        )
+        poor[k] = 0.0 if good else 1.0
+        found += not good
         inverse = 1.0 / s0[k]
         value[k] = t0[k] * inverse
         slope[k] = np.nan
@@ -327,29 +332,42 @@ def _fit_slots(sums, at_zero, per_unit, count, fits):
 
 @kernel(
     types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
-               WRITE_2D, WRITE_2D, WRITE_1D, WRITE_2D)
+               READ_2D, WRITE_2D, WRITE_2D, WRITE_1D, WRITE_2D)
 )  # fmt: skip
-def _refit_slots(x, y, weight, coefficients, bandwidth, first, count, terms, basis, fit, fits):
-    """Fit the windows that look poor once more, directly; rows at one x share their window."""
+def _refit_slots(
+    x, y, weight, coefficients, bandwidth, first, count, sums, terms, basis, fit, fits
+):
+    """Fit windows that look poor directly, where need be; rows at one x share their window."""
+    at_zero = coefficients[0]
     former = -1
     for k in range(count):
-        poor = fits[REPLACED, k]
-        fits[REPLACED, k] = 0.0
-        if poor == 0.0:
+        if fits[REPLACED, k] == 0.0:
             continue
         place = x[first + k]
         if former >= 0 and x[first + former] == place:
             for row in range(REPLACED + 1):
                 fits[row, k] = fits[row, former]
             continue
+        former = k
         low = first_within(x, 0, place, bandwidth)
         high = first_beyond(x, first + k, place, bandwidth)
-        if x[low] == x[high - 1]:
+        rows = high - low
+        least = _SHARE_LONG
+        if rows <= _LONG:
+            least = _SHARE_MIDDLING if rows > _SHORT else _SHARE_SHORT
+        product = sums[0, k] * sums[2, k]
+        # No digit left in S_2: rows beside x_i all lie where the kernel ends.
+        flat = rows > _LONG and sums[2, k] < least * at_zero * sums[7, k]
+        if x[low] == x[high - 1] or flat:
             reached = 0
-        elif poor < 2.0 and high - low > _SHORT:
-            continue
+        elif (
+            product - sums[1, k] * sums[1, k] > least * product
+            and sums[0, k] >= least * at_zero * sums[6, k]
+            and sums[2, k] >= least * at_zero * sums[7, k]
+        ):
+            reached = 1
         else:
-            reached = _fit_window(
+            _fit_window(
                 x, y, weight, coefficients, place, bandwidth, low, high, 0, terms, basis, fit
             )
             fits[VALUE, k] = fit[0]
@@ -359,12 +377,12 @@ def _refit_slots(x, y, weight, coefficients, bandwidth, first, count, terms, bas
             )
             for row in range(3):
                 fits[LINE + row, k] = fit[row]
+        fits[REPLACED, k] = 0.0
         if reached < 1:
             fits[LINE + VALUE, k] = fits[VALUE, k]
             fits[LINE + SLOPE, k] = 0.0
             fits[LINE + UNIT_LEVERAGE, k] = fits[UNIT_LEVERAGE, k]
             fits[REPLACED, k] = 1.0
-        former = k
 
 
 @kernel(
@@ -397,8 +415,9 @@ def fit_windows(x, y, weight, coefficients, bandwidth, begin, end, out):
         )  # fmt: skip
         if _fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
             _refit_slots(
-                x, y, weight, coefficients, bandwidth, first, count, chunk, basis, fit, fits
-            )
+                x, y, weight, coefficients, bandwidth, first, count, sums, chunk, basis,
+                fit, fits,
+            )  # fmt: skip
         for row in range(REPLACED + 1):
             for k in range(count):
                 out[row, first - begin + k] = fits[row, k]
@@ -478,8 +497,9 @@ def score_windows(x, y, weight, repeats, scored, coefficients, bandwidth, begin,
         )  # fmt: skip
         if _fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
             _refit_slots(
-                x, y, weight, coefficients, bandwidth, first, count, chunk, basis, fit, fits
-            )
+                x, y, weight, coefficients, bandwidth, first, count, sums, chunk, basis,
+                fit, fits,
+            )  # fmt: skip
         if not plain:
             _weigh_rows(weight, repeats, scored, first, count, rows)
         for estimator in range(2):
