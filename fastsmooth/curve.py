@@ -182,7 +182,7 @@ class Curve:
             A place does not belong on the axis, or the curve was made at points of the caller's
             own: a spline through those would run across stretches without data.
         """
-        if self.trace["settings"].get("at") is not None:
+        if has_own_points(self):
             raise InputError(
                 "the curve", "have evenly spaced points to be read elsewhere",
                 "it was made with --at", "make it without, or at the places you need",
@@ -304,6 +304,14 @@ class Curve:
     def _spare_data(self, path: Any, argument: str) -> None:
         """Refuse to write over the data that the curve was made from."""
         spare_data([record["path"] for record in self.trace["files"]], path, argument)
+
+
+def has_own_points(curve: Curve) -> bool:
+    """Return whether the curve was made at points of the caller's own.
+
+    Nothing is then known of what lies between them.
+    """
+    return curve.trace["settings"].get("at") is not None
 
 
 def spare_data(data: Sequence[str], path: Any, argument: str) -> None:

@@ -1083,3 +1083,13 @@ def test_a_given_width_beyond_all_searched_ones_is_told_but_not_drawn(width):
     assert len(find(figure(given), "given")) == 1
     assert find(far, "given") == []
     assert f"bandwidth {width:g}" in " ".join(texts(far))
+
+
+def test_points_of_ones_own_are_not_joined():
+    curve = CASES["plain"]()
+    told = {**curve.trace["settings"], "at": ["1", "2"]}
+    made = figure(replace(curve, trace={**curve.trace, "settings": told}))
+    assert not find(made, "band")
+    assert not find(made, "curve ok")
+    assert find(made, "curve points")[0].get_xdata().size == np.isfinite(curve.estimate).sum()
+    assert " ".join(texts(made, "subtitle")).startswith("The points are the mean from")

@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.patheffects import withStroke
 from numpy.typing import NDArray
 
-from fastsmooth.curve import OK, OUTSIDE, STATUSES, Curve
+from fastsmooth.curve import OK, OUTSIDE, STATUSES, Curve, has_own_points
 from fastsmooth.report.labels import Box, Ruler
 from fastsmooth.report.look import (  # fmt: skip
     BAND,
@@ -157,7 +157,7 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
     for stretch in stretches(curve.status):
         if stretch.status == OUTSIDE:
             continue
-        if curve.trace["settings"].get("at") is not None:
+        if has_own_points(curve):
             break  # points of the caller's own: nothing is known of what lies between
         name = STATUSES[stretch.status]
         start, stop = _joined(curve.status, stretch)
@@ -167,8 +167,11 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
             gid=f"curve {name}", zorder=5,
         )  # fmt: skip
     alone = _alone(curve.estimate)
-    own = curve.trace["settings"].get("at") is not None
-    dots = np.isfinite(curve.estimate) if own or curve.x.size <= _FEW_POINTS else alone
+    dots = (
+        np.isfinite(curve.estimate)
+        if has_own_points(curve) or curve.x.size <= _FEW_POINTS
+        else alone
+    )
     panel.plot(
         x[dots], curve.estimate[dots], linestyle="none", marker="o", markersize=4.5, color=CURVE,
         markeredgecolor=PAPER, markeredgewidth=0.8, gid="curve points", zorder=6,
@@ -192,11 +195,13 @@ def _draw_cells(panel: Axes, curve: Curve, shown: Shown) -> None:
 
 def _draw_band(panel: Axes, curve: Curve, x: Floats) -> None:
     known = np.isfinite(curve.lower) & np.isfinite(curve.upper)
-    panel.fill_between(
-        x, curve.lower, curve.upper, where=known, color=BAND, alpha=0.5, linewidth=0.0, zorder=3,
-        gid="band",
-    )  # fmt: skip
-    few = known if curve.x.size <= _FEW_POINTS else known & _alone(curve.lower)
+    own = has_own_points(curve)
+    if not own:
+        panel.fill_between(
+            x, curve.lower, curve.upper, where=known, color=BAND, alpha=0.5, linewidth=0.0,
+            zorder=3, gid="band",
+        )  # fmt: skip
+    few = known if own or curve.x.size <= _FEW_POINTS else known & _alone(curve.lower)
     panel.vlines(
         x[few], curve.lower[few], curve.upper[few], color=BAND, linewidth=3.0, zorder=3,
         gid="band points",

@@ -6,7 +6,7 @@ import re
 
 import numpy as np
 
-from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve
+from fastsmooth.curve import EDGE, OUTSIDE, THIN, Curve, has_own_points
 from fastsmooth.report.scales import named, printable
 
 HOW_TO_READ_CRITERIA = (
@@ -56,7 +56,8 @@ def subtitle(curve: Curve) -> str:
     fit = f"{told['estimator']}, {told['kernel']} kernel, bandwidth {width}, {chosen}."
     if not np.isfinite(curve.estimate).any():
         return f"There is no line: no point has rows near enough. {taken}, {fit}"
-    sentence = f"The line is the mean from {taken}: {fit}"
+    subject = "The points are" if has_own_points(curve) else "The line is"
+    sentence = f"{subject} the mean from {taken}: {fit}"
     if not np.isfinite(curve.lower).any():
         return f"{sentence} No band could be computed."
     covers = "mean" if told["bias"] == "corrected" else "smoothed mean, its bias ignored"
