@@ -60,35 +60,25 @@ def first_within(x, start, place, reach):
 
 @helper
 def _step_high(x, j, place, reach):
-    """Move j to the first row beyond the window, six rows at a look."""
-    passed = np.uint64(6)
-    while passed == np.uint64(6):
-        passed = (
-            np.uint64(x[j] - place <= reach)
-            + np.uint64(x[j + np.uint64(1)] - place <= reach)
-            + np.uint64(x[j + np.uint64(2)] - place <= reach)
-            + np.uint64(x[j + np.uint64(3)] - place <= reach)
-            + np.uint64(x[j + np.uint64(4)] - place <= reach)
-            + np.uint64(x[j + np.uint64(5)] - place <= reach)
-        )
-        j += passed
+    """Move j to the first row beyond the window: up to seven rows in three looks, and again."""
+    moved = np.uint64(7)
+    while moved == np.uint64(7):
+        moved = np.uint64(4) * np.uint64(x[j + np.uint64(3)] - place <= reach)
+        moved += np.uint64(2) * np.uint64(x[j + moved + np.uint64(1)] - place <= reach)
+        moved += np.uint64(x[j + moved] - place <= reach)
+        j += moved
     return j
 
 
 @helper
 def _step_low(x, j, place, reach):
-    """Move j to the first row of the window, six rows at a look."""
-    passed = np.uint64(6)
-    while passed == np.uint64(6):
-        passed = (
-            np.uint64(place - x[j] > reach)
-            + np.uint64(place - x[j + np.uint64(1)] > reach)
-            + np.uint64(place - x[j + np.uint64(2)] > reach)
-            + np.uint64(place - x[j + np.uint64(3)] > reach)
-            + np.uint64(place - x[j + np.uint64(4)] > reach)
-            + np.uint64(place - x[j + np.uint64(5)] > reach)
-        )
-        j += passed
+    """Move j to the first row of the window, as `_step_high` does."""
+    moved = np.uint64(7)
+    while moved == np.uint64(7):
+        moved = np.uint64(4) * np.uint64(place - x[j + np.uint64(3)] > reach)
+        moved += np.uint64(2) * np.uint64(place - x[j + moved + np.uint64(1)] > reach)
+        moved += np.uint64(place - x[j + moved] > reach)
+        j += moved
     return j
 
 
@@ -97,8 +87,8 @@ def find_edges(x, bandwidth, first, count, arms, places):
     """Windows of rows first, first + 1, ...: row r of slot k is in it when lows <= r < highs.
 
     The last row of `arms` holds indices not above the first row's edges, and gets the last's.
-    Two halves go side by side, each looking six rows ahead: a jump on every comparison costs
-    four times as much on irregular data (measured 18 against 4.4 ns a row).
+    Four stretches of rows go side by side, without a jump that depends on the data: one jump a
+    comparison costs four times as much where x is irregular (measured 18 against 4 ns a row).
     """
     n = x.shape[0]
     lows = places[LOWS]
@@ -112,14 +102,20 @@ def find_edges(x, bandwidth, first, count, arms, places):
     last_high = first_beyond(x, high, last, bandwidth)
     arms[state, LOW] = last_low
     arms[state, HIGH] = last_high
-    half = count // 2 if last_high + 6 <= n else 0
-    if half > 0:
+    quarter = count // 4 if last_high + 8 <= n else 0
+    if quarter > 0:
         xs = x[first : first + count]
-        k1 = np.uint64(half)
+        k1 = np.uint64(quarter)
+        k2 = k1 + k1
+        k3 = k2 + k1
         l0 = np.uint64(low)
         h0 = np.uint64(high)
         l1 = np.uint64(first_within(x, low, xs[k1], bandwidth))
         h1 = np.uint64(first_beyond(x, high, xs[k1], bandwidth))
+        l2 = np.uint64(first_within(x, np.int64(l1), xs[k2], bandwidth))
+        h2 = np.uint64(first_beyond(x, np.int64(h1), xs[k2], bandwidth))
+        l3 = np.uint64(first_within(x, np.int64(l2), xs[k3], bandwidth))
+        h3 = np.uint64(first_beyond(x, np.int64(h2), xs[k3], bandwidth))
         for k in range(k1):
             place = xs[k]
             l0 = _step_low(x, l0, place, bandwidth)
@@ -131,9 +127,19 @@ def find_edges(x, bandwidth, first, count, arms, places):
             lows[k1 + k] = l1
             h1 = _step_high(x, h1, place, bandwidth)
             highs[k1 + k] = h1
-        low = np.int64(l1)
-        high = np.int64(h1)
-    for k in range(2 * half, count):
+            place = xs[k2 + k]
+            l2 = _step_low(x, l2, place, bandwidth)
+            lows[k2 + k] = l2
+            h2 = _step_high(x, h2, place, bandwidth)
+            highs[k2 + k] = h2
+            place = xs[k3 + k]
+            l3 = _step_low(x, l3, place, bandwidth)
+            lows[k3 + k] = l3
+            h3 = _step_high(x, h3, place, bandwidth)
+            highs[k3 + k] = h3
+        low = np.int64(l3)
+        high = np.int64(h3)
+    for k in range(4 * quarter, count):
         place = x[first + k]
         while place - x[low] > bandwidth:
             low += 1

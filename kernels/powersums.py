@@ -331,20 +331,24 @@ def add_neighbours(
         met += inside
         v = d * per_unit if inside else 0.0
         p = terms[3, k] * peak * kernel_factor(v, power, times) if inside else 0.0
+        z = y[there + k]
+        g = p * v
         sums[0, own + k] += p
-        sums[t_row, own + k] += p * y[there + k]
-        terms[0, k] = v
-        terms[1, k] = p * v
-    for j in range(1, degree + 1):
+        sums[t_row, own + k] += p * z
+        if degree > 0:
+            sums[1, own + k] += g
+            sums[2, own + k] += g * v
+            sums[t_row + 1, own + k] += g * z
+        if degree > 1:
+            terms[0, k] = v
+            terms[1, k] = g * v
+    for j in range(2, 2 * degree + 1):
         for k in range(np.uint64(size)):
             g = terms[1, k]
-            sums[j, own + k] += g
-            sums[t_row + j, own + k] += g * y[there + k]
-            terms[1, k] = g * terms[0, k]
-    for j in range(degree + 1, t_row):
-        for k in range(np.uint64(size)):
-            g = terms[1, k]
-            sums[j, own + k] += g
+            if j > 2:
+                sums[j, own + k] += g
+            if j <= degree:
+                sums[t_row + j, own + k] += g * y[there + k]
             terms[1, k] = g * terms[0, k]
     return met
 

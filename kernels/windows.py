@@ -23,7 +23,7 @@ with 1 / h finite.
 
 import numpy as np
 
-from .cells import SLOTS, fill_sums, make_work
+from .cells import SLOTS, aligned_rows, fill_sums, make_work
 from .compiled import (
     READ_1D,
     READ_2D,
@@ -403,7 +403,7 @@ def fit_windows(x, y, weight, coefficients, bandwidth, begin, end, out):
     arms, segments, places, centres, terms, carries, tables, moments, sums = make_work(
         x.shape[0], coefficients, 1
     )
-    fits = np.zeros((REPLACED + 1, SLOTS))
+    fits = aligned_rows(1, REPLACED + 1, SLOTS + 8)[0]
     chunk = np.empty((5, _CHUNK))
     basis = np.zeros((4, 8))
     fit = np.zeros(3)
@@ -483,8 +483,9 @@ def score_windows(x, y, weight, repeats, scored, coefficients, bandwidth, begin,
     arms, segments, places, centres, terms, carries, tables, moments, sums = make_work(
         x.shape[0], coefficients, 1
     )
-    fits = np.zeros((REPLACED + 1, SLOTS))
-    rows = np.ones((2, SLOTS))
+    fits = aligned_rows(1, REPLACED + 1, SLOTS + 8)[0]
+    rows = aligned_rows(1, 2, SLOTS + 8)[0]
+    rows[:] = 1.0
     chunk = np.empty((5, _CHUNK))
     basis = np.zeros((4, 8))
     fit = np.zeros(3)

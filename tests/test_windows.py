@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 import statsmodels.api as sm
 from fastsmooth.kernels import windows
+from fastsmooth.kernels.cells import aligned_rows
 from fastsmooth.kernels.localfit import LOST, RESIDUAL, SCORE, SLOPE, TRACE, UNIT_LEVERAGE, VALUE
 from fastsmooth.kernels.shapes import SHAPES
 from fastsmooth.kernels.windows import DEGREE, LINE, REPLACED, ROWS, SQUARES, STAND_INS, VARIANCE
@@ -335,6 +336,14 @@ def test_threads_change_no_bit():
     with ThreadPoolExecutor(4) as pool:
         together = list(pool.map(work, tasks))
     assert np.array_equal(np.array(alone), np.array(together))
+
+
+@pytest.mark.parametrize("length", [1, 7, 8, 1032])
+def test_work_rows_begin_on_cache_lines(length):
+    made = aligned_rows(2, 3, length)
+    assert made.shape == (2, 3, -(-length // 8) * 8)
+    assert not made.any()
+    assert {row.ctypes.data % 64 for layer in made for row in layer} == {0}
 
 
 # Degenerate windows.
