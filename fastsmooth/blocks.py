@@ -142,6 +142,13 @@ class Dealer:
         if pa.types.is_floating(kind):
             # NaN is no block, and -0.0 is the same as 0.0.
             column = pc.if_else(pc.is_nan(column), None, pc.add(column, 0.0))
+            largest = pc.max(pc.abs(column)).as_py()
+            if largest is not None and largest >= 2**53:
+                raise InputError(
+                    "--block", "name a column whose values are told apart",
+                    f"'{self.block.column}' holds floats beyond 2^53, which merge neighbours",
+                    "write the column as text or as integers",
+                )  # fmt: skip
         coded = column if pa.types.is_dictionary(column.type) else pc.dictionary_encode(column)
         values = coded.dictionary.to_pylist()
         folds = np.array([fold_of_key(value, self.folds) for value in values] + [-1], np.int64)
@@ -219,6 +226,39 @@ class Dealer:
         return np.array(
             [fold_of_number(number, self.folds) for number in numbers.tolist()], np.int64
         )
+
+
+def check_alike(column: str, types: list[pa.DataType]) -> None:
+    """Refuse a block column that files hold in different kinds: equal blocks would be parted.
+
+    Raises
+    ------
+    InputError
+        Kinds or time zones differ.
+    """
+    kinds = list(dict.fromkeys(kind for kind in map(_kind, types) if kind))
+    if len(kinds) > 1:
+        raise InputError(
+            "--block", "name a column of one kind in every file",
+            f"'{column}' holds {kinds[0]} in some and {kinds[1]} in others",
+            "write the files alike",
+        )  # fmt: skip
+
+
+def _kind(data_type: pa.DataType) -> str:
+    """The kind of a column in words; empty where it holds nulls only."""
+    import pyarrow.types as pt
+
+    if pt.is_dictionary(data_type):
+        return _kind(data_type.value_type)
+    if pt.is_timestamp(data_type):
+        return f"times in zone {data_type.tz}" if data_type.tz else "times without a zone"
+    known = (
+        (pt.is_null, ""), (pt.is_integer, "integers"), (pt.is_floating, "floats"),
+        (pt.is_decimal, "decimals"), (pt.is_boolean, "truth values"), (pt.is_date, "dates"),
+        (pt.is_string, "text"), (pt.is_large_string, "text"), (pt.is_string_view, "text"),
+    )  # fmt: skip
+    return next((words for test, words in known if test(data_type)), str(data_type))
 
 
 def merge_keys(mine: set[Any], other: set[Any]) -> set[Any]:

@@ -147,6 +147,11 @@ class Source:
         self.where = where
         self._roles = _roles_of(columns)
         check_present(reader, self._roles, columns.extra, columns.block)
+        if columns.block is not None:
+            from fastsmooth.blocks import check_alike
+
+            block = columns.block
+            check_alike(block, [schema.field(block).type for schema in reader.schemas])
         self._filters = parse_filters(reader, where)
         used = [role.column for role in self._roles] + list(columns.extra)
         used += [name for one in self._filters for name in one.columns]

@@ -395,3 +395,27 @@ def test_nan_is_no_block_and_zero_has_no_sign():
 def test_nested_columns_are_no_blocks():
     with pytest.raises(InputError, match="--block must name a column of plain values"):
         Dealer(Block("b"), 8).deal(pa.array([[1], [2]]))
+
+
+@pytest.mark.parametrize(
+    ("first", "second", "told"),
+    [
+        (pa.int64(), pa.float64(), "integers in some and floats in others"),
+        (pa.int64(), pa.string(), "integers in some and text in others"),
+        (pa.timestamp("s", "UTC"), pa.timestamp("s", "Pacific/Auckland"), "zone UTC in some"),
+    ],
+)
+def test_a_block_column_of_two_kinds_is_refused(tmp_path, first, second, told):
+    x = np.linspace(0.0, 1.0, 100)
+    days = pa.array(np.arange(100) // 10)
+    for name, kind in (("a", first), ("b", second)):
+        pq.write_table(
+            pa.table({"x": x, "y": x, "k": days.cast(kind)}), tmp_path / f"{name}.parquet"
+        )
+    with pytest.raises(InputError, match=told):
+        make_curve(tmp_path, "x", "y", reading=Reading(block="k"))
+
+
+def test_floats_too_large_to_tell_apart_are_no_blocks():
+    with pytest.raises(InputError, match="floats beyond 2\\^53"):
+        Dealer(Block("b"), 8).deal(pa.array([1.8e19, 1.8e19 + 4096]))
