@@ -295,7 +295,7 @@ def fit_points(
     columns += [centre - half + reference, centre + half + reference, effective, spread]
     out = status == OUTSIDE
     masked = [np.where(out, np.nan, column) for column in columns]
-    return Points(*masked, status=status)  # type: ignore[misc]  # eight columns, in order
+    return Points._make([*masked, status])
 
 
 def values_at(x: Floats, level: Level, bandwidth: float, shape: Shape, estimator: str) -> Floats:
