@@ -1,0 +1,143 @@
+"""Options that several commands share, and the settings made of them."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from fastsmooth.settings import BANDS, BIASES, CRITERIA, ESTIMATORS, KERNELS, NOISES, SCALES
+
+if TYPE_CHECKING:
+    from fastsmooth.curve import Curve
+    from fastsmooth.passes import Progress
+    from fastsmooth.settings import Band, Reading, Smoothing
+
+
+def with_options(*options: Callable[[Any], Any]) -> Callable[[Any], Any]:
+    """Return one decorator that adds all the options, in the order given."""
+
+    def apply(function: Any) -> Any:
+        for option in reversed(options):
+            function = option(function)
+        return function
+
+    return apply
+
+
+def choice(name: str, words: tuple[str, ...], text: str) -> Callable[[Any], Any]:
+    """Return an option that takes one of the words, the first by default."""
+    # The words are checked by the Python API, in the same sentence for every caller.
+    return click.option(name, default=words[0], show_default=True, metavar="WORD", help=(
+        f"{text}: {', '.join(words)}."))  # fmt: skip
+
+
+DATA_OPTIONS = with_options(
+    click.argument("data", nargs=-1, required=True),
+    click.option("--x", required=True, metavar="COLUMN", help="Column along the axis."),
+    click.option("--y", required=True, metavar="COLUMN", help="Column whose mean is sought."),
+    click.option("--weight", metavar="COLUMN", help="Precision of each row (1 / variance)."),
+    click.option("--count", metavar="COLUMN", help="How many equal rows each row stands for."),
+    click.option("--where", metavar="SQL", help="Use rows that meet this SQL condition."),
+    click.option("--range", "range_", nargs=2, metavar="LOW HIGH", help="Lowest and highest x."),
+    choice("--scale", SCALES, "Scale of x"),
+    click.option("--strict", is_flag=True, help="Refuse the data if any row is unusable."),
+    click.option("--threads", type=int, metavar="N", help="Default: all processors."),
+    click.option("--folds", type=int, default=32, show_default=True, metavar="N",
+                 help="Parts of the data for standard errors."),
+    click.option("--block", metavar="COLUMN[:UNIT]",
+                 help="Rows that may depend on each other: a column, or a time column with hour, "
+                 "day, week or month, as in logged_at:day."),
+)  # fmt: skip
+SMOOTHING_OPTIONS = with_options(
+    choice("--estimator", ESTIMATORS, "Estimator"),
+    choice("--kernel", KERNELS, "Kernel"),
+    click.option("--bandwidth", metavar="WIDTH",
+                 help="Your own width in units of x (a factor with --scale log)."),
+    click.option("--criterion", metavar="WORD", help=(
+        f"What chooses the width: {', '.join(CRITERIA)}. Default: leave-block-out with --block, "
+        "else leave-one-out.")),
+    click.option("--widths", type=int, default=48, show_default=True, metavar="N",
+                 help="Widths in the search grid."),
+)  # fmt: skip
+BAND_OPTIONS = with_options(
+    click.option("--level", type=float, default=0.95, show_default=True, metavar="SHARE",
+                 help="Confidence level of the band."),
+    choice("--band", BANDS, "What the band covers: each point, or the whole curve"),
+    choice("--bias", BIASES, "Bias of the band's centre"),
+    choice("--noise", NOISES, "Residual variance along x"),
+    click.option("--least-rows", type=float, default=30.0, show_default=True, metavar="N",
+                 help="Points with fewer effective rows are thin."),
+    click.option("--points", type=int, default=256, show_default=True, metavar="N",
+                 help="Evenly spaced points of the curve."),
+    click.option("--at", metavar="X,X,...", help="Points of your own instead."),
+    click.option("--landmarks", is_flag=True,
+                 help="Locate the steepest place and the turning points, with intervals."),
+    click.option("--crossing", "crossings", type=float, multiple=True, metavar="Y",
+                 help="Locate where the curve crosses this value (may be repeated)."),
+)  # fmt: skip
+VOICE_OPTIONS = with_options(
+    click.option("--json", "as_json", is_flag=True, help="Print JSON in place of the summary."),
+    click.option("--quiet", is_flag=True, help="Print errors only."),
+)
+
+
+def _reading(
+    where: str | None, range_: tuple[str, str] | None, scale: str, strict: bool,
+    threads: int | None, folds: int, block: str | None,
+) -> Reading:  # fmt: skip
+    from fastsmooth.settings import Reading, usable_cores
+
+    threads = usable_cores() if threads is None else threads
+    return Reading(where, range_, scale, strict, threads, folds, block)
+
+
+def _smoothing(
+    estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int
+) -> Smoothing:
+    from fastsmooth.settings import Smoothing
+
+    return Smoothing(estimator, kernel, bandwidth, criterion, widths)
+
+
+def _band(
+    level: float, band: str, bias: str, noise: str, least_rows: float, points: int, at: str | None,
+    landmarks: bool, crossings: tuple[float, ...],
+) -> Band:  # fmt: skip
+    from fastsmooth.settings import Band
+
+    places = None if at is None else tuple(one.strip() for one in at.split(",") if one.strip())
+    return Band(level, band, bias, noise, least_rows, points, places, landmarks, crossings)
+
+
+def _take(options: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
+    return {name: options.pop(name) for name in names}
+
+
+def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> Curve:
+    """Call the API with what the three groups of options say."""
+    from fastsmooth.api import make_curve
+
+    reading = _reading(
+        **_take(options, ("where", "range_", "scale", "strict", "threads", "folds", "block"))
+    )
+    smoothing = _smoothing(
+        **_take(options, ("estimator", "kernel", "bandwidth", "criterion", "widths"))
+    )
+    names = (
+        "level",
+        "band",
+        "bias",
+        "noise",
+        "least_rows",
+        "points",
+        "at",
+        "landmarks",
+        "crossings",
+    )
+    band = _band(**_take(options, names)) if "level" in options else None
+    return make_curve(
+        data[0] if len(data) == 1 else list(data),
+        reading=reading, smoothing=smoothing, band=band, progress=progress, **options,
+    )  # fmt: skip
