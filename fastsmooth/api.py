@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import partial
 from typing import Any, TypeVar
 
 import numpy as np
@@ -12,11 +13,23 @@ from fastsmooth.assemble import Chosen, assemble
 from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.curve import Curve
 from fastsmooth.errors import InputError
+from fastsmooth.exact import ExactScoring, check_memory, choose_engine, gather_rows
 from fastsmooth.kernels.shapes import SHAPES
-from fastsmooth.passes import Progress, bins_for, count_finer, count_rows, silent
-from fastsmooth.search import search_table
-from fastsmooth.settings import Band, Reading, Smoothing, check_text
+from fastsmooth.nearest import Neighbours
+from fastsmooth.passes import (
+    Counted,
+    Counting,
+    Progress,
+    bins_for,
+    count_finer,
+    count_pass,
+    count_rows,
+    silent,
+)
+from fastsmooth.search import search_neighbours, search_table
+from fastsmooth.settings import NEAREST, Band, Reading, Smoothing, check_text
 from fastsmooth.source import Columns, Source, open_source
+from fastsmooth.store.disk import is_store
 from fastsmooth.trail import Search
 
 Floats = NDArray[np.float64]
@@ -30,8 +43,8 @@ _WIDEST_BINS = 1e307
 
 def make_curve(
     data: Any,
-    x: str,
-    y: str,
+    x: str | None = None,
+    y: str | None = None,
     *,
     weight: str | None = None,
     count: str | None = None,
@@ -39,15 +52,16 @@ def make_curve(
     smoothing: Smoothing | None = None,
     band: Band | None = None,
     progress: Progress = silent,
+    counting: Counting = count_pass,
 ) -> Curve:
     """Make the reference curve of y as a function of x.
 
     Parameters
     ----------
     data : path, list of paths, dict of arrays, tuple of arrays, or frame
-        See `fastsmooth.source.open_source`.
+        See `fastsmooth.source.open_source`; or the folder of a store.
     x, y : str
-        Columns.
+        Columns; a store knows its own.
     weight : str or None
         Column of precisions: variance of a row is proportional to 1 / weight.
     count : str or None
@@ -60,6 +74,9 @@ def make_curve(
         Points, band, and what counts as thin.
     progress : callable
         Called as ``progress(stage, rows_done, rows_expected)``.
+    counting : callable
+        Reads all rows into a bin table: threads of this process, or the workers of a cluster
+        (`fastsmooth.engines.dask.counting`).
 
     Returns
     -------
@@ -84,30 +101,42 @@ def make_curve(
     >>> round(float(made.at(10.0)[0]), 1)
     24.0
     """
-    reading = _group("reading", reading, Reading)
-    smoothing = _group("smoothing", smoothing, Smoothing)
-    band = _group("band", band, Band)
-    for argument, column in {"--x": x, "--y": y}.items():
-        check_text(argument, column, "name a column of DATA", "name one")
-    for argument, own in {"--weight": weight, "--count": count}.items():
-        if own is not None:
-            check_text(argument, own, "name a column of DATA")
-    _criterion(reading, smoothing)
-    _check_band(smoothing, band)
+    reading = settings_or_default("reading", reading, Reading)
+    smoothing = settings_or_default("smoothing", smoothing, Smoothing)
+    band = settings_or_default("band", band, Band)
+    if is_store(data):
+        from fastsmooth.store.curves import curve_of_store
+        from fastsmooth.store.settings import StoreSettings
+
+        asked = StoreSettings(x, y, weight, count)
+        return curve_of_store(data, asked, reading, smoothing, band, progress)
+    x, y = check_columns(x, y, weight, count)
+    check_no_last(reading)
+    criterion_of(reading, smoothing)
+    check_band(smoothing, band)
+    if smoothing.estimator == NEAREST and weight is not None:
+        raise InputError(
+            "--weight", f"be left out with --estimator {NEAREST}",
+            "its mean is over so many rows, all alike", "give --count, or take another estimator",
+        )  # fmt: skip
     block = None if reading.blocks is None else reading.blocks.column
     columns = Columns(x, y, weight, count, block=block)
-    with open_source(data, columns, where=reading.where) as source:
-        fixed = _own_bandwidth(source, reading, smoothing)
-        places = _own_points(source, reading, band)
-        chosen = _count_and_search(source, reading, smoothing, fixed, places, progress)
+    with open_source(
+        data, columns, where=reading.where, timeout_seconds=reading.timeout_seconds
+    ) as source:
+        fixed = own_bandwidth(source, reading, smoothing)
+        places = own_points(source, reading, band)
+        chosen = count_and_search(
+            source, reading, smoothing, fixed, places, progress, counting
+        )
         progress("fitting", 0, None)
         return assemble(source, chosen, reading, smoothing, band)
 
 
 def search_bandwidth(
     data: Any,
-    x: str,
-    y: str,
+    x: str | None = None,
+    y: str | None = None,
     *,
     weight: str | None = None,
     count: str | None = None,
@@ -139,7 +168,26 @@ def search_bandwidth(
     ).search  # fmt: skip
 
 
-def _group(argument: str, given: T | None, kind: type[T]) -> T:
+def check_no_last(reading: Reading) -> None:
+    """Refuse a span of time for data that are no store."""
+    if reading.last is not None:
+        raise InputError(
+            "--last", "come with a store in place of DATA", "DATA are no store",
+            "choose rows with --where, or make a store with 'fastsmooth update'",
+        )  # fmt: skip
+
+
+def check_columns(x: Any, y: Any, weight: object, count: object) -> tuple[str, str]:
+    """Refuse names of columns that are no text; return x and y."""
+    for argument, column in {"--x": x, "--y": y}.items():
+        check_text(argument, column, "name a column of DATA", "name one")
+    for argument, own in {"--weight": weight, "--count": count}.items():
+        if own is not None:
+            check_text(argument, own, "name a column of DATA")
+    return x, y
+
+
+def settings_or_default(argument: str, given: T | None, kind: type[T]) -> T:
     """Return the settings given, or the defaults; refuse another group's."""
     if given is None:
         return kind()
@@ -151,7 +199,8 @@ def _group(argument: str, given: T | None, kind: type[T]) -> T:
     return given
 
 
-def _criterion(reading: Reading, smoothing: Smoothing) -> str:
+def criterion_of(reading: Reading, smoothing: Smoothing) -> str:
+    """Return the criterion that chooses the width; refuse one that the blocks do not suit."""
     if smoothing.criterion == "leave-block-out" and reading.block is None:
         raise InputError(
             "--criterion leave-block-out", "come with --block", "no block is given",
@@ -162,10 +211,21 @@ def _criterion(reading: Reading, smoothing: Smoothing) -> str:
     return "leave-one-out" if reading.block is None else "leave-block-out"
 
 
-def _check_band(smoothing: Smoothing, band: Band) -> None:
+def check_band(smoothing: Smoothing, band: Band) -> None:
     """Refuse a band for the whole curve with a kernel that jumps: its weights turn without end."""
     from fastsmooth.kernels.shapes import SHAPES
 
+    nearest = smoothing.estimator == NEAREST
+    if nearest and (band.landmarks or band.crossings):
+        raise InputError(
+            "--landmarks and --crossing", f"be left out with --estimator {NEAREST}",
+            "its curve is made of steps", "take another estimator",
+        )  # fmt: skip
+    if nearest and band.kind == "simultaneous":
+        raise InputError(
+            "--band simultaneous", f"be left out with --estimator {NEAREST}",
+            "its curve is made of steps", "take another estimator",
+        )  # fmt: skip
     if band.kind == "simultaneous" and SHAPES[smoothing.kernel].smoothness == 0:
         raise InputError(
             "--band simultaneous", "come with a kernel without a jump",
@@ -173,7 +233,7 @@ def _check_band(smoothing: Smoothing, band: Band) -> None:
         )  # fmt: skip
 
 
-def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> float | None:
+def own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> float | None:
     """The caller's bandwidth on the plan's scale."""
     if smoothing.bandwidth is None:
         return None
@@ -190,7 +250,7 @@ def _own_bandwidth(source: Source, reading: Reading, smoothing: Smoothing) -> fl
     return width
 
 
-def _check_width(width: float, table: BinTable) -> None:
+def check_width(width: float, table: BinTable) -> None:
     """Refuse a width that no arithmetic resolves; one far beyond the range fits a line."""
     low, high = table.extent.tolist()
     received = ""
@@ -205,7 +265,7 @@ def _check_width(width: float, table: BinTable) -> None:
         )  # fmt: skip
 
 
-def _own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
+def own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
     """The caller's points on the plan's scale, ascending."""
     if band.at is None:
         return None
@@ -219,28 +279,34 @@ def _own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
     return places
 
 
-def _count_and_search(
+def count_and_search(
     source: Source,
     reading: Reading,
     smoothing: Smoothing,
     fixed: float | None,
     places: Floats | None,
     progress: Progress,
+    counting: Counting = count_pass,
 ) -> Chosen:
     """Read and search; read again with finer bins while the chosen width asks for them."""
-    counted = count_rows(source, reading, progress)
+    counted = count_rows(source, reading, progress, counting)
     shape = SHAPES[smoothing.kernel]
+    search = partial(
+        search_table, criterion=criterion_of(reading, smoothing),
+        by_block=reading.block is not None, widths=smoothing.widths, threads=reading.threads,
+    )  # fmt: skip
+    if smoothing.estimator == NEAREST:
+        return _search_neighbours(source, counted, reading, smoothing, places, progress)
+    engine, reason = choose_engine(
+        smoothing.engine, smoothing.kernel, counted.table, smoothing.memory_gigabytes
+    )
     fine = shape.fewest_bins_per_bandwidth
     for tried in range(1, _MOST_SEARCHES + 1):
         progress("searching", 0, None)
         pyramid = Pyramid(counted.table)
-        found = search_table(
-            counted.table, pyramid, shape, criterion=_criterion(reading, smoothing),
-            by_block=reading.block is not None, widths=smoothing.widths,
-            threads=reading.threads,
-        )  # fmt: skip
+        found = search(counted.table, pyramid, shape)
         if fixed is not None:
-            _check_width(fixed, counted.table)
+            check_width(fixed, counted.table)
         bandwidth = fixed or found.trails[smoothing.estimator].bandwidth
         plan = counted.table.plan
         if bandwidth >= fine * plan.width or tried == _MOST_SEARCHES:
@@ -251,5 +317,40 @@ def _count_and_search(
         low, high = counted.table.extent.tolist()
         if (high - low) / bins > 0.8 * plan.width:
             break
-        counted = count_finer(source, counted, reading, bins, progress)
-    return Chosen(counted, pyramid, found, shape, bandwidth, places)
+        counted = count_finer(source, counted, reading, bins, progress, counting)
+    if engine == "binned":
+        return Chosen(counted, pyramid, found, shape, bandwidth, places, engine_reason=reason)
+    rows = gather_rows(source, counted.table, reading, progress)
+    progress("searching", 0, None)
+    scoring = ExactScoring(counted.table, pyramid, shape, rows)
+    found = search(counted.table, pyramid, shape, scoring=scoring)
+    bandwidth = fixed or found.trails[smoothing.estimator].bandwidth
+    return Chosen(counted, pyramid, found, shape, bandwidth, places, rows, reason)
+
+
+def _search_neighbours(
+    source: Source,
+    counted: Counted,
+    reading: Reading,
+    smoothing: Smoothing,
+    places: Floats | None,
+    progress: Progress,
+) -> Chosen:
+    """Read the rows into memory and search the number of neighbours."""
+    check_memory(
+        f"--estimator {NEAREST}", "another estimator", counted.table, smoothing.memory_gigabytes
+    )
+    near = Neighbours.of(gather_rows(source, counted.table, reading, progress))
+    if smoothing.neighbours is not None and smoothing.neighbours >= near.rows.total:
+        raise InputError(
+            "--neighbours", f"be below the number of rows, {near.rows.total:g}",
+            f"it is {smoothing.neighbours}", "lower it, or leave it out",
+        )  # fmt: skip
+    progress("searching", 0, None)
+    found = search_neighbours(
+        near, criterion=criterion_of(reading, smoothing), by_block=reading.block is not None,
+        widths=smoothing.widths, threads=reading.threads,
+    )  # fmt: skip
+    k = float(smoothing.neighbours or found.trails[NEAREST].bandwidth)
+    pyramid = Pyramid(counted.table)
+    return Chosen(counted, pyramid, found, SHAPES["uniform"], k, places, near.rows, near=near)

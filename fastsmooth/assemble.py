@@ -6,13 +6,13 @@ import json
 import math
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
-from functools import lru_cache
+from functools import lru_cache, partial
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.bands import Occupied, Points, estimate_noise, fit_points, values_at
+from fastsmooth.bands import Noise, Occupied, Points, estimate_noise, fit_points, values_at
 from fastsmooth.bintable import Level, Pyramid
 from fastsmooth.cautions import (
     about_curve,
@@ -21,12 +21,25 @@ from fastsmooth.cautions import (
     standardised_residuals,
 )
 from fastsmooth.curve import EDGE, OK, Curve, Density
+from fastsmooth.exact import ExactScoring, Rows, cut_width, fit_exactly
 from fastsmooth.fitness import fit_facts
+from fastsmooth.foldcurves import FoldCurves
+from fastsmooth.jackknife import keep_fold_curves
 from fastsmooth.landmarks import find_landmarks
+from fastsmooth.localweights import kind_of_centre
+from fastsmooth.nearest import (
+    Neighbours,
+    NeighbourScoring,
+    neighbour_facts,
+    neighbour_noise,
+    neighbour_points,
+    sample_residuals,
+)
 from fastsmooth.passes import Counted
+from fastsmooth.scoring import BinnedScoring
 from fastsmooth.search import left_out_error
 from fastsmooth.serial import serial_facts
-from fastsmooth.settings import Band, Reading, Smoothing
+from fastsmooth.settings import NEAREST, Band, Reading, Smoothing
 from fastsmooth.smoother import fit_level, least_weight
 from fastsmooth.source import Source
 from fastsmooth.trail import Search, Trail
@@ -39,6 +52,8 @@ Floats = NDArray[np.float64]
 # One curve costs little: finer bins than the search's keep its error down where rows are few.
 _FINER_FOR_CURVE = 4
 _ERROR_MARGIN = 8.0
+# Rounding of sums of y - reference, in units of the last place.
+_ROUNDINGS = 16.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
 _SUPPORT_POINTS = 256
@@ -62,6 +77,12 @@ class Chosen:
         On the plan's scale.
     places : (n,) float64 or None
         The caller's own points, on the plan's scale.
+    rows : Rows or None
+        Sorted rows for the exact engine; None for the binned one.
+    engine_reason : str
+        Why this engine ran.
+    near : Neighbours or None
+        Rows in groups for the estimator ``nearest``; `bandwidth` is then the number of rows.
     """
 
     counted: Counted
@@ -70,19 +91,109 @@ class Chosen:
     shape: Shape
     bandwidth: float
     places: Floats | None
+    rows: Rows | None = None
+    engine_reason: str = "asked for"
+    near: Neighbours | None = None
+
+    def scoring(self) -> BinnedScoring:
+        """Return what scores a bandwidth over all rows."""
+        table = self.counted.table
+        if self.rows is None:
+            return BinnedScoring(table, self.pyramid, self.shape)
+        return ExactScoring(table, self.pyramid, self.shape, self.rows)
+
+
+@dataclass(frozen=True)
+class Evaluated:
+    """What an estimator gives for the result.
+
+    Attributes
+    ----------
+    places : (n,) float64
+        Where, on the plan's scale.
+    points : Points
+        Curve and band there.
+    engine : dict
+        How it was computed.
+    fit : dict
+        How well it predicts.
+    landmarks : list of dict or None
+        On the plan's scale.
+    without_folds : FoldCurves or None
+        The curve without each fold.
+    residuals : (rows,) float64
+        Standardised residuals of the sample.
+    """
+
+    places: Floats
+    points: Points
+    engine: dict[str, Any]
+    fit: dict[str, Any]
+    landmarks: list[dict[str, Any]] | None
+    without_folds: FoldCurves | None
+    residuals: Floats
 
 
 def assemble(
     source: Source, chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band
 ) -> Curve:
     """Evaluate the curve and put together everything that belongs to the result."""
+    table, plan = chosen.counted.table, chosen.counted.table.plan
+    log = plan.scale == "log"
+    evaluate = _by_bandwidth if chosen.near is None else _by_neighbours
+    found = evaluate(chosen, reading, smoothing, band)
+    points, sample = found.points, chosen.counted.sample
+    trace: dict[str, Any] = {
+        "settings": _settings(source, chosen, reading, smoothing, band),
+        "rows": table.tally.to_dict(),
+        "blocks": len(table.blocks) if plan.block is not None else None,
+        "files": [asdict(record) for record in source.files],
+        "engine": {k: _finite(v) for k, v in found.engine.items()},
+        "fit": found.fit,
+        "landmarks": None,
+        "plan": json.loads(json.dumps(plan.to_dict())),
+        "versions": dict(_versions()),
+        "serial": serial_facts(found.residuals, sample, table.tally.used),
+    }
+    if found.landmarks is not None:
+        trace["landmarks"] = [_in_axis_terms(mark, log) for mark in found.landmarks]
+    x = np.exp(found.places) if log else found.places
+    per_x = 1.0 / x if log else np.ones_like(x)
+    widths_are_factors = log and chosen.near is None
+    made = Curve(
+        x=x, estimate=points.estimate, slope=points.slope * per_x,
+        slope_std_error=points.slope_std_error * per_x, std_error=points.std_error,
+        lower=points.lower, upper=points.upper, effective_rows=points.effective_rows,
+        status=points.status, residual_sd=points.residual_sd,
+        bandwidth=_in_axis(chosen.bandwidth, widths_are_factors), axis=plan.axis,
+        density=_density(chosen.counted, chosen.pyramid, log),
+        search=_search_in_axis(chosen.search, widths_are_factors), cautions=(), trace=trace,
+        without_folds=found.without_folds,
+    )  # fmt: skip
+    cautions = (
+        *chosen.counted.cautions,
+        *about_rows(table, source),
+        *about_search(made),
+        *about_curve(made, sample, found.residuals),
+    )
+    return replace(made, cautions=cautions)
+
+
+def _places(chosen: Chosen, band: Band) -> Floats:
+    if chosen.places is not None:
+        return chosen.places
+    low, high = chosen.counted.table.extent.tolist()
+    return np.linspace(low, high, band.points)
+
+
+def _by_bandwidth(
+    chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band
+) -> Evaluated:
+    """Evaluate the estimators that have a kernel and a bandwidth."""
     table, shape, bandwidth = chosen.counted.table, chosen.shape, chosen.bandwidth
     plan, pyramid = table.plan, chosen.pyramid
-    log = plan.scale == "log"
     low, high = table.extent.tolist()
-    places = chosen.places
-    if places is None:
-        places = np.linspace(low, high, band.points)
+    places = _places(chosen, band)
     finer = _FINER_FOR_CURVE * shape.bins_per_bandwidth
     level = pyramid.levels[pyramid.level_for(bandwidth, finer)]
     empty = least_weight(pyramid, shape)
@@ -90,39 +201,35 @@ def assemble(
     fits = fit_level(level, shape, bandwidth, empty)
     noise = estimate_noise(fits, estimator, shape, band.noise)
     occupied = Occupied(plan.origin, plan.width, np.flatnonzero(pyramid.levels[0].first[0]))
+    exact, rows = None, chosen.rows
+    if rows is not None:
+        exact = partial(
+            fit_exactly, rows=rows, variance=noise.at(rows.x, level), shape=shape,
+            bandwidth=cut_width(bandwidth, table), threads=reading.threads,
+        )  # fmt: skip
 
     def evaluate(at: Floats, as_band: Band) -> Points:
         return fit_points(
             at, fits, noise, shape, estimator=estimator, reference=plan.reference, band=as_band,
-            by_block=plan.block is not None, extent=(low, high), occupied=occupied,
+            by_block=plan.block is not None, extent=(low, high), occupied=occupied, exact=exact,
         )  # fmt: skip
 
     points = evaluate(places, band)
-    error = _binning_error(points, places, level, bandwidth, shape, estimator, plan.reference)
-    trail = chosen.search.trails[estimator]
-    score = trail.score
+    error = 0.0
+    if rows is None:
+        error = binning_error(points, places, level, bandwidth, shape, estimator, plan.reference)
+    score = chosen.search.trails[estimator].score
     if smoothing.bandwidth is not None:
         by_fold = chosen.search.criterion == "leave-block-out"
-        score = left_out_error(pyramid, shape, bandwidth, estimator, by_fold=by_fold)
-    fit = fit_facts(fits, estimator, score, plan.reference)
+        score = left_out_error(chosen.scoring(), bandwidth, estimator, by_fold=by_fold)
     engine = {
-        "name": "binned", "bins": plan.bins, "bins_per_bandwidth": bandwidth / plan.width,
+        "name": "binned" if rows is None else "exact", "reason": chosen.engine_reason,
+        "bins": plan.bins, "bins_per_bandwidth": bandwidth / plan.width,
         "fewest_bins_per_bandwidth": shape.fewest_bins_per_bandwidth,
         "level_bins_per_bandwidth": bandwidth / level.width, "passes": chosen.counted.passes,
-        "error_in_noise_sd": error,
-        "residual_sd": math.sqrt(noise.overall) if noise.overall > 0.0 else 0.0,
+        "error_in_noise_sd": error, "residual_sd": _residual_sd(noise),
     }  # fmt: skip
-    trace: dict[str, Any] = {
-        "settings": _settings(source, chosen, reading, smoothing, band),
-        "rows": table.tally.to_dict(),
-        "blocks": len(table.blocks) if plan.block is not None else None,
-        "files": [asdict(record) for record in source.files],
-        "engine": {k: _finite(v) for k, v in engine.items()},
-        "fit": fit,
-        "landmarks": None,
-        "plan": json.loads(json.dumps(plan.to_dict())),
-        "versions": dict(_versions()),
-    }
+    landmarks = None
     if band.landmarks or band.crossings:
         grid, on_grid = places, points
         if chosen.places is not None:
@@ -134,28 +241,62 @@ def assemble(
             estimator=estimator, reference=plan.reference, confidence=band.level,
             crossings=band.crossings,
         )  # fmt: skip
-        trace["landmarks"] = [_in_axis_terms(mark.to_dict(), log) for mark in marks]
-    x = np.exp(places) if log else places
-    per_x = 1.0 / x if log else np.ones_like(x)
-    made = Curve(
-        x=x, estimate=points.estimate, slope=points.slope * per_x,
-        slope_std_error=points.slope_std_error * per_x, std_error=points.std_error,
-        lower=points.lower, upper=points.upper, effective_rows=points.effective_rows,
-        status=points.status, residual_sd=points.residual_sd,
-        bandwidth=_in_axis(bandwidth, log), axis=plan.axis,
-        density=_density(chosen.counted, pyramid, log),
-        search=_search_in_axis(chosen.search, log), cautions=(), trace=trace,
+        landmarks = [mark.to_dict() for mark in marks]
+    without_folds = None
+    if band.keep_folds and len(table.sums) > 1:
+        without_folds = keep_fold_curves(
+            places, pyramid, sorted(table.sums), shape, bandwidth,
+            kind_of_centre(estimator, band.bias),
+        )  # fmt: skip
+    return Evaluated(
+        places, points, engine, fit_facts(fits, estimator, score, plan.reference), landmarks,
+        without_folds,
+        standardised_residuals(fits, noise, estimator, plan.reference, chosen.counted.sample),
     )  # fmt: skip
-    sample = chosen.counted.sample
-    residuals = standardised_residuals(fits, noise, estimator, plan.reference, sample)
-    trace["serial"] = serial_facts(residuals, sample, table.tally.used)
-    cautions = (
-        *chosen.counted.cautions,
-        *about_rows(table, source),
-        *about_search(made),
-        *about_curve(made, sample, residuals),
-    )
-    return replace(made, cautions=cautions)
+
+
+def _by_neighbours(
+    chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band
+) -> Evaluated:
+    """Evaluate the mean of the nearest rows."""
+    table, near = chosen.counted.table, chosen.near
+    assert near is not None
+    plan, k = table.plan, round(chosen.bandwidth)
+    noise, level = neighbour_noise(near, k, table, chosen.pyramid, band.noise)
+    places = _places(chosen, band)
+    points, left_out, centre = neighbour_points(
+        places, near, k, noise, level, reference=plan.reference, band=band,
+        by_block=plan.block is not None,
+    )  # fmt: skip
+    trail = chosen.search.trails[smoothing.estimator]
+    score, trace = trail.score, trail.trace
+    if smoothing.neighbours is not None:
+        scoring = NeighbourScoring(near)
+        trace = scoring.trace(k)
+        by_fold = chosen.search.criterion == "leave-block-out"
+        score = (
+            scoring.left_out_points([float(k)], map)[0][0][NEAREST].criteria["leave-block-out"]
+            if by_fold
+            else scoring.value(k, k, NEAREST, "leave-one-out")
+        )
+    engine = {
+        "name": "exact", "reason": "nearest rows are found among all rows",
+        "bins": plan.bins, "passes": chosen.counted.passes, "error_in_noise_sd": 0.0,
+        "residual_sd": _residual_sd(noise),
+    }  # fmt: skip
+    without_folds = None
+    if band.keep_folds and len(table.sums) > 1:
+        without_folds = FoldCurves.of(
+            np.array(sorted(table.sums), np.int64), centre, left_out.degrees, left_out.moved,
+            left_out.shares,
+        )  # fmt: skip
+    residuals = sample_residuals(near, k, noise, level, plan.reference, chosen.counted.sample)
+    fit = neighbour_facts(near, k, score, trace, plan.reference)
+    return Evaluated(places, points, engine, fit, None, without_folds, residuals)
+
+
+def _residual_sd(noise: Noise) -> float:
+    return math.sqrt(noise.overall) if noise.overall > 0.0 else 0.0
 
 
 def _settings(
@@ -168,8 +309,9 @@ def _settings(
         "count": plan.columns.count, "x_unit": source.x_unit, "y_unit": source.y_unit,
         "where": reading.where, "range": _plain_range(reading), "scale": plan.scale,
         "estimator": smoothing.estimator, "kernel": smoothing.kernel,
-        "criterion": chosen.search.criterion, "block": plan.block,
+        "criterion": chosen.search.criterion, "block": plan.block, "engine": smoothing.engine,
         "bandwidth": _in_axis(chosen.bandwidth, plan.scale == "log") if own else None,
+        "neighbours": smoothing.neighbours,
         "widths": smoothing.widths, "level": band.level, "band": band.kind, "bias": band.bias,
         "noise": band.noise, "least_rows": band.least_rows, "folds": plan.folds,
         "points": band.points, "at": None if band.at is None else [str(one) for one in band.at],
@@ -188,7 +330,7 @@ def _in_axis_terms(mark: dict[str, Any], log: bool) -> dict[str, Any]:
     return {k: math.exp(v) if log and k in places and v is not None else v for k, v in mark.items()}
 
 
-def _binning_error(
+def binning_error(
     points: Points,
     places: Floats,
     level: Level,
@@ -197,19 +339,42 @@ def _binning_error(
     estimator: str,
     reference: float,
 ) -> float:
-    """Estimated error of the binned sums, in residual standard deviations.
+    """Return an estimate of the curve's error from binning, in residual standard deviations.
 
     The difference to a table of half as many bins, divided by what the order of the error allows
     (Richardson's argument: the error falls by at least two to the power smoothness + 1, up to
-    three), times a margin, because the difference may be small by chance.
+    three), times a margin, because the difference may be small by chance. To it comes the rounding
+    of the sums and of their result: where all rows of a bin share one x, nothing else is left.
+    `bench/results/errors.md` says how often the estimate bounds the error, and how far it lies
+    above it.
+
+    Parameters
+    ----------
+    points : Points
+        The curve at the places, from the level's bins.
+    places : (n,) float64
+        On the plan's scale.
+    level : Level
+        Bins that made the curve.
+    bandwidth : float
+        On the plan's scale.
+    shape : Shape
+        Kernel function.
+    estimator : str
+        ``local-linear`` or ``local-constant``.
+    reference : float
+        The plan's reference.
     """
     coarse = values_at(places, level.coarser(), bandwidth, shape, estimator) + reference
     both = np.isfinite(points.estimate) & np.isfinite(coarse) & (points.residual_sd > 0.0)
     if not both.any():
         return math.nan
-    away = np.abs(points.estimate - coarse)[both] / points.residual_sd[both]
+    estimate, sd = points.estimate[both], points.residual_sd[both]
     order = min(shape.smoothness + 1, 3)
-    return _ERROR_MARGIN * float(away.max()) / (2.0**order - 1.0)
+    away = _ERROR_MARGIN / (2.0**order - 1.0) * np.abs(estimate - coarse[both])
+    summed = np.abs(estimate - reference) + sd
+    rounding = np.finfo(float).eps * (np.abs(estimate) + _ROUNDINGS * summed)
+    return float(((away + rounding) / sd).max())
 
 
 def _in_axis(bandwidth: float, log: bool) -> float:

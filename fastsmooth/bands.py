@@ -14,9 +14,10 @@ from fastsmooth.curve import EDGE, FEWEST_FOLDS, OK, OUTSIDE, THIN
 from fastsmooth.jackknife import leave_out_folds
 from fastsmooth.localweights import (
     CONSTANT,
+    DEGREES,
     LINE,
-    PARABOLA,
     PointSums,
+    kind_of_centre,
     slope_of,
     slope_weights,
     sums_at,
@@ -26,6 +27,9 @@ from fastsmooth.settings import Band
 from fastsmooth.smoother import Fits, chords_of, kernel_sums, width_in_bins
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from fastsmooth.exact import ExactFits
     from fastsmooth.kernels.shapes import Shape
 
 Floats = NDArray[np.float64]
@@ -37,9 +41,9 @@ _VARIANCE_BINS_PER_BANDWIDTH = 16
 # Chords between the weights of neighbouring points follow their path this closely.
 _POINTS_PER_BANDWIDTH = 10
 _MOST_POINTS = 2000
-_LEAST_DEGREES = 2.0
+LEAST_DEGREES = 2.0
 # With fewer, some block or two make the fit: its error from folds is hardly known.
-_FEWEST_DEGREES = 4.0
+FEWEST_DEGREES = 4.0
 
 
 @dataclass(frozen=True)
@@ -62,6 +66,14 @@ class Noise:
     degrees: Floats
     overall: float
     bandwidth: float | None
+
+    def at(self, x: Floats, level: Level) -> Floats:
+        """Return the variance at x (plan's scale), between bin centres on a straight line."""
+        return np.interp(_in_bins(x, level), np.arange(level.bins) + 0.5, self.variance)
+
+    def degrees_at(self, x: Floats, level: Level) -> Floats:
+        """Return the degrees of freedom of that variance."""
+        return np.interp(_in_bins(x, level), np.arange(level.bins) + 0.5, self.degrees)
 
 
 class Points(NamedTuple):
@@ -98,31 +110,50 @@ def estimate_noise(fits: Fits, estimator: str, shape: Shape, kind: str) -> Noise
     kind : str
         ``local`` or ``constant``.
     """
-    level = fits.level
     squared, expected = _squared_residuals(fits, estimator, shape)
+    return smooth_noise(squared, expected, fits.bandwidth_bins, shape, kind)
+
+
+def smooth_noise(
+    squared: Floats, expected: Floats, bandwidth_bins: float, shape: Shape, kind: str
+) -> Noise:
+    """Estimate the residual variance along x from squared residuals.
+
+    Parameters
+    ----------
+    squared, expected : (groups, bins) float64
+        Sums of squared residuals per group of folds, and what they would be for a variance of 1.
+    bandwidth_bins : float
+        The curve's own bandwidth, in bins.
+    shape : Shape
+        Kernel function.
+    kind : str
+        ``local`` or ``constant``.
+    """
+    bins = squared.shape[1]
     total = squared.sum(axis=0)
     room = float(expected.sum())
     overall = float(total.sum()) / room if room > 0.0 else np.nan
     if kind == "constant" or not room > 0.0:
-        return Noise(np.full(level.bins, overall), np.full(level.bins, room), overall, None)
+        return Noise(np.full(bins, overall), np.full(bins, room), overall, None)
     # Fewer bins suffice for a variance: at least sixteen to a bandwidth.
     step = 1
     while (
-        fits.bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH
-        and level.bins % (2 * step) == 0
+        bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH
+        and bins % (2 * step) == 0
     ):
         step *= 2
     groups = squared.reshape(squared.shape[0], -1, step).sum(axis=2)
     weights = expected.reshape(expected.shape[0], -1, step).sum(axis=2)
-    own = fits.bandwidth_bins / step
+    own = bandwidth_bins / step
     multiple = _choose_multiple(groups, weights, shape, own)
     width = multiple * own
     variance, degrees = _smooth_variance(groups.sum(axis=0), weights.sum(axis=0), shape, width)
     known = np.flatnonzero(np.isfinite(variance) & (variance > 0.0))
     if not known.size:
-        return Noise(np.full(level.bins, overall), np.full(level.bins, room), overall, None)
+        return Noise(np.full(bins, overall), np.full(bins, room), overall, None)
     coarse = (np.arange(variance.shape[0]) + 0.5) * step
-    centres = np.arange(level.bins) + 0.5
+    centres = np.arange(bins) + 0.5
     return Noise(
         np.interp(centres, coarse[known], variance[known]),
         np.interp(centres, coarse[known], degrees[known]),
@@ -228,6 +259,7 @@ def fit_points(
     by_block: bool,
     extent: tuple[float, float],
     occupied: Occupied,
+    exact: Callable[[Floats, int], ExactFits] | None = None,
 ) -> Points:
     """Evaluate curve, slope and band.
 
@@ -256,39 +288,50 @@ def fit_points(
         Lowest and highest x of the data, on the scale.
     occupied : Occupied
         Which bins of the finest level hold rows.
+    exact : callable or None
+        Fits of a degree at places from the rows themselves, in place of the bins'.
     """
     level, h = fits.level, fits.bandwidth_bins
     places = _in_bins(x, level)
     sums = _all_sums(places, fits, noise, shape)
     own = CONSTANT if estimator == "local-constant" else LINE
-    centred = PARABOLA if band.bias == "corrected" else own
+    centred = kind_of_centre(estimator, band.bias)
     used, middle = weights_of(sums.s, h, own), weights_of(sums.s, h, centred)
     status = _support(x, shape.reach * h * level.width, extent, occupied)
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         estimate, centre = used.apply(sums.t), middle.apply(sums.t)
         effective = 1.0 / used.variance(sums.u)
-        centres = np.arange(level.bins) + 0.5
-        spread = np.sqrt(np.interp(places, centres, noise.variance))
+        spread = np.sqrt(noise.at(x, level))
         if by_block:
             left_out = leave_out_folds(places, level, shape, h, centred)
             std_error, degrees = left_out.std_error, left_out.degrees
             slope_error = left_out.slope_std_error
         else:
             std_error = np.sqrt(middle.variance(sums.v))
-            degrees = np.interp(places, centres, noise.degrees)
+            degrees = noise.degrees_at(x, level)
             slope_error = np.sqrt(slope_weights(sums.s, h).variance(sums.v))
+        slope = slope_of(sums, shape, h, estimator) / level.width
+        if exact is not None:
+            at_own = exact(x, DEGREES[own])
+            at_centre = at_own if centred == own else exact(x, DEGREES[centred])
+            estimate, effective = at_own.value, 1.0 / at_own.squares
+            borne = (centred == own) | (at_centre.degree == DEGREES[centred])
+            centre = np.where(borne, at_centre.value, np.nan)
+            if own == LINE:
+                slope = np.where(at_own.degree == DEGREES[LINE], at_own.slope, np.nan)
+            if not by_block:
+                std_error = np.where(borne, np.sqrt(at_centre.variance), np.nan)
     status[~np.isfinite(estimate)] = OUTSIDE
     thin = ~(effective >= band.least_rows)
     if by_block:
-        thin |= (left_out.folds_met < FEWEST_FOLDS) | (degrees < _FEWEST_DEGREES)
+        thin |= (left_out.folds_met < FEWEST_FOLDS) | (degrees < FEWEST_DEGREES)
     status[(status != OUTSIDE) & thin] = THIN
     value = pointwise_value(band.level, degrees)
     if band.kind == "simultaneous":
         value = _value_for_all(x, status, degrees, fits, noise, shape, centred, band, by_block)
     with np.errstate(invalid="ignore"):
         # With fewer degrees of freedom t quantiles say more about t than about the data.
-        half = np.where(degrees >= _LEAST_DEGREES, value * std_error, np.nan)
-    slope = slope_of(sums, shape, h, estimator) / level.width
+        half = np.where(degrees >= LEAST_DEGREES, value * std_error, np.nan)
     if estimator == "local-constant":
         slope_error = np.full_like(slope_error, np.nan)
     columns = [estimate + reference, slope, slope_error / level.width, std_error]
@@ -354,7 +397,7 @@ def _value_for_all(
             moved.append(left_out.moved)
             chords.append(chords_of_path(left_out.moved))
             # Between two points that count there may be a place that would not.
-            along = np.maximum(left_out.degrees, _FEWEST_DEGREES)
+            along = np.maximum(left_out.degrees, FEWEST_DEGREES)
         else:
             chords.append(_weight_chords(places, fits, noise, shape, kind))
             # One scale for all: a constant variance has the same degrees everywhere.

@@ -77,6 +77,12 @@ class Tally:
         }
 
 
+def sum_names(plan: Plan) -> dict[str, int]:
+    """Return the names of the sums in tables of a plan, each with its slot, in order."""
+    names = _PLAIN_NAMES if plan.columns.weight is None else _WEIGHTED_NAMES
+    return {name: slot for slot, name in enumerate(names) if name}
+
+
 class BinTable:
     """Moment sums of rows per fold and bin; see `fastsmooth.kernels.accumulate` for the sums.
 
@@ -137,7 +143,7 @@ class BinTable:
         self.tally.add(Tally(chunk.rows, chunk.filtered, dict(chunk.refused)))
         x, y, weight, count = chunk.x, chunk.y, chunk.weight, chunk.count
         if dealer is None:
-            stretches = self._run_stretches(task_index, row_in_task, x.shape[0])
+            stretches = self.plan.run_stretches(task_index, row_in_task, x.shape[0])
         else:
             per_row, keys = dealer.deal(chunk.extra[0])
             self.blocks = merge_keys(self.blocks, keys)
@@ -158,19 +164,6 @@ class BinTable:
                     None if weight is None else weight[start:stop],
                     None if count is None else count[start:stop], tallied=True,
                 )  # fmt: skip
-
-    def _run_stretches(self, task_index: int, row: int, rows: int) -> list[tuple[int, int, int]]:
-        """Fold, first and last row (exclusive) of the runs in a chunk that begins at a row."""
-        # Plain integers: this is done for every chunk, and arrays of two items cost more.
-        length = self.plan.rows_per_run
-        stretches = []
-        start = 0
-        while start < rows:
-            run, within = divmod(row + start, length)
-            stop = min(rows, start + length - within)
-            stretches.append((self.plan.fold_of_run(task_index, run), start, stop))
-            start = stop
-        return stretches
 
     def add_rows(
         self,
@@ -199,11 +192,7 @@ class BinTable:
 
         if not tallied:
             self.tally.read += x.shape[0]
-        table = self.sums.get(fold)
-        if table is None:
-            table = np.zeros((self.plan.bins, self.slots))
-            table[:, _PILOT] = self.plan.pilot_per_bin
-            self.sums[fold] = table
+        table = self.of_fold(fold)
         if self.plan.scale == "log":
             none = x <= 0.0
             self.tally.refuse("x not positive", int(np.count_nonzero(none)))
@@ -225,6 +214,15 @@ class BinTable:
         if refused.any():
             for reason, rows in zip(accumulate.REASONS, refused.tolist(), strict=True):
                 self.tally.refuse(reason, rows)
+
+    def of_fold(self, fold: int) -> Floats:
+        """Return the sums of one fold, (bins, slots), to be added to; empty at first."""
+        table = self.sums.get(fold)
+        if table is None:
+            table = np.zeros((self.plan.bins, self.slots))
+            table[:, _PILOT] = self.plan.pilot_per_bin
+            self.sums[fold] = table
+        return table
 
     def merge(self, other: BinTable) -> None:
         """Add another table of the same plan to this one; the other is left as it was.
@@ -251,7 +249,9 @@ class BinTable:
         for fold in sorted(other.sums):
             mine = self.sums.get(fold)
             if mine is None:
-                self.sums[fold] = other.sums[fold].copy()
+                # A fold of which every row was refused is no part of the data.
+                if other.sums[fold][bins, 0].any():
+                    self.sums[fold] = other.sums[fold].copy()
                 continue
             # Sums that overflow are refused once all rows are in.
             with np.errstate(over="ignore", invalid="ignore"):

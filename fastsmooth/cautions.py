@@ -22,7 +22,8 @@ _MANY_REFUSED = 0.05
 _MANY_ALIKE = 0.0001
 _STANDS_OUT = 0.2
 # At the narrowest width one row in a hundred may be alone by chance.
-_MANY_ALONE = 0.02
+# The narrowest width leaves up to one row in twenty without three others, by its definition.
+_MANY_ALONE = 0.03
 _HEAVY_FOLD = 0.5
 _CORRELATION_WORTH_TELLING = 0.1
 _FAR_OUT_SD = 10.0
@@ -63,28 +64,29 @@ def about_search(made: Curve) -> Iterator[Caution]:
     settings = made.trace["settings"]
     trail = made.search.trails[settings["estimator"]]
     criterion = made.search.criterion
-    label = made.width_label
+    label, word = made.width_label, made.width_word
+    option = "--neighbours" if made.by_neighbours else "--bandwidth"
     low, high = trail.flat_zone
-    if settings["bandwidth"] is not None:
+    if made.width_given:
         if not low <= made.bandwidth <= high:
             yield Caution(
                 "width outside the flat zone",
-                f"The given bandwidth {label(made.bandwidth)} lies outside the flat zone "
+                f"The given {word} {label(made.bandwidth)} lies outside the flat zone "
                 f"{label(low)} to {label(high)} of {criterion}; its choice is "
                 f"{label(trail.bandwidth)}.",
             )
     elif trail.at_low_end:
         yield Caution(
             "width at the lower end",
-            f"The best bandwidth {label(trail.bandwidth)} is the narrowest searched. Rows that "
+            f"The best {word} {label(trail.bandwidth)} is the narrowest searched. Rows that "
             f"repeat each other (serial correlation, duplicated files, --count) or a coarsely "
-            f"rounded x drive it there: give --block, give --bandwidth, or thin the rows.",
+            f"rounded x drive it there: give --block, give {option}, or thin the rows.",
         )
     elif trail.at_high_end:
         shape = "a straight line" if settings["estimator"] == "local-linear" else "a constant"
         yield Caution(
             "width at the upper end",
-            f"The best bandwidth {label(trail.bandwidth)} is the widest searched: within the noise "
+            f"The best {word} {label(trail.bandwidth)} is the widest searched: within the noise "
             f"the data look like {shape}.",
         )
     if trail.minima > 1:
@@ -96,7 +98,7 @@ def about_search(made: Curve) -> Iterator[Caution]:
     if trail.is_flat:
         yield Caution(
             "flat criterion",
-            "Every bandwidth searched is within one standard error of the best: the data do not "
+            f"Every {word} searched is within one standard error of the best: the data do not "
             "say how much to smooth.",
         )
     if made.search.rows_alone > _MANY_ALONE * made.trace["rows"]["used"]:
@@ -105,14 +107,15 @@ def about_search(made: Curve) -> Iterator[Caution]:
         yield Caution(
             "rows alone",
             f"{made.search.rows_alone:,.0f} rows have no neighbour{of_others} within the narrowest "
-            f"width and took no part in the choice of the bandwidth.",
+            f"width and took no part in the choice of the {word}.",
         )
 
 
 def about_curve(made: Curve, sample: Sample, residuals: Floats) -> Iterator[Caution]:
     """Yield cautions about the curve itself; `residuals` are the sample's, standardised."""
     engine = made.trace["engine"]
-    if engine["bins_per_bandwidth"] < 0.99 * engine["fewest_bins_per_bandwidth"]:
+    binned = engine["name"] == "binned"
+    if binned and engine["bins_per_bandwidth"] < 0.99 * engine["fewest_bins_per_bandwidth"]:
         error = engine["error_in_noise_sd"]
         told = "cannot be told" if error is None else f"is about {error:.1g} residual deviations"
         yield Caution(

@@ -13,6 +13,8 @@ from numpy.typing import NDArray
 
 from fastsmooth.axis import Axis
 from fastsmooth.errors import InputError, WriteError
+from fastsmooth.foldcurves import FoldCurves
+from fastsmooth.settings import NEAREST
 from fastsmooth.trail import Search
 
 if TYPE_CHECKING:
@@ -112,7 +114,8 @@ class Curve:
     residual_sd : (n,) float64
         Standard deviation of single rows around the curve.
     bandwidth : float
-        In axis floats; a factor on a log scale (2.0: from half to twice x).
+        In axis floats; a factor on a log scale (2.0: from half to twice x); the number of rows
+        with the estimator ``nearest``.
     axis : Axis
         What the floats of x mean.
     density : Density
@@ -123,6 +126,8 @@ class Curve:
         What the reader must know.
     trace : dict
         Everything needed to make the curve again: files, row counts, plan, settings, versions.
+    without_folds : FoldCurves or None
+        How the band's centre moves without each fold, for comparisons; None if it was not kept.
     """
 
     x: Floats
@@ -141,6 +146,7 @@ class Curve:
     search: Search
     cautions: tuple[Caution, ...]
     trace: dict[str, Any]
+    without_folds: FoldCurves | None = None
 
     @property
     def settings(self) -> dict[str, Any]:
@@ -152,8 +158,31 @@ class Curve:
         """``linear`` or ``log``."""
         return str(self.trace["settings"]["scale"])
 
+    @property
+    def by_neighbours(self) -> bool:
+        """Whether the window is a number of rows: `bandwidth` and the search then hold that."""
+        return bool(self.trace["settings"]["estimator"] == NEAREST)
+
+    @property
+    def width_word(self) -> str:
+        """What the width of the window is called."""
+        return "number of neighbours" if self.by_neighbours else "bandwidth"
+
+    @property
+    def width_given(self) -> bool:
+        """Whether the caller gave the width."""
+        told = self.trace["settings"]
+        return told["bandwidth"] is not None or told.get("neighbours") is not None
+
+    @property
+    def widths_are_factors(self) -> bool:
+        """Whether widths are factors of x."""
+        return self.scale == "log" and not self.by_neighbours
+
     def width_label(self, width: float) -> str:
-        """Write a bandwidth for people: in units of x, or as a factor on a log scale."""
+        """Write a width for people: in units of x, as a factor on a log scale, or in rows."""
+        if self.by_neighbours:
+            return f"{width:,.0f} rows"
         return f"factor {width:.4g}" if self.scale == "log" else self.axis.width_label(width)
 
     @property
@@ -236,6 +265,7 @@ class Curve:
             "search": self.search.to_dict(),
             "cautions": [caution._asdict() for caution in self.cautions],
             "trace": self.trace,
+            "without_folds": None if self.without_folds is None else self.without_folds.to_dict(),
         }
 
     @classmethod
@@ -260,16 +290,37 @@ class Curve:
                 "make the curve again with this version",
             )  # fmt: skip
         values = {column: table[column].to_numpy().astype(np.float64) for column in VALUES}
+        status = np.array([STATUSES.index(one) for one in table["status"].to_pylist()], np.int64)
+        return cls.from_parts(told, values, status)
+
+    @classmethod
+    def from_parts(
+        cls, told: dict[str, Any], values: dict[str, Floats], status: NDArray[np.int64]
+    ) -> Curve:
+        """Build a curve from what `to_dict` returned and the columns of its table.
+
+        Parameters
+        ----------
+        told : dict
+            See `to_dict`.
+        values : dict of str to (n,) float64
+            The columns named in `VALUES`.
+        status : (n,) int64
+            Index into `STATUSES`.
+        """
+        # Curves written before deviations were kept have none.
+        kept = told.get("without_folds")
         return cls(
             x=np.array(told["x_floats"], np.float64),
             **values,
-            status=np.array([STATUSES.index(one) for one in table["status"].to_pylist()], np.int64),
+            status=status,
             bandwidth=told["bandwidth"],
             axis=Axis.from_dict(told["axis"]),
             density=Density.from_dict(told["density"]),
             search=Search.from_dict(told["search"]),
             cautions=tuple(Caution(**one) for one in told["cautions"]),
             trace=told["trace"],
+            without_folds=None if kept is None else FoldCurves.from_dict(kept),
         )
 
     def save(self, path: Any) -> None:

@@ -54,16 +54,36 @@ def fit_facts(
     residual = level.first[3] - (value - level.pilot) * level.first[0] - slope * level.first[1]
     total = float(residual[known].sum())
     rows = float(level.count.sum())
-    freedom = n * (1.0 - scores.trace / rows)
-    mean += reference
-    usable = freedom > 0.0 and mean != 0.0
+    return facts_of(
+        n, scores.trace * n / rows, left_out_error=left_out_error, mean_y=mean + reference,
+        variance=variance, sum_residuals=total, sum_squared_residuals=scores.residual,
+    ) | {"equivalent_parameters": scores.trace}  # fmt: skip
+
+
+def facts_of(
+    weight: float,
+    parameters: float,
+    *,
+    left_out_error: float,
+    mean_y: float,
+    variance: float,
+    sum_residuals: float,
+    sum_squared_residuals: float,
+) -> dict[str, Any]:
+    """Return the figures of `DEFINITIONS` from sums; None where undefined."""
+    freedom = weight - parameters
+    usable = freedom > 0.0 and mean_y != 0.0
+    cv_rmse = nmbe = math.nan
+    if usable:
+        cv_rmse = math.sqrt(sum_squared_residuals / freedom) / abs(mean_y)
+        nmbe = -sum_residuals / (freedom * mean_y)
     facts = {
         "r2_left_out": 1.0 - left_out_error / variance if variance > 0.0 else math.nan,
-        "cv_rmse": math.sqrt(scores.residual / freedom) / abs(mean) if usable else math.nan,
-        "nmbe": -total / (freedom * mean) if usable else math.nan,
-        "sum_residuals": total,
-        "sum_squared_residuals": scores.residual,
-        "mean_y": mean,
-        "equivalent_parameters": scores.trace,
+        "cv_rmse": cv_rmse,
+        "nmbe": nmbe,
+        "sum_residuals": sum_residuals,
+        "sum_squared_residuals": sum_squared_residuals,
+        "mean_y": mean_y,
+        "equivalent_parameters": parameters,
     }
     return {name: value if math.isfinite(value) else None for name, value in facts.items()}

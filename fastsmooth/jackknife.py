@@ -8,9 +8,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.bintable import Level
+from fastsmooth.bintable import Level, Pyramid
+from fastsmooth.foldcurves import FoldCurves
 from fastsmooth.localweights import slope_weights, sums_at, weights_of
-from fastsmooth.smoother import others
+from fastsmooth.smoother import others, width_in_bins
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -121,8 +122,14 @@ def leave_out_folds(
     kind : str
         The fit; see `fastsmooth.localweights.weights_of`.
     """
-    n, folds = places.shape[0], level.folds.shape[0]
-    s, t, v = fold_sums_at(places, level, shape, bandwidth_bins)
+    return deviations_of(*fold_sums_at(places, level, shape, bandwidth_bins), bandwidth_bins, kind)
+
+
+def deviations_of(
+    s: Floats, t: Floats, v: Floats, bandwidth_bins: float, kind: str
+) -> Deviations:
+    """Refit without each fold in turn, from sums per fold as `fold_sums_at` returns them."""
+    folds, n = s.shape[0], s.shape[2]
     weights = weights_of(s.sum(axis=0), bandwidth_bins, kind)
     total = weights.apply(t.sum(axis=0))
     without_s, without_t = others(s), others(t)
@@ -140,3 +147,38 @@ def leave_out_folds(
         noise = np.array([weights.variance(one) for one in v])
         noise_shares = np.nan_to_num(noise / noise.sum(axis=0))
     return Deviations(moved, slope_moved, shares, noise_shares)
+
+
+def keep_fold_curves(
+    x: Floats, pyramid: Pyramid, folds: list[int], shape: Shape, bandwidth: float, kind: str
+) -> FoldCurves:
+    """Return a curve without each of its folds, to be kept with it.
+
+    Parameters
+    ----------
+    x : (n,) float64
+        Points of the curve, on the plan's scale.
+    pyramid : Pyramid
+        Levels of the table.
+    folds : list of int
+        The folds that hold rows, in the order of the levels.
+    shape : Shape
+        Kernel function.
+    bandwidth : float
+        On the plan's scale.
+    kind : str
+        The fit that the band is centred on; see `fastsmooth.localweights.weights_of`.
+    """
+    # Errors need fewer bins than the curve itself.
+    level = pyramid.levels[pyramid.level_for(bandwidth, shape.bins_per_bandwidth)]
+    h = width_in_bins(bandwidth, level)
+    high = level.origin + level.width * level.bins
+    places = (np.clip(x, level.origin, high) - level.origin) / level.width
+    unused = np.zeros((3, level.bins))
+    sums = sums_at(places, level.first[0:3], level.response, shape, h, unused, unused)
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
+        left_out = leave_out_folds(places, level, shape, h, kind)
+        centre = weights_of(sums.s, h, kind).apply(sums.t) + pyramid.plan.reference
+    return FoldCurves.of(
+        np.array(folds, np.int64), centre, left_out.degrees, left_out.moved, left_out.shares
+    )

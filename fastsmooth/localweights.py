@@ -15,6 +15,22 @@ if TYPE_CHECKING:
 Floats = NDArray[np.float64]
 
 CONSTANT, LINE, PARABOLA = "constant", "line", "parabola"
+DEGREES = {CONSTANT: 0, LINE: 1, PARABOLA: 2}
+
+
+def kind_of_centre(estimator: str, bias: str) -> str:
+    """Return the fit that a band is centred on.
+
+    Parameters
+    ----------
+    estimator : str
+        ``local-linear`` or ``local-constant``.
+    bias : str
+        ``corrected`` or ``ignored``.
+    """
+    if bias == "corrected":
+        return PARABOLA
+    return CONSTANT if estimator == "local-constant" else LINE
 
 
 class PointSums(NamedTuple):

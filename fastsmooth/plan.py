@@ -125,6 +125,19 @@ class Plan:
         """Return the fold of a run of consecutive rows: neighbours never share one."""
         return (task_index * self.folds_per_task + run % self.folds_per_task) % self.folds
 
+    def run_stretches(self, task_index: int, row: int, rows: int) -> list[tuple[int, int, int]]:
+        """Fold, first and last row (exclusive) of the runs in a chunk that begins at a row."""
+        # Plain integers: this is done for every chunk, and arrays of two items cost more.
+        length = self.rows_per_run
+        stretches = []
+        start = 0
+        while start < rows:
+            run, within = divmod(row + start, length)
+            stop = min(rows, start + length - within)
+            stretches.append((self.fold_of_run(task_index, run), start, stop))
+            start = stop
+        return stretches
+
     def to_dict(self) -> dict[str, Any]:
         """Return plain data for JSON."""
         plain = asdict(self)
@@ -206,7 +219,7 @@ def draw_sample(source: Source, scale: str, threads: int = 1) -> Sample:
     def draw(index: int) -> tuple[Floats, Floats, NDArray[np.int64]] | None:
         # A chunk may be empty after the filter; a few more are tried.
         for chunk in _first_chunks(source, tasks[index], rows):
-            x, y, usable = _on_scale(chunk.x, chunk.y, scale)
+            x, y, usable = on_scale(chunk.x, chunk.y, scale)
             kept = np.flatnonzero(usable)
             if kept.size:
                 place = kept if chunk.positions is None else chunk.positions[kept]
@@ -229,7 +242,8 @@ def _first_chunks(source: Source, task: Task, rows: int) -> Iterator[Chunk]:
             return
 
 
-def _on_scale(x: Floats, y: Floats, scale: str) -> tuple[Floats, Floats, NDArray[np.bool_]]:
+def on_scale(x: Floats, y: Floats, scale: str) -> tuple[Floats, Floats, NDArray[np.bool_]]:
+    """Return x on the scale, y, and which rows can be used."""
     usable = np.isfinite(x) & np.isfinite(y)
     if scale == "log":
         usable &= x > 0.0
@@ -249,7 +263,7 @@ def find_range(source: Source, scale: str, threads: int) -> tuple[float, float]:
     def extent(task: Task, chunks: Iterator[Chunk]) -> tuple[float, float]:
         low, high = math.inf, -math.inf
         for chunk in chunks:
-            x, _, usable = _on_scale(chunk.x, chunk.y, scale)
+            x, _, usable = on_scale(chunk.x, chunk.y, scale)
             if usable.any():
                 low = min(low, float(x[usable].min()))
                 high = max(high, float(x[usable].max()))
@@ -374,7 +388,7 @@ def make_plan(
             f"{source.axis.label(_off_scale(high, scale))} everywhere",
             "name another column, or check --where and --range",
         )
-    reference, pilot = _pilot(sample, low, high)
+    reference, pilot = pilot_of(sample, low, high)
     tasks = len(source.tasks)
     rows = source.rows_expected
     if rows is None:
@@ -394,7 +408,7 @@ def _off_scale(value: float, scale: str) -> float:
     return math.exp(value) if scale == "log" else value
 
 
-def _pilot(sample: Sample, low: float, high: float) -> tuple[float, tuple[float, ...]]:
+def pilot_of(sample: Sample, low: float, high: float) -> tuple[float, tuple[float, ...]]:
     """Median of y in equal stretches of x; stretches without rows take the nearest one's."""
     if not sample.x.size:
         return 0.0, (0.0,)

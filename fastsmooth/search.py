@@ -5,30 +5,22 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.bintable import BinTable, Level, Pyramid
+from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.errors import InputError
-from fastsmooth.settings import ESTIMATORS
-from fastsmooth.smoother import (
-    Fits,
-    Scores,
-    fit_level,
-    fold_sums,
-    kernel_sums,
-    least_weight,
-    left_out_fold_scores,
-    others,
-    score_level,
-)
+from fastsmooth.scoring import BinnedScoring, Point
+from fastsmooth.settings import ESTIMATORS, NEAREST
 from fastsmooth.trail import REFINED, Search, Trail
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
+    from fastsmooth.nearest import Neighbours, NeighbourScoring
+
+    Scoring = BinnedScoring | NeighbourScoring
 
 Floats = NDArray[np.float64]
 
@@ -38,15 +30,7 @@ _COARSEST_BINS_PER_BANDWIDTH = 8
 # The narrowest width leaves this share of rows with windows of four places or more.
 _SHARE_SUPPORTED = 0.95
 _PLACES_PER_WINDOW = 4
-_FEWER_BINS = 2
-_FEWER_BINS_BY_FOLD = 8
-_MANY_ROWS = 1e5
-_LEAST_HEARD = 0.99
 _REFINED_BY_FOLD = 1e-2
-# Where the other folds' rows lie this far to one side, a fold's row asks for extrapolation.
-_MOST_LOPSIDED = 0.5
-# A row that makes so much of its own fit is alone: the others hardly predict it.
-_MOST_LEVERAGE = 0.999
 # A local minimum this close to the best rivals it.
 _RIVAL_SHARE = 0.1
 _GOLDEN = (math.sqrt(5.0) - 1.0) / 2.0
@@ -70,12 +54,7 @@ def narrowest_width(table: BinTable) -> float:
         spread = total[:, 2] / n - mean * mean > 1e-9
     places = np.where(n > 0.0, 1 + spread, 0)
     if places.sum() < _PLACES_PER_WINDOW:
-        raise InputError(
-            "--x",
-            f"hold at least {_PLACES_PER_WINDOW} distinct values",
-            f"the rows that can be used have {int(places.sum())}",
-            "name another column, or check --where and --range",
-        )
+        raise too_few_places(int(places.sum()))
     up_to = np.concatenate(([0], np.cumsum(places)))
     used = np.flatnonzero(n)
     weight = n[used]
@@ -106,6 +85,7 @@ def search_table(
     widths: int = WIDTHS,
     bounds: tuple[float, float] | None = None,
     threads: int = 1,
+    scoring: BinnedScoring | None = None,
 ) -> Search:
     """Search the bandwidth of both estimators on a bin table.
 
@@ -127,6 +107,8 @@ def search_table(
         Interval to search, on the plan's scale; None takes it from the data.
     threads : int
         Bandwidths worked on at a time; the result does not depend on it.
+    scoring : BinnedScoring or None
+        What scores a bandwidth, in place of the table's bins.
 
     Returns
     -------
@@ -142,42 +124,69 @@ def search_table(
     # Logarithms are of widths in bins: then x times a power of two gives h times it, to the bit.
     unit = table.plan.width
     grid = np.geomspace(low / unit, high / unit, widths) * unit
-    job = _Job(pyramid, shape)
+    job = scoring or BinnedScoring(table, pyramid, shape)
     with ThreadPoolExecutor(threads) as pool:
-        fits = list(pool.map(job.fit, grid.tolist()))
-        keep, rows_alone = _voters(pyramid, fits)
-        if keep is not None:
-            job.scored = Pyramid(table, keep)
-        points = list(pool.map(job.scores_of, fits))
-        by_fold = []
+        points, rows_alone = job.points(grid.tolist(), pool.map)
+        by_fold: list[dict[str, Point]] = []
         if by_block:
-            keep_folds, rows_alone = _fold_voters(pyramid, shape, low, job.empty)
-            job.left_out = Pyramid(table, keep_folds)
-            by_fold = list(pool.map(job.left_out_scores, grid.tolist()))
-        trails = dict(
-            zip(
-                ESTIMATORS,
-                pool.map(
-                    lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS
-                ),
-                strict=True,
-            )
+            by_fold, rows_alone = job.left_out_points(grid.tolist(), pool.map)
+        found = pool.map(
+            lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS
         )
+        trails = dict(zip(ESTIMATORS, found, strict=True))
     return Search(criterion, shape.name, trails, rows_alone)
 
 
+def search_neighbours(
+    near: Neighbours, *, criterion: str, by_block: bool, widths: int = WIDTHS, threads: int = 1
+) -> Search:
+    """Search the number of neighbours; parameters as for `search_table`.
+
+    Returns
+    -------
+    Search
+        With one trail, whose bandwidths are numbers of neighbours.
+
+    Raises
+    ------
+    InputError
+        Too few rows.
+    """
+    from fastsmooth.nearest import NeighbourScoring, neighbour_grid
+
+    grid = neighbour_grid(near, widths)
+    if near.x.shape[0] < _PLACES_PER_WINDOW:
+        raise too_few_places(near.x.shape[0])
+    job = NeighbourScoring(near)
+    with ThreadPoolExecutor(threads) as pool:
+        points, rows_alone = job.points(grid.tolist(), pool.map)
+        by_fold: list[dict[str, Point]] = []
+        if by_block:
+            by_fold, rows_alone = job.left_out_points(grid.tolist(), pool.map)
+    trail = _trail(job, NEAREST, grid, points, by_fold, criterion)
+    return Search(criterion, NEAREST, {NEAREST: trail}, rows_alone)
+
+
+def too_few_places(places: int) -> InputError:
+    """Return the refusal of data with too few distinct x."""
+    return InputError(
+        "--x", f"hold at least {_PLACES_PER_WINDOW} distinct values",
+        f"the rows that can be used have {places}",
+        "name another column, or check --where and --range",
+    )  # fmt: skip
+
+
 def left_out_error(
-    pyramid: Pyramid, shape: Shape, bandwidth: float, estimator: str, *, by_fold: bool
+    scoring: BinnedScoring, bandwidth: float, estimator: str, *, by_fold: bool
 ) -> float:
     """Return the mean squared error of predicting left-out rows (or folds) at one width.
 
     Infinite where more than one row in a hundred has no prediction.
     """
-    job = _Job(pyramid, shape)
     if not by_fold:
-        return job.value(bandwidth, job.level(bandwidth), estimator, "leave-one-out")
-    job.left_out = pyramid
-    return job.left_out_scores(bandwidth)[estimator].criteria["leave-block-out"]
+        return scoring.value(bandwidth, bandwidth, estimator, "leave-one-out")
+    scoring.left_out = scoring.pyramid
+    return scoring.left_out_scores(bandwidth)[estimator].criteria["leave-block-out"]
 
 
 def _interval(table: BinTable) -> tuple[float, float]:
@@ -188,167 +197,19 @@ def _interval(table: BinTable) -> tuple[float, float]:
     return narrowest, widest
 
 
-def _voters(pyramid: Pyramid, fits: list[Fits]) -> tuple[NDArray[np.bool_] | None, float]:
-    """Bins of the finest level whose rows have a leave-one-out prediction at every width.
-
-    The criterion is taken over the same rows at every width and for both estimators: a set that
-    changed with the width would compare unlike things.
-    """
-    finest = pyramid.levels[0]
-    lost = np.zeros(finest.bins, bool)
-    for fit in fits:
-        level = fit.level
-        with np.errstate(invalid="ignore", divide="ignore"):
-            mean_weight = np.where(level.count > 0.0, level.first[0] / level.count, 0.0)
-        for name in ESTIMATORS:
-            # Beyond this, room is a difference of nearly equal binned sums.
-            alone = ~(fit.chords[name][2] * mean_weight < _MOST_LEVERAGE) & (level.count > 0.0)
-            if alone.any():
-                lost |= np.repeat(alone, finest.bins // level.bins)
-    lost &= finest.count > 0.0
-    if not lost.any():
-        return None, 0.0
-    return ~lost, float(finest.count[lost].sum())
-
-
-def _fold_voters(
-    pyramid: Pyramid, shape: Shape, narrowest: float, empty: float
-) -> tuple[NDArray[np.bool_], float]:
-    """Bins of each fold whose rows the other folds predict at the narrowest width.
-
-    Not only must the others have rows in the window, they must lie on both sides: a row that
-    only one stretch of days has seen asks the others to extrapolate, and would judge every width
-    by that.
-    """
-    finest = pyramid.levels[0]
-    level = pyramid.levels[pyramid.level_for(narrowest, shape.bins_per_bandwidth)]
-    h = narrowest / level.width
-    parts = [kernel_sums(fold[0:3], shape, h, 2, squared=False) for fold in level.folds]
-    s = others(np.array(parts))
-    with np.errstate(invalid="ignore", divide="ignore"):
-        keep = (s[:, 0] > empty) & (np.abs(s[:, 1] / s[:, 0]) < _MOST_LOPSIDED * shape.reach)
-    lost = float(level.folds[:, 0][~keep].sum())
-    return np.repeat(keep, finest.bins // level.bins, axis=1), lost
-
-
-class _Job:
-    """Scores of both estimators at any bandwidth."""
-
-    def __init__(self, pyramid: Pyramid, shape: Shape) -> None:
-        self.pyramid = pyramid
-        self.shape = shape
-        self.empty = least_weight(pyramid, shape)
-        self.bins_per_bandwidth = _bins_per_bandwidth(pyramid, shape)
-        # Rows that vote on leave-one-out and, where blocks are left out, on that.
-        self.scored = pyramid
-        self.left_out: Pyramid | None = None
-
-    def level(self, bandwidth: float) -> int:
-        return self.pyramid.level_for(bandwidth, self.bins_per_bandwidth)
-
-    def fit(self, bandwidth: float, level: int | None = None) -> Fits:
-        index = self.level(bandwidth) if level is None else level
-        return fit_level(self.pyramid.levels[index], self.shape, bandwidth, self.empty)
-
-    def scores_of(self, fits: Fits) -> dict[str, _Point]:
-        """Score every voting row against the others."""
-        scored = next(one for one in self.scored.levels if one.bins == fits.level.bins)
-        points = {}
-        for name in ESTIMATORS:
-            scores = score_level(fits, name, scored)
-            bandwidth = fits.bandwidth_bins * fits.level.width
-            points[name] = _point_of(bandwidth, scores, fold_sums(scored, scores), scored)
-        return points
-
-    def value(self, bandwidth: float, level: int, name: str, criterion: str) -> float:
-        """Return one criterion of one estimator: what a refinement needs, and no more."""
-        scored = self.scored.levels[level]
-        scores = score_level(self.fit(bandwidth, level), name, scored)
-        return _criteria_of(scores, scored)[criterion]
-
-    def scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
-        return self.scores_of(self.fit(bandwidth, level))
-
-    def left_out_scores(self, bandwidth: float, level: int | None = None) -> dict[str, _Point]:
-        """Score every fold against the others."""
-        assert self.left_out is not None
-        # Few bins do: a fold's absence moves the fit far more than binning does.
-        fewer = max(4, self.shape.bins_per_bandwidth // _FEWER_BINS_BY_FOLD)
-        index = self.pyramid.level_for(bandwidth, fewer) if level is None else level
-        scored = self.left_out.levels[index]
-        weight = float(scored.first[0].sum())
-        found = left_out_fold_scores(
-            self.pyramid.levels[index], scored, self.shape, bandwidth, self.empty
-        )
-        with np.errstate(invalid="ignore", divide="ignore"):
-            shares = scored.folds[:, 0].sum(axis=1) / weight
-        points = {}
-        for name, (folds, lost) in found.items():
-            value = float(folds.sum()) / weight if lost == 0.0 and weight > 0.0 else math.inf
-            points[name] = _Point(
-                bandwidth, {"leave-block-out": value}, math.nan, folds / weight, shares
-            )
-        return points
-
-
-def _bins_per_bandwidth(pyramid: Pyramid, shape: Shape) -> int:
-    """Bins in h at which criteria are taken.
-
-    With many rows half of the curve's own number keeps the criterion within 1e-6 of its value
-    (measured, 1e5 rows and more, kernels with a continuous slope) at a quarter of the work.
-    """
-    many = float(pyramid.levels[-1].count.sum()) >= _MANY_ROWS
-    smooth = shape.smoothness >= 2
-    return (
-        max(4, shape.bins_per_bandwidth // _FEWER_BINS)
-        if many and smooth
-        else shape.bins_per_bandwidth
-    )
-
-
-def _criteria_of(scores: Scores, scored: Level) -> dict[str, float]:
-    n, weight = float(scored.count.sum()), float(scored.first[0].sum())
-    # Voters have predictions at every width of the grid; between its widths one may be missing.
-    heard = weight - scores.lost
-    loo = scores.score / heard if heard > _LEAST_HEARD * weight else math.inf
-    variance = scores.residual / weight
-    room = 1.0 - scores.trace / n
-    gcv = variance / room**2 if room > 0.0 else math.inf
-    aicc = math.inf
-    if n - scores.trace - 2.0 > 0.0 and variance > 0.0:
-        aicc = math.log(variance) + 1.0 + 2.0 * (scores.trace + 1.0) / (n - scores.trace - 2.0)
-    return {"leave-one-out": loo, "gcv": gcv, "aicc": aicc}
-
-
-def _point_of(bandwidth: float, scores: Scores, folds: Floats, scored: Level) -> _Point:
-    weight = float(scored.first[0].sum())
-    shares = scored.folds[:, 0].sum(axis=1) / weight
-    return _Point(
-        bandwidth, _criteria_of(scores, scored), scores.trace, folds / weight, shares
-    )  # fmt: skip
-
-
-@dataclass(frozen=True)
-class _Point:
-    bandwidth: float
-    criteria: dict[str, float]
-    trace: float
-    folds: Floats
-    shares: Floats
-
-
 def _trail(
-    job: _Job,
+    job: Scoring,
     name: str,
     grid: Floats,
-    points: list[dict[str, _Point]],
-    left_out: list[dict[str, _Point]],
+    points: list[dict[str, Point]],
+    left_out: list[dict[str, Point]],
     criterion: str,
 ) -> Trail:
     mine = [point[name] for point in points]
     if criterion == "plug-in":
         from fastsmooth.plugin import plug_in_bandwidth
 
+        assert isinstance(job, BinnedScoring)
         bandwidth = float(
             np.clip(plug_in_bandwidth(job.pyramid, job.shape, name), grid[0], grid[-1])
         )
@@ -369,11 +230,13 @@ def _trail(
     judged = [point[name] for point in left_out] if judge == "leave-block-out" else mine
     excess = np.array([p.criteria[judge] - best.criteria[judge] for p in judged])
     errors = np.array([_paired_error(p, best) for p in judged])
-    zone = _flat_zone(grid, excess, errors, best.bandwidth, job.pyramid.plan.width)
+    zone = _flat_zone(grid, excess, errors, best.bandwidth, job.unit)
     at_best = best if judge == "leave-one-out" else job.scores(best.bandwidth)[name]
     shown = np.array([p.criteria[criterion if criterion in p.criteria else judge] for p in judged])
     by_row_values = {
-        c: np.array([p.criteria[c] for p in mine]) for c in ("leave-one-out", "gcv", "aicc")
+        # Neighbours have leave-one-out alone.
+        c: np.array([p.criteria.get(c, math.inf) for p in mine])
+        for c in ("leave-one-out", "gcv", "aicc")
     }
     return Trail(
         estimator=name,
@@ -393,7 +256,9 @@ def _trail(
     )
 
 
-def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: str) -> _Point:
+def _refine(
+    job: Scoring, name: str, grid: Floats, values: list[float], criterion: str
+) -> Point:
     """Golden section between the neighbours of the best grid point, on one level throughout."""
     if not any(math.isfinite(value) for value in values):
         raise InputError(
@@ -404,7 +269,7 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
         )
     # Of equals (y does not vary, say) the widest.
     place = int(np.flatnonzero(np.array(values) == min(values))[-1])
-    unit = job.pyramid.plan.width
+    unit = job.unit
     if criterion == "leave-block-out":
 
         def at(log_h: float) -> float:
@@ -412,10 +277,10 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
 
         close = _REFINED_BY_FOLD
     else:
-        level = job.level(float(grid[place]))
+        like = float(grid[place])
 
         def at(log_h: float) -> float:
-            return job.value(math.exp(log_h) * unit, level, name, criterion)
+            return job.value(math.exp(log_h) * unit, like, name, criterion)
 
         close = REFINED
     logs = np.log(grid / unit)
@@ -436,10 +301,10 @@ def _refine(job: _Job, name: str, grid: Floats, values: list[float], criterion: 
     bandwidth = math.exp(chosen) * unit
     if criterion == "leave-block-out":
         return job.left_out_scores(bandwidth)[name]
-    return job.scores(bandwidth, level)[name]
+    return job.scores(bandwidth, like)[name]
 
 
-def _paired_error(point: _Point, best: _Point) -> float:
+def _paired_error(point: Point, best: Point) -> float:
     """Standard error of the criterion's difference, from its differences per fold.
 
     Breiman, Friedman, Olshen & Stone (1984) for the one-standard-error rule; paired, because the

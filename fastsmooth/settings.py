@@ -10,18 +10,22 @@ from dataclasses import dataclass, field
 from numbers import Integral, Real
 from typing import TYPE_CHECKING, Any
 
+from fastsmooth.addresses import DEFAULT_TIMEOUT_SECONDS
 from fastsmooth.errors import InputError
 from fastsmooth.near import advise
 
 if TYPE_CHECKING:
     from fastsmooth.blocks import Block
 
+# Estimators with a bandwidth, searched together; and the one with a number of neighbours.
 ESTIMATORS = ("local-linear", "local-constant")
+NEAREST = "nearest"
 KERNELS = (
     "biweight", "epanechnikov", "uniform", "triangular", "triweight", "tricube", "gaussian",
 )  # fmt: skip
 CRITERIA = ("leave-one-out", "leave-block-out", "gcv", "aicc", "plug-in")
 SCALES = ("linear", "log")
+ENGINES = ("auto", "binned", "exact")
 NOISES = ("local", "constant")
 BIASES = ("corrected", "ignored")
 BANDS = ("pointwise", "simultaneous")
@@ -115,6 +119,10 @@ class Reading:
     block : Block or str or None
         Which rows may depend on each other: a column, or a time column with a unit
         (``logged_at:day``). None deals runs of consecutive rows to the folds.
+    timeout_seconds : float
+        How long a silent object store is waited for, each time.
+    last : str or None
+        Of a store: only so much up to its newest period, as in ``12 months``.
     """
 
     where: str | None = None
@@ -124,8 +132,12 @@ class Reading:
     threads: int = field(default_factory=usable_cores)
     folds: int = 32
     block: Block | str | None = None
+    timeout_seconds: float = DEFAULT_TIMEOUT_SECONDS
+    last: str | None = None
 
     def __post_init__(self) -> None:
+        if self.last is not None:
+            check_text("--last", self.last, "be a number and a unit, as in '12 months'")
         if self.block is not None:
             from fastsmooth.blocks import Block
 
@@ -142,8 +154,12 @@ class Reading:
             _set(self, range=ends)
         one_of("--scale", self.scale, SCALES)
         check_flag("--strict", self.strict)
+        seconds = "be a positive number of seconds"
+        timeout = finite_number("--timeout", self.timeout_seconds, seconds)
+        if not timeout > 0.0:
+            raise InputError("--timeout", seconds, f"it is {timeout:g}", "leave it out")
         _set(
-            self, threads=whole_number("--threads", self.threads, 1),
+            self, timeout_seconds=timeout, threads=whole_number("--threads", self.threads, 1),
             folds=whole_number("--folds", self.folds, 2, 1024),
         )  # fmt: skip
 
@@ -161,7 +177,8 @@ class Smoothing:
     Parameters
     ----------
     estimator : str
-        ``local-linear`` or ``local-constant``.
+        ``local-linear``, ``local-constant``, or ``nearest``, the mean of the nearest rows, which
+        needs all rows in memory and knows neither kernel nor bandwidth.
     kernel : str
         One of `KERNELS`.
     bandwidth : object or None
@@ -172,6 +189,13 @@ class Smoothing:
         ``leave-one-out``.
     widths : int
         Bandwidths in the search grid.
+    engine : str
+        ``binned`` sums over bins, ``exact`` over every row in memory (not with the Gaussian
+        kernel); ``auto`` is exact up to 100,000 rows.
+    memory_gigabytes : float
+        What the exact engine may take; beyond it, it is refused.
+    neighbours : int or None
+        Rows that ``nearest`` takes the mean of; None lets the criterion choose.
     """
 
     estimator: str = "local-linear"
@@ -179,13 +203,51 @@ class Smoothing:
     bandwidth: object | None = None
     criterion: str | None = None
     widths: int = 48
+    engine: str = "auto"
+    memory_gigabytes: float = 4.0
+    neighbours: int | None = None
 
     def __post_init__(self) -> None:
-        one_of("--estimator", self.estimator, ESTIMATORS)
+        one_of("--estimator", self.estimator, (*ESTIMATORS, NEAREST))
         one_of("--kernel", self.kernel, KERNELS)
         if self.criterion is not None:
             one_of("--criterion", self.criterion, CRITERIA)
-        _set(self, widths=whole_number("--widths", self.widths, 8, 1000))
+        one_of("--engine", self.engine, ENGINES)
+        size = "be a positive number of gigabytes"
+        memory = finite_number("--memory", self.memory_gigabytes, size)
+        if not memory > 0.0:
+            raise InputError("--memory", size, f"it is {memory:g}", "leave it out")
+        _set(
+            self, widths=whole_number("--widths", self.widths, 8, 1000), memory_gigabytes=memory
+        )  # fmt: skip
+        if self.neighbours is not None:
+            _set(self, neighbours=whole_number("--neighbours", self.neighbours, 1))
+        self._check_nearest()
+
+    def _check_nearest(self) -> None:
+        """Refuse what does not go with the estimator."""
+        if self.estimator != NEAREST:
+            if self.neighbours is not None:
+                raise InputError(
+                    "--neighbours", f"come with --estimator {NEAREST}",
+                    f"the estimator is {self.estimator}", "give --bandwidth, or leave it out",
+                )  # fmt: skip
+            return
+        if self.bandwidth is not None:
+            raise InputError(
+                "--bandwidth", f"be left out with --estimator {NEAREST}", "it is given",
+                "give --neighbours",
+            )  # fmt: skip
+        if self.criterion not in (None, "leave-one-out", "leave-block-out"):
+            raise InputError(
+                "--criterion", f"be leave-one-out or leave-block-out with --estimator {NEAREST}",
+                f"it is {self.criterion}", "leave it out",
+            )  # fmt: skip
+        if self.engine == "binned":
+            raise InputError(
+                "--engine binned", "come with another estimator",
+                f"{NEAREST} needs every row", "leave it out",
+            )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -203,7 +265,8 @@ class Band:
     noise : str
         ``local`` lets the residual variance change with x; ``constant`` does not.
     least_rows : float
-        Points with fewer effective rows are ``thin``; with a block also those whose window
+        Points with fewer effective rows are ``thin`` (not with ``nearest``, whose windows hold
+        as many rows everywhere: there a gap in the middle of the window is); with a block also those whose window
         meets fewer than twelve folds, or whose error has fewer than four degrees of freedom.
     points : int
         Evenly spaced points from the lowest to the highest x (in log x on a log scale).
@@ -213,6 +276,8 @@ class Band:
         Whether to locate the steepest place and the turning points, with intervals.
     crossings : tuple of float
         Values of y whose crossings are located too.
+    keep_folds : bool
+        Whether the curve without each fold is kept with it, which comparisons need.
     """
 
     level: float = 0.95
@@ -224,12 +289,14 @@ class Band:
     at: tuple[object, ...] | None = None
     landmarks: bool = False
     crossings: tuple[float, ...] = ()
+    keep_folds: bool = True
 
     def __post_init__(self) -> None:
         one_of("--band", self.kind, BANDS)
         one_of("--bias", self.bias, BIASES)
         one_of("--noise", self.noise, NOISES)
         check_flag("--landmarks", self.landmarks)
+        check_flag("keep_folds", self.keep_folds)
         share, remedy = "lie between 0 and 1", "write 0.95 for 95 percent"
         level = finite_number("--level", self.level, share, remedy)
         if not 0.0 < level < 1.0:

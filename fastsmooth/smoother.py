@@ -22,7 +22,7 @@ _LEAST_WINDOW = 1e-6
 # Rows that spread by less than this many bins (standard deviation) carry no slope.
 _LEAST_SPREAD_BINS = 1.0 / 16.0
 # Over a window of so many ranges every kernel is flat to rounding: wider ones change nothing.
-_WIDEST_RANGES = 1e6
+WIDEST_RANGES = 1e6
 
 
 @dataclass(frozen=True)
@@ -124,7 +124,7 @@ def least_spread(bandwidth_bins: float) -> float:
 
 def width_in_bins(bandwidth: float, level: Level) -> float:
     """Return a bandwidth in bins of the level, cut where all wider ones fit the same line."""
-    return min(bandwidth / level.width, _WIDEST_RANGES * level.bins)
+    return min(bandwidth / level.width, WIDEST_RANGES * level.bins)
 
 
 def fit_level(level: Level, shape: Shape, bandwidth: float, empty: float) -> Fits:

@@ -26,7 +26,7 @@ def curve_lines(made: Curve) -> list[str]:
     lines = [f"{settings['y']} against {settings['x']}", *_row_lines(made)]
     if settings["block"] is not None:
         blocks = made.trace["blocks"]
-        by_fold = made.search.criterion == "leave-block-out" and settings["bandwidth"] is None
+        by_fold = made.search.criterion == "leave-block-out" and not made.width_given
         rests = "width and band rest" if by_fold else "the band rests"
         lines.append(
             f"blocks     {blocks:,} by {settings['block']}, dealt to {settings['folds']} folds; "
@@ -44,11 +44,7 @@ def curve_lines(made: Curve) -> list[str]:
     counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
     ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
     lines.append(f"points     {made.x.shape[0]} from {ends}: {counts}")
-    lines.append(
-        f"engine     binned, {engine['bins']} bins, {engine['bins_per_bandwidth']:.3g} to a "
-        f"bandwidth, {_times(engine['passes'])} over the data"
-        + _error_words(engine["error_in_noise_sd"])
-    )
+    lines.append(_engine_line(engine))
     lines += [f"caution    {caution.text}" for caution in made.cautions]
     return lines
 
@@ -59,9 +55,10 @@ def search_lines(made: Curve) -> list[str]:
     names = list(found.trails)
     lines = [f"{made.settings['y']} against {made.settings['x']}", *_row_lines(made)]
     shown = "" if found.criterion != "plug-in" else "; the table shows leave-one-out"
-    lines.append(f"criterion  {found.criterion}, kernel {found.kernel}{shown}")
+    kernel = "" if made.by_neighbours else f", kernel {found.kernel}"
+    lines.append(f"criterion  {found.criterion}{kernel}{shown}")
     lines.append("")
-    lines.append(f"{'bandwidth':>22}" + "".join(f"{name:>18}" for name in names))
+    lines.append(f"{made.width_word:>22}" + "".join(f"{name:>18}" for name in names))
     grid = found.trails[names[0]].bandwidths
     best = {name: int(np.argmin(found.trails[name].values(found.criterion))) for name in names}
     for place, width in enumerate(grid.tolist()):
@@ -92,7 +89,7 @@ def curve_facts(made: Curve) -> dict[str, Any]:
         "rows": made.trace["rows"],
         "files": len(made.trace["files"]),
         "bandwidth": made.bandwidth,
-        "chosen_by": made.search.criterion if made.settings["bandwidth"] is None else "caller",
+        "chosen_by": "caller" if made.width_given else made.search.criterion,
         "flat_zone": list(trail.flat_zone),
         "search": search_facts(made.search),
         "points": status_counts(made),
@@ -161,10 +158,15 @@ def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
 
 def _row_lines(made: Curve) -> list[str]:
     rows = made.trace["rows"]
-    files = len(made.trace["files"])
+    stored = made.trace.get("store")
+    files = len(made.trace["files"]) if stored is None else stored["files"]
     text = f"rows       {rows['used']:,} used of {rows['read']:,} read"
     if files:
         text += f" from {files} file{'s' if files > 1 else ''}"
+    if stored is not None:
+        text += " in a store"
+    if stored is not None and stored["periods"]:
+        text += ", " + " to ".join(dict.fromkeys(stored["periods"]))
     if rows["filtered"]:
         text += f"; {rows['filtered']:,} filtered by --where"
     lines = [text]
@@ -178,21 +180,21 @@ def _width_lines(made: Curve) -> list[str]:
     settings = made.settings
     label: Callable[[float], str] = made.width_label
     mine = made.search.trails[settings["estimator"]]
-    other_name = next(name for name in made.search.trails if name != settings["estimator"])
-    other = made.search.trails[other_name]
-    by = "given" if settings["bandwidth"] is not None else f"chosen by {made.search.criterion}"
+    by = "given" if made.width_given else f"chosen by {made.search.criterion}"
     low, high = mine.flat_zone
     lines = [
         f"bandwidth  {label(made.bandwidth)} {by}; {settings['estimator']}, "
         f"{settings['kernel']} kernel"
         + (" (its standard deviation)" if settings["kernel"] == "gaussian" else "")
     ]
-    if settings["bandwidth"] is not None:
+    if made.by_neighbours:
+        lines = [f"width      the nearest {label(made.bandwidth)}, {by}; their mean"]
+    if made.width_given:
         lines.append(f"           {made.search.criterion} would choose {label(mine.bandwidth)}")
     lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
     by_row = mine.leave_one_out_bandwidth
     ratio = by_row / mine.bandwidth
-    if made.scale == "log":
+    if made.widths_are_factors:
         ratio = math.log(by_row) / math.log(mine.bandwidth)
     alike = 0.95 < ratio < 1.05
     if made.search.criterion == "leave-block-out" and not alike:
@@ -202,7 +204,9 @@ def _width_lines(made: Curve) -> list[str]:
             if by_row < low
             else f"           leave-one-out would choose {label(by_row)}"
         )
-    if mine.score > 0.0 and math.isfinite(other.score):
+    for other_name, other in made.search.trails.items():
+        if other is mine or not (mine.score > 0.0 and math.isfinite(other.score)):
+            continue
         away = other.score / mine.score - 1.0
         size = "about the same" if abs(away) < 5e-5 else f"{abs(away):.2%} "
         size += "" if abs(away) < 5e-5 else "larger" if away > 0.0 else "smaller"
@@ -211,6 +215,16 @@ def _width_lines(made: Curve) -> list[str]:
             f"prediction error is {size}"
         )
     return lines
+
+
+def _engine_line(engine: dict[str, Any]) -> str:
+    if engine["name"] == "exact":
+        return f"engine     exact, sums over every row ({engine['reason']})"
+    return (
+        f"engine     binned, {engine['bins']} bins, {engine['bins_per_bandwidth']:.3g} to a "
+        f"bandwidth, {_times(engine['passes'])} over the data"
+        + _error_words(engine["error_in_noise_sd"])
+    )
 
 
 def _times(passes: int) -> str:

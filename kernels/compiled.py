@@ -24,10 +24,12 @@ READ_2D = types.Array(types.float64, 2, "C", readonly=True)
 READ_3D = types.Array(types.float64, 3, "C", readonly=True)
 READ_INT_1D = types.Array(types.int64, 1, "C", readonly=True)
 READ_BOOL_1D = types.Array(types.boolean, 1, "C", readonly=True)
+READ_SMALL_1D = types.Array(types.int16, 1, "C", readonly=True)
 WRITE_1D = types.float64[::1]
 WRITE_2D = types.float64[:, ::1]
 WRITE_3D = types.float64[:, :, ::1]
 WRITE_INT_1D = types.int64[::1]
+WRITE_BOOL_1D = types.boolean[::1]
 
 # "contract" allows fused multiply-add only: no sum is reordered, NaN and infinity keep their
 # meaning, and the same machine gives the same bits whatever the number of threads.

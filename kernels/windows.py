@@ -52,7 +52,7 @@ _NO_LINE = 1e-10  # D / (S_0 S_2) up to which there is no line
 # are long only if it must be, since that costs time in proportion.
 _SHARE_SHORT, _SHARE_MIDDLING, _SHARE_LONG = 1e-3, 1e-6, 1e-9
 _SHORT, _LONG = 256, 65536  # rows in a short window; in a middling one
-_CHUNK = 512  # rows at a time in a window summed directly
+CHUNK = 512  # rows at a time in a window summed directly
 # Columns of a window's orthogonal basis, a row per degree: the recurrence; sums of w K times p^2,
 # p^2 u, p^2 u^2, p (y - mean); p and its slope at u = 0.
 _ALPHA, _BETA, _NORM, _FIRST_MOMENT, _SECOND_MOMENT, _DOT, _AT_ZERO, _SLOPE_AT_ZERO = range(8)
@@ -209,7 +209,7 @@ def _fit_window(x, y, weight, coefficients, place, bandwidth, low, high, degree,
         mean = basis[0, _DOT] / basis[0, _NORM] if j > 0 else 0.0
         done = low
         while done < high:
-            count = min(_CHUNK, high - done)
+            count = min(CHUNK, high - done)
             _kernel_terms(x, weight, coefficients, place, per_unit, done, count, terms)
             _add_products(y, j, done, count, mean, terms, basis)
             done += count
@@ -258,7 +258,7 @@ def fit_points(points, x, y, weight, repeats, variance, coefficients, bandwidth,
     window's rows bear, -1 in an empty window, where all but rows is NaN.
     Source: Fan & Gijbels (1996), chapter 3; orthogonal polynomials, Forsythe (1957).
     """
-    terms = np.empty((5, _CHUNK))
+    terms = np.empty((5, CHUNK))
     basis = np.zeros((4, 8))
     fit = np.zeros(3)
     totals = np.zeros(2)
@@ -273,7 +273,7 @@ def fit_points(points, x, y, weight, repeats, variance, coefficients, bandwidth,
         rows = 0.0
         done = low
         while done < high:
-            count = min(_CHUNK, high - done)
+            count = min(CHUNK, high - done)
             for k in range(done, done + count):
                 rows += repeats[k] if repeats.shape[0] > 0 else 1.0
             if reached >= 0:
@@ -289,7 +289,7 @@ def fit_points(points, x, y, weight, repeats, variance, coefficients, bandwidth,
 
 
 @kernel(types.int64(READ_2D, types.float64, types.float64, types.int64, WRITE_2D))
-def _fit_slots(sums, at_zero, per_unit, count, fits):
+def fit_slots(sums, at_zero, per_unit, count, fits):
     """Both estimators from kernel sums, see `fit_windows`; return how many windows look poor.
 
     Row REPLACED of `fits` gets 1 for those, whose power sums lost three digits or more.
@@ -334,7 +334,7 @@ def _fit_slots(sums, at_zero, per_unit, count, fits):
     types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
                READ_2D, WRITE_2D, WRITE_2D, WRITE_1D, WRITE_2D)
 )  # fmt: skip
-def _refit_slots(
+def refit_slots(
     x, y, weight, coefficients, bandwidth, first, count, sums, terms, basis, fit, fits
 ):
     """Fit windows that look poor directly, where need be; rows at one x share their window."""
@@ -404,7 +404,7 @@ def fit_windows(x, y, weight, coefficients, bandwidth, begin, end, out):
         x.shape[0], coefficients, 1
     )
     fits = aligned_rows(1, REPLACED + 1, SLOTS + 8)[0]
-    chunk = np.empty((5, _CHUNK))
+    chunk = np.empty((5, CHUNK))
     basis = np.zeros((4, 8))
     fit = np.zeros(3)
     for first in range(begin, end, SLOTS):
@@ -413,8 +413,8 @@ def fit_windows(x, y, weight, coefficients, bandwidth, begin, end, out):
             x, y, weight, coefficients, bandwidth, 1, first, count,
             arms, segments, places, centres, terms, carries, tables, moments, sums,
         )  # fmt: skip
-        if _fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
-            _refit_slots(
+        if fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
+            refit_slots(
                 x, y, weight, coefficients, bandwidth, first, count, sums, chunk, basis,
                 fit, fits,
             )  # fmt: skip
@@ -486,7 +486,7 @@ def score_windows(x, y, weight, repeats, scored, coefficients, bandwidth, begin,
     fits = aligned_rows(1, REPLACED + 1, SLOTS + 8)[0]
     rows = aligned_rows(1, 2, SLOTS + 8)[0]
     rows[:] = 1.0
-    chunk = np.empty((5, _CHUNK))
+    chunk = np.empty((5, CHUNK))
     basis = np.zeros((4, 8))
     fit = np.zeros(3)
     plain = weight.shape[0] + repeats.shape[0] + scored.shape[0] == 0
@@ -496,8 +496,8 @@ def score_windows(x, y, weight, repeats, scored, coefficients, bandwidth, begin,
             x, y, weight, coefficients, bandwidth, 1, first, count,
             arms, segments, places, centres, terms, carries, tables, moments, sums,
         )  # fmt: skip
-        if _fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
-            _refit_slots(
+        if fit_slots(sums, coefficients[0], 1.0 / bandwidth, count, fits) > 0:
+            refit_slots(
                 x, y, weight, coefficients, bandwidth, first, count, sums, chunk, basis,
                 fit, fits,
             )  # fmt: skip

@@ -190,7 +190,7 @@ def test_the_trace_tells_what_made_the_curve(tmp_path):
     assert trace["settings"]["criterion"] == "leave-one-out"
     assert trace["rows"]["read"] == 2500
     assert [record["path"] for record in trace["files"]] == [str(path)]
-    assert trace["engine"]["name"] == "binned"
+    assert trace["engine"]["name"] == "exact"
     assert trace["engine"]["passes"] >= 1
     assert trace["plan"]["bins"] == trace["engine"]["bins"]
     assert set(trace["versions"]) == {"python", "fastsmooth", "numpy", "numba", "pyarrow"}
@@ -200,7 +200,9 @@ def test_the_trace_tells_what_made_the_curve(tmp_path):
 def test_progress_goes_through_its_stages():
     told = []
     make_curve((X, Y), "x", "y", progress=lambda stage, rows, of: told.append(stage))
-    assert list(dict.fromkeys(told)) == ["reading", "searching", "fitting"]
+    assert list(dict.fromkeys(told)) == [
+        "reading", "searching", "gathering", "sorting", "fitting",
+    ]  # fmt: skip
 
 
 # What is refused.
@@ -211,7 +213,7 @@ def test_progress_goes_through_its_stages():
     [
         (
             lambda: Smoothing(estimator="local-linaer"),
-            "--estimator must be one of local-linear, local-constant, but it is 'local-linaer'; "
+            "--estimator must be one of local-linear, local-constant, nearest, but it is 'local-linaer'; "
             "use 'local-linear' or 'local-constant'.",
         ),
         (

@@ -159,12 +159,15 @@ def test_rows_alone():
 def test_coarse_bins():
     """A width of less than a thousandth of the range, and folds that leave no room for bins."""
     made = curve_of(
-        *clean(), reading=Reading(folds=128), smoothing=Smoothing(bandwidth=0.03, widths=8)
-    )
+        *clean(), reading=Reading(folds=128),
+        smoothing=Smoothing(bandwidth=0.03, widths=8, engine="binned"),
+    )  # fmt: skip
     assert "coarse bins" in codes(made)
     bins = made.trace["engine"]["bins_per_bandwidth"]
     assert f"spans only {bins:.1f} bins within the memory cap" in text(made, "coarse bins")
-    fine = curve_of(*clean(), reading=Reading(folds=4), smoothing=Smoothing(bandwidth=0.03))
+    fine = curve_of(
+        *clean(), reading=Reading(folds=4), smoothing=Smoothing(bandwidth=0.03, engine="binned")
+    )
     assert "coarse bins" not in codes(fine)
 
 

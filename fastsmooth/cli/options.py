@@ -7,7 +7,19 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from fastsmooth.settings import BANDS, BIASES, CRITERIA, ESTIMATORS, KERNELS, NOISES, SCALES
+from fastsmooth.addresses import DEFAULT_TIMEOUT_SECONDS
+from fastsmooth.errors import InputError
+from fastsmooth.settings import (
+    BANDS,
+    BIASES,
+    CRITERIA,
+    ENGINES,
+    ESTIMATORS,
+    KERNELS,
+    NEAREST,
+    NOISES,
+    SCALES,
+)  # fmt: skip
 
 if TYPE_CHECKING:
     from fastsmooth.curve import Curve
@@ -35,8 +47,8 @@ def choice(name: str, words: tuple[str, ...], text: str) -> Callable[[Any], Any]
 
 DATA_OPTIONS = with_options(
     click.argument("data", nargs=-1, required=True),
-    click.option("--x", required=True, metavar="COLUMN", help="Column along the axis."),
-    click.option("--y", required=True, metavar="COLUMN", help="Column whose mean is sought."),
+    click.option("--x", metavar="COLUMN", help="Column along the axis; a store knows its own."),
+    click.option("--y", metavar="COLUMN", help="Column whose mean is sought."),
     click.option("--weight", metavar="COLUMN", help="Precision of each row (1 / variance)."),
     click.option("--count", metavar="COLUMN", help="How many equal rows each row stands for."),
     click.option("--where", metavar="SQL", help="Use rows that meet this SQL condition."),
@@ -49,9 +61,13 @@ DATA_OPTIONS = with_options(
     click.option("--block", metavar="COLUMN[:UNIT]",
                  help="Rows that may depend on each other: a column, or a time column with hour, "
                  "day, week or month, as in logged_at:day."),
+    click.option("--timeout", type=float, default=DEFAULT_TIMEOUT_SECONDS, show_default=True,
+                 metavar="SECONDS", help="How long a silent object store is waited for."),
+    click.option("--last", metavar="SPAN",
+                 help="Of a store: only so much up to its newest period, as in '12 months'."),
 )  # fmt: skip
 SMOOTHING_OPTIONS = with_options(
-    choice("--estimator", ESTIMATORS, "Estimator"),
+    choice("--estimator", (*ESTIMATORS, NEAREST), "Estimator"),
     choice("--kernel", KERNELS, "Kernel"),
     click.option("--bandwidth", metavar="WIDTH",
                  help="Your own width in units of x (a factor with --scale log)."),
@@ -60,6 +76,11 @@ SMOOTHING_OPTIONS = with_options(
         "else leave-one-out.")),
     click.option("--widths", type=int, default=48, show_default=True, metavar="N",
                  help="Widths in the search grid."),
+    click.option("--neighbours", type=int, metavar="K",
+                 help="Your own number of rows with --estimator nearest."),
+    choice("--engine", ENGINES, "Sums over bins, or over every row in memory"),
+    click.option("--memory", type=float, default=4.0, show_default=True, metavar="GIGABYTES",
+                 help="What the exact engine may take."),
 )  # fmt: skip
 BAND_OPTIONS = with_options(
     click.option("--level", type=float, default=0.95, show_default=True, metavar="SHARE",
@@ -85,20 +106,21 @@ VOICE_OPTIONS = with_options(
 
 def _reading(
     where: str | None, range_: tuple[str, str] | None, scale: str, strict: bool,
-    threads: int | None, folds: int, block: str | None,
+    threads: int | None, folds: int, block: str | None, timeout: float, last: str | None,
 ) -> Reading:  # fmt: skip
     from fastsmooth.settings import Reading, usable_cores
 
     threads = usable_cores() if threads is None else threads
-    return Reading(where, range_, scale, strict, threads, folds, block)
+    return Reading(where, range_, scale, strict, threads, folds, block, timeout, last)
 
 
 def _smoothing(
-    estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int
+    estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int,
+    neighbours: int | None, engine: str, memory: float,
 ) -> Smoothing:
     from fastsmooth.settings import Smoothing
 
-    return Smoothing(estimator, kernel, bandwidth, criterion, widths)
+    return Smoothing(estimator, kernel, bandwidth, criterion, widths, engine, memory, neighbours)
 
 
 def _band(
@@ -115,15 +137,33 @@ def _take(options: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
     return {name: options.pop(name) for name in names}
 
 
+def check_given(data: tuple[str, ...], options: dict[str, Any]) -> None:
+    """Refuse data without the names of x and y, unless they are a store, which knows them."""
+    from fastsmooth.store.disk import is_store
+
+    if len(data) == 1 and is_store(data[0]):
+        return
+    for name in ("x", "y"):
+        if options[name] is None:
+            command = click.get_current_context().command_path
+            raise InputError(f"--{name}", "be given", "it is missing", f"see '{command} --help'")
+
+
 def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> Curve:
     """Call the API with what the three groups of options say."""
     from fastsmooth.api import make_curve
 
+    check_given(data, options)
     reading = _reading(
-        **_take(options, ("where", "range_", "scale", "strict", "threads", "folds", "block"))
+        **_take(options, (
+            "where", "range_", "scale", "strict", "threads", "folds", "block", "timeout", "last",
+        ))
     )
     smoothing = _smoothing(
-        **_take(options, ("estimator", "kernel", "bandwidth", "criterion", "widths"))
+        **_take(options, (
+            "estimator", "kernel", "bandwidth", "criterion", "widths", "neighbours", "engine",
+            "memory",
+        ))
     )
     names = (
         "level",

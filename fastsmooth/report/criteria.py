@@ -26,7 +26,7 @@ from fastsmooth.report.look import (  # fmt: skip
     set_ticks,
     write,
 )
-from fastsmooth.report.scales import Ticks, Track, number_ticks, width_ticks
+from fastsmooth.report.scales import Ticks, Track, log_ticks, number_ticks, width_ticks
 from fastsmooth.report.words import range_text, width_text
 from fastsmooth.trail import Trail
 
@@ -129,7 +129,7 @@ def draw_criteria(panel: Axes, lanes: Axes, place: Box, curve: Curve, ruler: Rul
     """
     paths = _paths(curve)
     given = None
-    if curve.settings["bandwidth"] is not None:
+    if curve.width_given:
         given = float(_on_scale(curve, np.array([curve.bandwidth]))[0])
         low, high = _width_ends(paths, None)
         if paths and not low / _FAR_AWAY < given < high * _FAR_AWAY:
@@ -150,7 +150,11 @@ def draw_criteria(panel: Axes, lanes: Axes, place: Box, curve: Curve, ruler: Rul
     panel.tick_params(axis="x", length=0.0, labelbottom=False)
     scale = _Inches(place, (low, high), (bottom, top))
     track = Track(scale.across, lambda text: ruler.width(text, LABEL_PT))
-    width_marks = width_ticks(low, high, curve.axis, curve.scale == "log", track)
+    width_marks = (
+        log_ticks(low, high, track)
+        if curve.by_neighbours
+        else width_ticks(low, high, curve.axis, curve.scale == "log", track)
+    )
     set_ticks(panel.xaxis, width_marks)
     set_ticks(lanes.xaxis, width_marks)
     for path in paths:
@@ -274,7 +278,7 @@ def _best_text(curve: Curve, path: _Path) -> str:
     if not np.isfinite(path.least):
         return f"{name}: undefined at every width"
     verb = "best"
-    if path.used and curve.settings["bandwidth"] is None:
+    if path.used and not curve.width_given:
         verb = "chosen"
     elif curve.search.criterion == "plug-in":
         verb = "plug-in"

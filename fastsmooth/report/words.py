@@ -26,12 +26,16 @@ def width_text(curve: Curve, width: float) -> str:
     """Write a bandwidth with the unit of x, where it is a plain number."""
     text = curve.width_label(width)
     unit = curve.settings["x_unit"]
-    plain = curve.scale == "linear" and curve.axis.kind == "number"
+    plain = (
+        curve.scale == "linear" and curve.axis.kind == "number" and not curve.by_neighbours
+    )
     return f"{text} {unit}" if plain and unit else text
 
 
 def range_text(curve: Curve, low: float, high: float) -> str:
     """Write an interval of bandwidths, what both ends share only once."""
+    if curve.by_neighbours:
+        return f"{low:,.0f} to {curve.width_label(high)}"
     if curve.scale == "log":
         return f"factor {low:.4g} to {high:.4g}"
     return f"{curve.width_label(low)} to {width_text(curve, high)}"
@@ -49,11 +53,13 @@ def subtitle(curve: Curve) -> str:
     criterion = told["criterion"]
     chosen = f"chosen by {criterion}"
     trail = curve.search.trails.get(told["estimator"])
-    if told["bandwidth"] is not None:
+    if curve.width_given:
         chosen = "as given"
         if trail is not None:
             chosen += f" ({criterion} would choose {width_text(curve, trail.bandwidth)})"
     fit = f"{told['estimator']}, {told['kernel']} kernel, bandwidth {width}, {chosen}."
+    if curve.by_neighbours:
+        fit = f"mean of the nearest {width}, {chosen}."
     if not np.isfinite(curve.estimate).any():
         return f"There is no line: no point has rows near enough. {taken}, {fit}"
     subject = "The points are" if has_own_points(curve) else "The line is"
@@ -83,6 +89,8 @@ def criterion(curve: Curve) -> tuple[str, str]:
 
 def width_axis(curve: Curve) -> str:
     """Return the name of the bandwidth axis."""
+    if curve.by_neighbours:
+        return named(curve.width_word, "")
     if curve.scale == "log":
         return "bandwidth (factor)"
     unit = curve.settings["x_unit"] if curve.axis.kind == "number" else ""
