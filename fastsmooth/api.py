@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from functools import partial
 from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.assemble import Chosen, assemble
+from fastsmooth.assemble import Chosen, assemble, middle_of
 from fastsmooth.bintable import BinTable, Pyramid
 from fastsmooth.curve import Curve
 from fastsmooth.errors import InputError
@@ -26,6 +27,15 @@ from fastsmooth.passes import (
     count_rows,
     silent,
 )
+from fastsmooth.reweighted import Reweighted
+from fastsmooth.robust import (
+    ENOUGH,
+    ROUNDS,
+    core_of,
+    farthest_move,
+    robust_facts,
+)
+from fastsmooth.robust import POINTS as ROBUST_POINTS
 from fastsmooth.search import search_neighbours, search_table
 from fastsmooth.settings import NEAREST, Band, Reading, Smoothing, check_text
 from fastsmooth.source import Columns, Source, open_source
@@ -118,6 +128,11 @@ def make_curve(
         raise InputError(
             "--weight", f"be left out with --estimator {NEAREST}",
             "its mean is over so many rows, all alike", "give --count, or take another estimator",
+        )  # fmt: skip
+    if smoothing.robust and weight is not None:
+        raise InputError(
+            "--weight", "be left out with --robust", "it is given",
+            "rows are weighed by how far they lie from the curve; give --count, or leave one out",
         )  # fmt: skip
     block = None if reading.blocks is None else reading.blocks.column
     columns = Columns(x, y, weight, count, block=block)
@@ -288,8 +303,24 @@ def count_and_search(
     progress: Progress,
     counting: Counting = count_pass,
 ) -> Chosen:
-    """Read and search; read again with finer bins while the chosen width asks for them."""
+    """Read and search; read again with finer bins or new weights where they are asked for."""
     counted = count_rows(source, reading, progress, counting)
+    if smoothing.robust:
+        return _search_in_rounds(source, counted, reading, smoothing, fixed, places, progress)
+    return search_counted(source, counted, reading, smoothing, fixed, places, progress, counting)
+
+
+def search_counted(
+    source: Source,
+    counted: Counted,
+    reading: Reading,
+    smoothing: Smoothing,
+    fixed: float | None,
+    places: Floats | None,
+    progress: Progress,
+    counting: Counting = count_pass,
+) -> Chosen:
+    """Search the rows counted; read again with finer bins while the chosen width asks for them."""
     shape = SHAPES[smoothing.kernel]
     search = partial(
         search_table, criterion=criterion_of(reading, smoothing),
@@ -297,9 +328,11 @@ def count_and_search(
     )  # fmt: skip
     if smoothing.estimator == NEAREST:
         return _search_neighbours(source, counted, reading, smoothing, places, progress)
-    engine, reason = choose_engine(
-        smoothing.engine, smoothing.kernel, counted.table, smoothing.memory_gigabytes
-    )
+    engine, reason = "binned", "rows are weighed in passes"
+    if not smoothing.robust:
+        engine, reason = choose_engine(
+            smoothing.engine, smoothing.kernel, counted.table, smoothing.memory_gigabytes
+        )
     fine = shape.fewest_bins_per_bandwidth
     for tried in range(1, _MOST_SEARCHES + 1):
         progress("searching", 0, None)
@@ -326,6 +359,38 @@ def count_and_search(
     found = search(counted.table, pyramid, shape, scoring=scoring)
     bandwidth = fixed or found.trails[smoothing.estimator].bandwidth
     return Chosen(counted, pyramid, found, shape, bandwidth, places, rows, reason)
+
+
+def _search_in_rounds(
+    source: Source,
+    counted: Counted,
+    reading: Reading,
+    smoothing: Smoothing,
+    fixed: float | None,
+    places: Floats | None,
+    progress: Progress,
+) -> Chosen:
+    """Search, weigh the rows by how far they lie from the curve, and search again; in passes."""
+    from fastsmooth.lookup import Lookup
+
+    sample = counted.sample
+    chosen = search_counted(source, counted, reading, smoothing, fixed, places, progress)
+    low, high = chosen.counted.table.extent.tolist()
+    core = core_of(sample, np.linspace(low, high, ROBUST_POINTS))
+    if core is None:
+        return replace(chosen, robust={"rounds": 0, "reason": "half of the rows lie on the curve"})
+    log = reading.scale == "log"
+    rounds, moved = 0, math.inf
+    while rounds < ROUNDS and moved > ENOUGH:
+        rounds += 1
+        weighed = Reweighted(source, Lookup([core.points(log)], log))
+        table = chosen.counted.table
+        counted = count_finer(weighed, chosen.counted, reading, table.plan.bins, progress)
+        chosen = search_counted(weighed, counted, reading, smoothing, fixed, places, progress)
+        before, core = core, core_of(sample, core.x, middle_of(chosen, smoothing, core.x)) or core
+        moved = farthest_move(before, core)
+    counts = (weighed.rows[0], weighed.down[0], weighed.ignored[0])
+    return replace(chosen, core=core, robust=robust_facts(core, counts, rounds, moved))
 
 
 def _search_neighbours(

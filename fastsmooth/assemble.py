@@ -36,6 +36,7 @@ from fastsmooth.nearest import (
     sample_residuals,
 )
 from fastsmooth.passes import Counted
+from fastsmooth.robust import Core
 from fastsmooth.scoring import BinnedScoring
 from fastsmooth.search import left_out_error
 from fastsmooth.serial import serial_facts
@@ -57,6 +58,10 @@ _ROUNDINGS = 16.0
 _DENSITY_STRETCHES = 120
 _DENSITY_STEPS = 72
 _SUPPORT_POINTS = 256
+# A curve to be read anywhere: between points so close, a cubic spline departs from it by about a
+# hundredth of its standard error.
+_POINTS_PER_WINDOW = 8
+_DENSE_POINTS = (256, 8192)
 
 
 @dataclass(frozen=True)
@@ -83,6 +88,10 @@ class Chosen:
         Why this engine ran.
     near : Neighbours or None
         Rows in groups for the estimator ``nearest``; `bandwidth` is then the number of rows.
+    core : Core or None
+        Where most rows lie, if far rows weigh less.
+    robust : dict or None
+        What the weights did.
     """
 
     counted: Counted
@@ -94,6 +103,8 @@ class Chosen:
     rows: Rows | None = None
     engine_reason: str = "asked for"
     near: Neighbours | None = None
+    core: Core | None = None
+    robust: dict[str, Any] | None = None
 
     def scoring(self) -> BinnedScoring:
         """Return what scores a bandwidth over all rows."""
@@ -153,6 +164,7 @@ def assemble(
         "landmarks": None,
         "plan": json.loads(json.dumps(plan.to_dict())),
         "versions": dict(_versions()),
+        "robust": _robust_in_axis(chosen.robust, log),
         "serial": serial_facts(found.residuals, sample, table.tally.used),
     }
     if found.landmarks is not None:
@@ -183,7 +195,15 @@ def _places(chosen: Chosen, band: Band) -> Floats:
     if chosen.places is not None:
         return chosen.places
     low, high = chosen.counted.table.extent.tolist()
-    return np.linspace(low, high, band.points)
+    points = band.points
+    if points is None:
+        # How often the window fits into the range.
+        windows = (high - low) / chosen.bandwidth
+        if chosen.near is not None:
+            windows = chosen.counted.table.tally.used / chosen.bandwidth
+        fewest, most = _DENSE_POINTS
+        points = int(min(max(fewest, _POINTS_PER_WINDOW * windows), most)) + 1
+    return np.linspace(low, high, points)
 
 
 def _by_bandwidth(
@@ -200,6 +220,10 @@ def _by_bandwidth(
     estimator = smoothing.estimator
     fits = fit_level(level, shape, bandwidth, empty)
     noise = estimate_noise(fits, estimator, shape, band.noise)
+    if chosen.core is not None:
+        noise = _core_noise(noise, chosen.core, level, band.noise)
+    # Weights made from the residuals themselves are no precisions: folds tell the error.
+    by_fold = plan.block is not None or chosen.core is not None
     occupied = Occupied(plan.origin, plan.width, np.flatnonzero(pyramid.levels[0].first[0]))
     exact, rows = None, chosen.rows
     if rows is not None:
@@ -211,7 +235,7 @@ def _by_bandwidth(
     def evaluate(at: Floats, as_band: Band) -> Points:
         return fit_points(
             at, fits, noise, shape, estimator=estimator, reference=plan.reference, band=as_band,
-            by_block=plan.block is not None, extent=(low, high), occupied=occupied, exact=exact,
+            by_block=by_fold, extent=(low, high), occupied=occupied, exact=exact,
         )  # fmt: skip
 
     points = evaluate(places, band)
@@ -220,8 +244,8 @@ def _by_bandwidth(
         error = binning_error(points, places, level, bandwidth, shape, estimator, plan.reference)
     score = chosen.search.trails[estimator].score
     if smoothing.bandwidth is not None:
-        by_fold = chosen.search.criterion == "leave-block-out"
-        score = left_out_error(chosen.scoring(), bandwidth, estimator, by_fold=by_fold)
+        by_block = chosen.search.criterion == "leave-block-out"
+        score = left_out_error(chosen.scoring(), bandwidth, estimator, by_fold=by_block)
     engine = {
         "name": "binned" if rows is None else "exact", "reason": chosen.engine_reason,
         "bins": plan.bins, "bins_per_bandwidth": bandwidth / plan.width,
@@ -295,6 +319,34 @@ def _by_neighbours(
     return Evaluated(places, points, engine, fit, None, without_folds, residuals)
 
 
+def middle_of(chosen: Chosen, smoothing: Smoothing, places: Floats) -> Floats:
+    """Return the curve at places on the plan's scale; NaN where there is none."""
+    pyramid, shape, bandwidth = chosen.pyramid, chosen.shape, chosen.bandwidth
+    finer = _FINER_FOR_CURVE * shape.bins_per_bandwidth
+    level = pyramid.levels[pyramid.level_for(bandwidth, finer)]
+    value = values_at(places, level, bandwidth, shape, smoothing.estimator)
+    return value + pyramid.plan.reference
+
+
+def _core_noise(noise: Noise, core: Core, level: Level, kind: str) -> Noise:
+    """The noise of most rows: weights leave too little of that of all."""
+    sd = core.sd_at(level.centres)
+    if kind == "constant":
+        sd = np.full(level.bins, np.median(sd))
+    variance = sd**2
+    return Noise(variance, noise.degrees, float(np.median(variance)), noise.bandwidth)
+
+
+def _robust_in_axis(facts: dict[str, Any] | None, log: bool) -> dict[str, Any] | None:
+    if facts is None or not log or "where" not in facts:
+        return facts
+    where = [
+        {**one, "low": math.exp(one["low"]), "high": math.exp(one["high"])}
+        for one in facts["where"]
+    ]
+    return {**facts, "where": where}
+
+
 def _residual_sd(noise: Noise) -> float:
     return math.sqrt(noise.overall) if noise.overall > 0.0 else 0.0
 
@@ -305,13 +357,13 @@ def _settings(
     plan = chosen.counted.table.plan
     own = smoothing.bandwidth is not None
     return {
-        "x": plan.columns.x, "y": plan.columns.y, "weight": plan.columns.weight,
+        "x": plan.columns.x, "y": plan.columns.y, "weight": source.columns.weight,
         "count": plan.columns.count, "x_unit": source.x_unit, "y_unit": source.y_unit,
         "where": reading.where, "range": _plain_range(reading), "scale": plan.scale,
         "estimator": smoothing.estimator, "kernel": smoothing.kernel,
         "criterion": chosen.search.criterion, "block": plan.block, "engine": smoothing.engine,
         "bandwidth": _in_axis(chosen.bandwidth, plan.scale == "log") if own else None,
-        "neighbours": smoothing.neighbours,
+        "neighbours": smoothing.neighbours, "robust": smoothing.robust,
         "widths": smoothing.widths, "level": band.level, "band": band.kind, "bias": band.bias,
         "noise": band.noise, "least_rows": band.least_rows, "folds": plan.folds,
         "points": band.points, "at": None if band.at is None else [str(one) for one in band.at],

@@ -196,6 +196,8 @@ class Smoothing:
         What the exact engine may take; beyond it, it is refused.
     neighbours : int or None
         Rows that ``nearest`` takes the mean of; None lets the criterion choose.
+    robust : bool
+        Whether rows far from the curve weigh less, in up to three further passes over the data.
     """
 
     estimator: str = "local-linear"
@@ -206,6 +208,7 @@ class Smoothing:
     engine: str = "auto"
     memory_gigabytes: float = 4.0
     neighbours: int | None = None
+    robust: bool = False
 
     def __post_init__(self) -> None:
         one_of("--estimator", self.estimator, (*ESTIMATORS, NEAREST))
@@ -222,6 +225,11 @@ class Smoothing:
         )  # fmt: skip
         if self.neighbours is not None:
             _set(self, neighbours=whole_number("--neighbours", self.neighbours, 1))
+        check_flag("--robust", self.robust)
+        if self.robust and self.engine == "exact":
+            raise InputError(
+                "--robust", "come with the binned engine", "--engine is exact", "leave --engine out"
+            )
         self._check_nearest()
 
     def _check_nearest(self) -> None:
@@ -237,6 +245,11 @@ class Smoothing:
             raise InputError(
                 "--bandwidth", f"be left out with --estimator {NEAREST}", "it is given",
                 "give --neighbours",
+            )  # fmt: skip
+        if self.robust:
+            raise InputError(
+                "--robust", "come with another estimator", f"--estimator is {NEAREST}",
+                "leave --estimator out",
             )  # fmt: skip
         if self.criterion not in (None, "leave-one-out", "leave-block-out"):
             raise InputError(
@@ -266,10 +279,11 @@ class Band:
         ``local`` lets the residual variance change with x; ``constant`` does not.
     least_rows : float
         Points with fewer effective rows are ``thin`` (not with ``nearest``, whose windows hold
-        as many rows everywhere: there a gap in the middle of the window is); with a block also those whose window
-        meets fewer than twelve folds, or whose error has fewer than four degrees of freedom.
-    points : int
-        Evenly spaced points from the lowest to the highest x (in log x on a log scale).
+        as many rows everywhere: there a gap in the middle of the window is); with a block also
+        those whose window meets fewer than twelve folds, or whose error has fewer than four degrees of freedom.
+    points : int or None
+        Evenly spaced points from the lowest to the highest x (in log x on a log scale); None
+        takes as many as the width asks for, so that the curve can be read anywhere between.
     at : tuple or None
         Points of the caller's own, in the column's terms, in place of `points`.
     landmarks : bool
@@ -285,7 +299,7 @@ class Band:
     bias: str = "corrected"
     noise: str = "local"
     least_rows: float = 30.0
-    points: int = 256
+    points: int | None = 256
     at: tuple[object, ...] | None = None
     landmarks: bool = False
     crossings: tuple[float, ...] = ()
@@ -308,8 +322,9 @@ class Band:
         crossings = tuple(
             finite_number("--crossing", one, "be a finite number") for one in crossings
         )
-        points = whole_number("--points", self.points, 2, 1_000_000)
-        _set(self, level=level, least_rows=least, crossings=crossings, points=points)
+        _set(self, level=level, least_rows=least, crossings=crossings)
+        if self.points is not None:
+            _set(self, points=whole_number("--points", self.points, 2, 1_000_000))
         if self.at is not None:
             _set(self, at=as_tuple("--at", self.at, "hold points, one by one", "put it in a tuple"))
             if not self.at:

@@ -9,6 +9,7 @@ import numpy as np
 
 from fastsmooth.curve import STATUSES, Curve
 from fastsmooth.fitness import DEFINITIONS
+from fastsmooth.robust import worst_stretches
 from fastsmooth.trail import Search, Trail
 
 if TYPE_CHECKING:
@@ -40,6 +41,7 @@ def curve_lines(made: Curve) -> list[str]:
         + (" of a row of weight 1)" if settings["weight"] is not None else ")")
     )
     lines.append(_fit_line(made))
+    lines += _robust_lines(made)
     lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
     counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
     ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
@@ -95,6 +97,7 @@ def curve_facts(made: Curve) -> dict[str, Any]:
         "points": status_counts(made),
         "engine": made.trace["engine"],
         "fit": made.trace["fit"],
+        "robust": made.trace.get("robust"),
         "fit_definitions": DEFINITIONS,
         "landmarks": made.trace["landmarks"],
         "serial_correlation": made.trace["serial"],
@@ -135,6 +138,30 @@ def _fit_line(made: Curve) -> str:
         f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, "
         f"NMBE {percent('nmbe')}"
     )
+
+
+def _robust_lines(made: Curve) -> list[str]:
+    facts = made.trace.get("robust")
+    if facts is None:
+        return []
+    if not facts["rounds"]:
+        return [f"robust     every row has its full weight: {facts['reason']}"]
+    judged = max(facts["rows_judged"], 1)
+    text = (
+        f"robust     {facts['rows_down_weighted']:,} rows "
+        f"({facts['rows_down_weighted'] / judged:.2%}) count less than half, "
+        f"{facts['rows_ignored']:,} of them not at all"
+    )
+    label = made.axis.label
+    worst = [
+        f"{label(one['low'])} to {label(one['high'])} ({one['down_weighted'] / one['rows']:.0%})"
+        for one in worst_stretches(facts)
+    ]
+    if worst:
+        text += "; most in " + ", ".join(worst)
+    rounds = facts["rounds"]
+    text += f"; {rounds} round{'s' if rounds > 1 else ''} of weights, the last moved the curve by "
+    return [text + f"{facts['last_move_in_sd']:.2g} residual sd"]
 
 
 def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:

@@ -78,6 +78,8 @@ SMOOTHING_OPTIONS = with_options(
                  help="Widths in the search grid."),
     click.option("--neighbours", type=int, metavar="K",
                  help="Your own number of rows with --estimator nearest."),
+    click.option("--robust", is_flag=True,
+                 help="Rows far from the curve weigh less; up to three more passes."),
     choice("--engine", ENGINES, "Sums over bins, or over every row in memory"),
     click.option("--memory", type=float, default=4.0, show_default=True, metavar="GIGABYTES",
                  help="What the exact engine may take."),
@@ -116,11 +118,13 @@ def _reading(
 
 def _smoothing(
     estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int,
-    neighbours: int | None, engine: str, memory: float,
+    neighbours: int | None, robust: bool, engine: str, memory: float,
 ) -> Smoothing:
     from fastsmooth.settings import Smoothing
 
-    return Smoothing(estimator, kernel, bandwidth, criterion, widths, engine, memory, neighbours)
+    return Smoothing(
+        estimator, kernel, bandwidth, criterion, widths, engine, memory, neighbours, robust
+    )
 
 
 def _band(
@@ -161,8 +165,8 @@ def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> 
     )
     smoothing = _smoothing(
         **_take(options, (
-            "estimator", "kernel", "bandwidth", "criterion", "widths", "neighbours", "engine",
-            "memory",
+            "estimator", "kernel", "bandwidth", "criterion", "widths", "neighbours", "robust",
+            "engine", "memory",
         ))
     )
     names = (

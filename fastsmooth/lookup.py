@@ -1,0 +1,313 @@
+"""Curves of one or many units cut into cells, so that every row finds its own at once."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fastsmooth.curve import EDGE, OK, OUTSIDE, Curve
+from fastsmooth.curve import THIN as THIN_POINT
+from fastsmooth.errors import InputError
+
+Floats = NDArray[np.float64]
+Codes = NDArray[np.int8]
+Units = int | NDArray[np.int64]
+
+ROW_STATUSES = (
+    "inside", "above", "below", "thin", "no support", "no reading", "no curve", "unknown unit",
+)  # fmt: skip
+INSIDE, ABOVE, BELOW, THIN, NO_SUPPORT, NO_READING, NO_CURVE, UNKNOWN_UNIT = range(8)
+# Rows from here on have neither an expected value nor a residual.
+FIRST_WITHOUT_VALUES = NO_SUPPORT
+
+_BLOCK_ROWS = 16_384
+# Points of a curve lie evenly on its scale; this many steps are rounding.
+_UNEVEN_STEPS = 1e-6
+# By the status of a point.
+_SUPPORT_OF_POINT = np.empty(4, np.int8)
+_SUPPORT_OF_POINT[[OK, EDGE, THIN_POINT, OUTSIDE]] = INSIDE, INSIDE, THIN, NO_SUPPORT
+
+
+class ScoredRows(NamedTuple):
+    """What the curve says of rows.
+
+    Attributes
+    ----------
+    expected, residual, z : (n,) float64
+        Mean of y at x; y less that; the residual in standard deviations of single rows at x. NaN
+        where there is none.
+    status : (n,) int8
+        Index into `ROW_STATUSES`.
+    """
+
+    expected: Floats
+    residual: Floats
+    z: Floats
+    status: Codes
+
+    def part(self, rows: slice) -> ScoredRows:
+        """Return a view of consecutive rows."""
+        return ScoredRows(self.expected[rows], self.residual[rows], self.z[rows], self.status[rows])
+
+    def put(self, rows: NDArray[np.int64], scored: ScoredRows) -> None:
+        """Write over some rows."""
+        self.expected[rows] = scored.expected
+        self.residual[rows] = scored.residual
+        self.z[rows] = scored.z
+        self.status[rows] = scored.status
+
+
+class CurvePoints(NamedTuple):
+    """What of a curve rows are held against.
+
+    Attributes
+    ----------
+    x, estimate, residual_sd : (n,) float64
+        As in `Curve`.
+    status : (n,) int64
+        As in `Curve`.
+    """
+
+    x: Floats
+    estimate: Floats
+    residual_sd: Floats
+    status: NDArray[np.int64]
+
+    @classmethod
+    def of(cls, curve: Curve) -> CurvePoints:
+        """Take the points of a curve."""
+        return cls(curve.x, curve.estimate, curve.residual_sd, curve.status)
+
+
+class Lookup:
+    """Curves by unit number, ready for many rows.
+
+    The value is that of `Curve.at`: a cubic spline through the points of each supported stretch.
+    The standard deviation of single rows is joined by straight lines. A row between two points
+    has the weaker support of both; a row on a point has that of the point.
+
+    Parameters
+    ----------
+    curves : iterable of CurvePoints or None
+        One for each unit, all of one axis; None for a unit without a curve. One unit more,
+        numbered `unknown`, stands for those that are not known.
+    log : bool
+        Whether the points lie evenly on a log scale.
+
+    Raises
+    ------
+    InputError
+        The points of a curve do not lie evenly.
+    """
+
+    def __init__(self, curves: Iterable[CurvePoints | None], log: bool) -> None:
+        self.log = log
+        held = list(curves)
+        self.unknown = len(held)
+        self.units = self.unknown + 1
+        sizes = np.array([0 if one is None else one.x.shape[0] for one in [*held, None]])
+        made = [one for one in held if one is not None] or [_NO_POINTS]
+        self._first = np.where(sizes > 0, np.cumsum(sizes) - sizes, 0)
+        self._last = np.maximum(sizes - 1.0, 0.0)
+        self._unscored = np.where(sizes > 0, INSIDE, NO_CURVE).astype(np.int8)
+        self._unscored[-1] = UNKNOWN_UNIT
+        self._x = np.concatenate([one.x for one in made])
+        estimate = np.concatenate([one.estimate for one in made])
+        sd = np.concatenate([one.residual_sd for one in made])
+        status = np.concatenate([one.status for one in made])
+        # The last point of each curve has no cell behind it.
+        ends = np.cumsum([one.x.shape[0] for one in made]) - 1
+
+        t = np.log(self._x) if log else self._x
+        # NaN is inside nothing, so rows of units without a curve take the careful way.
+        self._origin = np.full(self.units, np.nan)
+        self._per_step = np.zeros(self.units)
+        have = np.flatnonzero(sizes)
+        low, high = t[self._first[have]], t[self._first[have] + sizes[have] - 1]
+        self._origin[have] = low
+        self._per_step[have] = np.divide(
+            sizes[have] - 1, high - low, out=np.zeros(have.size), where=high > low
+        )
+        _check_even(t, self._first, sizes, self._origin, self._per_step)
+
+        self._cubic = _cubic_cells(estimate, ends)
+        self._spread = np.stack([sd, np.append(np.diff(sd), 0.0)])
+        self._spread[1, ends] = 0.0
+        self._at_point = _SUPPORT_OF_POINT[status]
+        self._at_point[~np.isfinite(estimate)] = NO_SUPPORT
+        self._between = np.maximum(self._at_point, np.append(self._at_point[1:], NO_SUPPORT))
+        self._between[ends] = NO_SUPPORT
+        fine = self._between == INSIDE
+        # Where both neighbours are fine too, a cell too far is no harm.
+        self._plain = fine & np.append(False, fine[:-1]) & np.append(fine[1:], False)
+
+    def score(
+        self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None = None
+    ) -> ScoredRows:
+        """Hold rows against the curves of their units.
+
+        Parameters
+        ----------
+        x, y : (n,) float64
+            Axis floats and readings; NaN where missing.
+        unit : int or (n,) int64
+            Number of each row's unit.
+        z_limit : float
+            A row whose z lies farther from 0 is outside the limits.
+        root_weight : (n,) float64 or None
+            Square root of each row's precision, by which its z is larger.
+
+        Returns
+        -------
+        ScoredRows
+            n rows.
+        """
+        n = x.shape[0]
+        rows = ScoredRows(np.empty(n), np.empty(n), np.empty(n), np.empty(n, np.int8))
+        with np.errstate(all="ignore"):  # what is undefined becomes NaN, and is told by status
+            for start in range(0, n, _BLOCK_ROWS):
+                # Blocks small enough that what lies between two steps stays in the cache.
+                part = slice(start, start + _BLOCK_ROWS)
+                self._score_block(
+                    x[part], y[part], unit if isinstance(unit, int) else unit[part], z_limit,
+                    None if root_weight is None else root_weight[part],
+                    rows.part(part),
+                )  # fmt: skip
+        return rows
+
+    def stretch(self, x: Floats, unit: Units, stretches: int) -> NDArray[np.int64]:
+        """Return in which of so many equal stretches of its unit's curve x lies; -1 in none."""
+        with np.errstate(all="ignore"):
+            u = np.log(x) if self.log else x
+            share = (u - self._origin[unit]) * self._per_step[unit] / self._last[unit]
+            inside = (share >= 0.0) & (share <= 1.0)
+        place = np.where(inside, share * stretches, 0.0).astype(np.int64)
+        return np.where(inside, np.minimum(place, stretches - 1), -1)
+
+    def _score_block(
+        self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None,
+        out: ScoredRows,
+    ) -> None:  # fmt: skip
+        """Score rows inside plain cells; find the others and score them with care."""
+        u = np.log(x) if self.log else x
+        u = (u - self._origin[unit]) * self._per_step[unit]
+        careful = ~((u >= 0.0) & (u <= self._last[unit]))
+        if careful.any():
+            u[careful] = 0.0
+        cell = u.astype(np.int64)
+        u -= cell
+        cell += self._first[unit]
+        careful |= ~self._plain.take(cell)
+        value = out.expected
+        self._cubic[0].take(cell, out=value, mode="clip")
+        term = np.empty_like(value)
+        for coefficient in self._cubic[1:]:
+            value *= u
+            value += coefficient.take(cell, out=term, mode="clip")
+        np.subtract(y, value, out=out.residual)
+        sd = self._spread[1].take(cell, out=term, mode="clip")
+        sd *= u
+        sd += self._spread[0].take(cell)
+        np.divide(out.residual, sd, out=out.z)
+        if root_weight is not None:
+            out.z[:] *= root_weight
+            careful |= ~(root_weight > 0.0)
+        careful |= ~np.isfinite(out.z)
+        out.status[:] = _side(out.z, z_limit)
+        if careful.any():
+            rows = np.flatnonzero(careful)
+            scored = self._score_with_care(
+                x[rows], y[rows],
+                np.full(rows.shape, unit) if isinstance(unit, int) else unit[rows], z_limit,
+                None if root_weight is None else root_weight[rows],
+            )  # fmt: skip
+            out.put(rows, scored)
+
+    def _score_with_care(
+        self, x: Floats, y: Floats, unit: NDArray[np.int64], z_limit: float,
+        root_weight: Floats | None,
+    ) -> ScoredRows:  # fmt: skip
+        """Score any rows: cells by comparison with the points themselves, not by rounding."""
+        first, last = self._first[unit], self._last[unit].astype(np.int64)
+        u = np.log(x) if self.log else x
+        u = (u - self._origin[unit]) * self._per_step[unit]
+        guess = np.clip(np.nan_to_num(u), 0, last).astype(np.int64)
+        cell = first + guess
+        cell -= (guess > 0) & (x < self._x[cell])
+        after = np.minimum(cell + 1, first + last)
+        cell = np.where(x >= self._x[after], after, cell)
+        on_point = x == self._x[cell]
+        u = np.where(on_point, 0.0, np.clip(u - (cell - first), 0.0, 1.0))
+        a, b, c, d = (coefficient[cell] for coefficient in self._cubic)
+        expected = ((a * u + b) * u + c) * u + d
+        residual = y - expected
+        sd = self._spread[0][cell] + np.where(on_point, 0.0, self._spread[1][cell]) * u
+        z = np.where(sd > 0.0, residual / sd, np.nan)
+        read = np.isfinite(x) & np.isfinite(y)
+        if root_weight is not None:
+            z = z * root_weight
+            read &= np.isfinite(root_weight) & (root_weight > 0.0)
+
+        support = np.where(on_point, self._at_point[cell], self._between[cell])
+        support[(x < self._x[first]) | (x > self._x[first + last])] = NO_SUPPORT
+        # Without a scatter to measure against there is no judgement either.
+        support[(support == INSIDE) & np.isnan(z)] = THIN
+        support[~read] = NO_READING
+        unscored = self._unscored[unit]
+        status = np.where(unscored != INSIDE, unscored, support).astype(np.int8)
+        judged = status == INSIDE
+        status[judged] = _side(z[judged], z_limit)
+        nothing = status >= FIRST_WITHOUT_VALUES
+        expected[nothing] = residual[nothing] = z[nothing] = np.nan
+        return ScoredRows(expected, residual, z, status)
+
+
+def _side(z: Floats, z_limit: float) -> Codes:
+    """Return `ABOVE` or `BELOW` for z beyond the limit, else `INSIDE`: the place that judges."""
+    return (z > z_limit) * np.int8(ABOVE) + (z < -z_limit) * np.int8(BELOW)
+
+
+def _check_even(
+    t: Floats, first: NDArray[np.int64], sizes: NDArray[np.int64], origin: Floats, per_step: Floats
+) -> None:
+    """Refuse curves whose points do not lie evenly, which those made at own points do not."""
+    unit = np.repeat(np.arange(sizes.size), sizes)
+    step = np.arange(unit.size) - first[unit]
+    if np.any(np.abs((t[: unit.size] - origin[unit]) * per_step[unit] - step) > _UNEVEN_STEPS):
+        raise InputError(
+            "--curve", "have evenly spaced points, between which rows can be scored",
+            "it was made with --at", "make it without",
+        )  # fmt: skip
+
+
+def _cubic_cells(estimate: Floats, ends: NDArray[np.int64]) -> Floats:
+    """Cubics of the share of a cell that lies behind, highest power first.
+
+    A spline runs through each stretch of known values and never over the end of a curve. Steps
+    are equal, so stretches of equal length are solved together.
+    """
+    from scipy.interpolate import CubicSpline
+
+    cubic = np.zeros((4, estimate.shape[0]))
+    cubic[3] = estimate
+    known = np.isfinite(estimate)
+    breaks = np.zeros(known.size + 1, np.bool_)
+    breaks[0] = True
+    breaks[ends + 1] = True
+    begins = np.flatnonzero(known & (breaks[:-1] | ~np.append(False, known[:-1])))
+    stops = np.flatnonzero(known & (breaks[1:] | ~np.append(known[1:], False))) + 1
+    lengths = stops - begins
+    for length in np.unique(lengths[lengths > 1]).tolist():
+        places = begins[lengths == length]
+        values = estimate[places + np.arange(length)[:, None]]
+        # (power, cell, stretch)
+        found = CubicSpline(np.arange(length), values).c
+        cells = places + np.arange(length - 1)[:, None]
+        cubic[:3, cells] = found[:3]
+    return cubic
+
+
+_NO_POINTS = CurvePoints(np.zeros(1), np.zeros(1), np.zeros(1), np.full(1, OUTSIDE))
