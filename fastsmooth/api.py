@@ -16,6 +16,7 @@ from fastsmooth.curve import Curve
 from fastsmooth.errors import InputError
 from fastsmooth.exact import ExactScoring, check_memory, choose_engine, gather_rows
 from fastsmooth.kernels.shapes import SHAPES
+from fastsmooth.limits import add_limits
 from fastsmooth.nearest import Neighbours
 from fastsmooth.passes import (
     Counted,
@@ -145,7 +146,8 @@ def make_curve(
             source, reading, smoothing, fixed, places, progress, counting
         )
         progress("fitting", 0, None)
-        return assemble(source, chosen, reading, smoothing, band)
+        made = assemble(source, chosen, reading, smoothing, band)
+        return add_limits(source, made, chosen.shape, reading, band.limits, progress)
 
 
 def search_bandwidth(

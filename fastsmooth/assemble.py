@@ -367,7 +367,8 @@ def _settings(
         "widths": smoothing.widths, "level": band.level, "band": band.kind, "bias": band.bias,
         "noise": band.noise, "least_rows": band.least_rows, "folds": plan.folds,
         "points": band.points, "at": None if band.at is None else [str(one) for one in band.at],
-        "landmarks": band.landmarks, "crossings": list(band.crossings), "strict": reading.strict,
+        "landmarks": band.landmarks, "crossings": list(band.crossings),
+        "limits": list(band.limits), "strict": reading.strict,
     }  # fmt: skip
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -88,6 +89,53 @@ class Density:
 
 
 @dataclass(frozen=True, eq=False)
+class Limits:
+    """Curves below which a share of the rows lies.
+
+    Attributes
+    ----------
+    levels : tuple of float
+        Shares, ascending.
+    values : (levels, n) float64
+        Limits at the curve's points, in units of y; NaN where too few rows lie beyond.
+    coverage : tuple of float
+        Share of left-out rows below each: rows of a part of the data, against limits made
+        without it. NaN where no row could be judged.
+    rows_judged : int
+        Rows that `coverage` rests on.
+    """
+
+    levels: tuple[float, ...]
+    values: Floats
+    coverage: tuple[float, ...]
+    rows_judged: int
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return plain data for JSON."""
+        return {
+            "levels": list(self.levels),
+            "values": [[_or_none(one) for one in row] for row in self.values.tolist()],
+            "coverage": [_or_none(one) for one in self.coverage],
+            "rows_judged": self.rows_judged,
+        }
+
+    @classmethod
+    def from_dict(cls, plain: dict[str, Any]) -> Limits:
+        """Build from what `to_dict` returned."""
+        values = [[_or_nan(one) for one in row] for row in plain["values"]]
+        coverage = tuple(_or_nan(one) for one in plain["coverage"])
+        return cls(tuple(plain["levels"]), np.array(values), coverage, plain["rows_judged"])
+
+
+def _or_none(value: float) -> float | None:
+    return value if math.isfinite(value) else None
+
+
+def _or_nan(value: float | None) -> float:
+    return math.nan if value is None else value
+
+
+@dataclass(frozen=True, eq=False)
 class Curve:
     """A reference curve: the mean of y as a function of x.
 
@@ -147,6 +195,7 @@ class Curve:
     cautions: tuple[Caution, ...]
     trace: dict[str, Any]
     without_folds: FoldCurves | None = None
+    limits: Limits | None = None
 
     @property
     def settings(self) -> dict[str, Any]:
@@ -250,6 +299,9 @@ class Curve:
         columns = {"x": self.axis.to_arrow(self.x)}
         for name in VALUES:
             columns[name] = column(getattr(self, name))
+        if self.limits is not None:
+            for level, values in zip(self.limits.levels, self.limits.values, strict=True):
+                columns[limit_name(level)] = column(values)
         columns["status"] = pa.array(self.statuses)
         metadata = {CURVE_KEY: json.dumps(self.to_dict(), allow_nan=False).encode()}
         return pa.table(columns).replace_schema_metadata(metadata)
@@ -266,6 +318,7 @@ class Curve:
             "cautions": [caution._asdict() for caution in self.cautions],
             "trace": self.trace,
             "without_folds": None if self.without_folds is None else self.without_folds.to_dict(),
+            "limits": None if self.limits is None else self.limits.to_dict(),
         }
 
     @classmethod
@@ -309,7 +362,7 @@ class Curve:
             Index into `STATUSES`.
         """
         # Curves written before deviations were kept have none.
-        kept = told.get("without_folds")
+        kept, limits = told.get("without_folds"), told.get("limits")
         return cls(
             x=np.array(told["x_floats"], np.float64),
             **values,
@@ -321,6 +374,7 @@ class Curve:
             cautions=tuple(Caution(**one) for one in told["cautions"]),
             trace=told["trace"],
             without_folds=None if kept is None else FoldCurves.from_dict(kept),
+            limits=None if limits is None else Limits.from_dict(limits),
         )
 
     def save(self, path: Any) -> None:
@@ -355,6 +409,11 @@ class Curve:
     def _spare_data(self, path: Any, argument: str) -> None:
         """Refuse to write over the data that the curve was made from."""
         spare_data([record["path"] for record in self.trace["files"]], path, argument)
+
+
+def limit_name(level: float) -> str:
+    """Return the name of a limit's column in a curve's table."""
+    return f"limit_{level:g}"
 
 
 def has_own_points(curve: Curve) -> bool:

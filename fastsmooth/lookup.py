@@ -24,6 +24,8 @@ INSIDE, ABOVE, BELOW, THIN, NO_SUPPORT, NO_READING, NO_CURVE, UNKNOWN_UNIT = ran
 FIRST_WITHOUT_VALUES = NO_SUPPORT
 
 _BLOCK_ROWS = 16_384
+# The last row may lie a hair beyond the last point.
+_ROUNDING = 1e-9
 # Points of a curve lie evenly on its scale; this many steps are rounding.
 _UNEVEN_STEPS = 1e-6
 # By the status of a point.
@@ -183,9 +185,9 @@ class Lookup:
         with np.errstate(all="ignore"):
             u = np.log(x) if self.log else x
             share = (u - self._origin[unit]) * self._per_step[unit] / self._last[unit]
-            inside = (share >= 0.0) & (share <= 1.0)
+            inside = (share >= -_ROUNDING) & (share <= 1.0 + _ROUNDING)
         place = np.where(inside, share * stretches, 0.0).astype(np.int64)
-        return np.where(inside, np.minimum(place, stretches - 1), -1)
+        return np.where(inside, np.clip(place, 0, stretches - 1), -1)
 
     def _score_block(
         self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None,

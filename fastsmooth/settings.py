@@ -280,7 +280,8 @@ class Band:
     least_rows : float
         Points with fewer effective rows are ``thin`` (not with ``nearest``, whose windows hold
         as many rows everywhere: there a gap in the middle of the window is); with a block also
-        those whose window meets fewer than twelve folds, or whose error has fewer than four degrees of freedom.
+        those whose window meets fewer than twelve folds, or whose error has fewer than four
+        degrees of freedom.
     points : int or None
         Evenly spaced points from the lowest to the highest x (in log x on a log scale); None
         takes as many as the width asks for, so that the curve can be read anywhere between.
@@ -290,6 +291,9 @@ class Band:
         Whether to locate the steepest place and the turning points, with intervals.
     crossings : tuple of float
         Values of y whose crossings are located too.
+    limits : tuple of float
+        Shares, as 0.05 and 0.95, for which to find the curve below which so many rows lie; one
+        more pass over the data.
     keep_folds : bool
         Whether the curve without each fold is kept with it, which comparisons need.
     """
@@ -303,6 +307,7 @@ class Band:
     at: tuple[object, ...] | None = None
     landmarks: bool = False
     crossings: tuple[float, ...] = ()
+    limits: tuple[float, ...] = ()
     keep_folds: bool = True
 
     def __post_init__(self) -> None:
@@ -325,9 +330,23 @@ class Band:
         _set(self, level=level, least_rows=least, crossings=crossings)
         if self.points is not None:
             _set(self, points=whole_number("--points", self.points, 2, 1_000_000))
+        self._check_limits()
         if self.at is not None:
             _set(self, at=as_tuple("--at", self.at, "hold points, one by one", "put it in a tuple"))
             if not self.at:
                 raise InputError(
                     "--at", "hold a point", "it is empty", "give points or leave it out"
                 )
+
+    def _check_limits(self) -> None:
+        shares, remedy = "hold shares between 0 and 1", "write 0.05 and 0.95"
+        limits = as_tuple("--limits", self.limits, shares, remedy)
+        limits = tuple(sorted({finite_number("--limits", one, shares, remedy) for one in limits}))
+        for one in limits:
+            if not 0.0 < one < 1.0:
+                raise InputError("--limits", shares, f"it holds {one:g}", remedy)
+        _set(self, limits=limits)
+        if limits and self.at is not None:
+            raise InputError(
+                "--limits", "come with evenly spaced points", "--at is given", "leave one out"
+            )

@@ -42,6 +42,7 @@ def curve_lines(made: Curve) -> list[str]:
     )
     lines.append(_fit_line(made))
     lines += _robust_lines(made)
+    lines += _limit_lines(made)
     lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
     counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
     ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
@@ -100,6 +101,13 @@ def curve_facts(made: Curve) -> dict[str, Any]:
         "robust": made.trace.get("robust"),
         "fit_definitions": DEFINITIONS,
         "landmarks": made.trace["landmarks"],
+        "limits": None
+        if made.limits is None
+        else {
+            "levels": list(made.limits.levels),
+            "coverage": list(made.limits.coverage),
+            "rows_judged": made.limits.rows_judged,
+        },
         "serial_correlation": made.trace["serial"],
         "cautions": [caution._asdict() for caution in made.cautions],
     }
@@ -138,6 +146,20 @@ def _fit_line(made: Curve) -> str:
         f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, "
         f"NMBE {percent('nmbe')}"
     )
+
+
+def _limit_lines(made: Curve) -> list[str]:
+    limits = made.limits
+    if limits is None:
+        return []
+    told = ", ".join(f"{100 * level:g} %" for level in limits.levels)
+    if not limits.rows_judged:
+        return [f"limits     {told}"]
+    found = ", ".join(f"{100 * share:.3g} %" for share in limits.coverage)
+    return [
+        f"limits     {told} of rows below; of {limits.rows_judged:,} rows held against limits made "
+        f"without them {found}"
+    ]
 
 
 def _robust_lines(made: Curve) -> list[str]:

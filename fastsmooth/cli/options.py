@@ -97,6 +97,9 @@ BAND_OPTIONS = with_options(
     click.option("--at", metavar="X,X,...", help="Points of your own instead."),
     click.option("--landmarks", is_flag=True,
                  help="Locate the steepest place and the turning points, with intervals."),
+    click.option("--limits", metavar="SHARE,SHARE,...",
+                 help="Curves below which these shares of the rows lie, as in 0.05,0.95; one more "
+                 "pass."),
     click.option("--crossing", "crossings", type=float, multiple=True, metavar="Y",
                  help="Locate where the curve crosses this value (may be repeated)."),
 )  # fmt: skip
@@ -129,12 +132,25 @@ def _smoothing(
 
 def _band(
     level: float, band: str, bias: str, noise: str, least_rows: float, points: int, at: str | None,
-    landmarks: bool, crossings: tuple[float, ...],
+    landmarks: bool, crossings: tuple[float, ...], limits: str | None,
 ) -> Band:  # fmt: skip
     from fastsmooth.settings import Band
 
     places = None if at is None else tuple(one.strip() for one in at.split(",") if one.strip())
-    return Band(level, band, bias, noise, least_rows, points, places, landmarks, crossings)
+    shares = () if limits is None else tuple(_share(one) for one in limits.split(","))
+    return Band(
+        level, band, bias, noise, least_rows, points, places, landmarks, crossings, limits=shares
+    )
+
+
+def _share(text: str) -> float:
+    try:
+        return float(text)
+    except ValueError:
+        raise InputError(
+            "--limits", "hold shares between 0 and 1", f"it holds '{text}'",
+            "write them with commas, as in 0.05,0.95",
+        ) from None  # fmt: skip
 
 
 def _take(options: dict[str, Any], names: Sequence[str]) -> dict[str, Any]:
@@ -179,6 +195,7 @@ def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> 
         "at",
         "landmarks",
         "crossings",
+        "limits",
     )
     band = _band(**_take(options, names)) if "level" in options else None
     return make_curve(
