@@ -1,16 +1,17 @@
-"""Arrow IPC files, memory-mapped, one task for each stretch of record batches."""
+"""Arrow IPC files, memory-mapped if local, one task for each stretch of record batches."""
 
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 
 import pyarrow as pa
 import pyarrow.dataset as ds
 import pyarrow.ipc as ipc
 
+from fastsmooth.addresses import as_address
 from fastsmooth.errors import ReadError
-from fastsmooth.files import FileRecord, Task, reading
+from fastsmooth.files import FileRecord, Task, open_input, reading, system_of
 from fastsmooth.readers import PartitionKeys, Reader, identify, rebatch, with_constants
 
 ROWS_PER_TASK = 1 << 20
@@ -24,7 +25,9 @@ class ArrowReader(Reader):
     A file in the stream format has no footer and is one task of unknown length.
     """
 
-    def __init__(self, paths: Sequence[str]) -> None:
+    def __init__(
+        self, paths: Sequence[str], key_types: Mapping[str, pa.DataType] | None = None
+    ) -> None:
         """Read the footers of `paths`."""
         records: list[FileRecord] = []
         tasks: list[Task] = []
@@ -38,14 +41,15 @@ class ArrowReader(Reader):
             rows = None
             with reading(path):
                 if _has_footer(path):
-                    with pa.memory_map(path) as mapped, ipc.open_file(mapped) as file:
+                    with open_input(path) as opened, ipc.open_file(opened) as file:
                         schema, count = file.schema, file.num_record_batches
-                        if count and _is_mapped(file.get_batch(0), mapped):
+                        local = isinstance(opened, pa.MemoryMappedFile)
+                        if count and local and _is_mapped(file.get_batch(0), opened):
                             self._mapped.add(place)
-                    rows = ds.dataset(path, format="ipc").count_rows()
+                    rows = _count_rows(path)
                     stretches = _cut(count, rows)
                 else:
-                    with pa.memory_map(path) as mapped, ipc.open_stream(mapped) as stream:
+                    with open_input(path) as opened, ipc.open_stream(opened) as stream:
                         schema, stretches = stream.schema, [None]
             self._own.append(schema)
             records.append(dataclasses.replace(record, rows=rows))
@@ -56,7 +60,8 @@ class ArrowReader(Reader):
                     label += f", record batches {stretch[0] + 1} to {stretch[-1] + 1}"
                 tasks.append(Task(len(tasks), label, rows if whole else None))
                 self._stretches.append((place, stretch))
-        self._keys = PartitionKeys(paths)
+        self._keys = PartitionKeys(paths, key_types)
+        self.key_types = self._keys.types
         self.files = tuple(records)
         self.places = tuple(paths)
         self.schemas = tuple(self._keys.extend(one, n) for n, one in enumerate(self._own))
@@ -84,19 +89,25 @@ class ArrowReader(Reader):
             # list means every field; one is enough to tell the number of rows.
             numbers = sorted(self._own[place].get_field_index(name) for name in stored)
             options = ipc.IpcReadOptions(included_fields=numbers or [0], use_threads=False)
-        with pa.memory_map(self.places[place]) as mapped:
+        with open_input(self.places[place]) as opened:
             if stretch is None:
-                with ipc.open_stream(mapped, options=options) as stream:
+                with ipc.open_stream(opened, options=options) as stream:
                     for batch in stream:
                         batch.validate()
                         yield batch
                 return
-            with ipc.open_file(mapped, options=options) as file:
+            with ipc.open_file(opened, options=options) as file:
                 for number in stretch:
                     batch = file.get_batch(number)
                     # Lengths that a damaged file states wrongly would be read beyond its end.
                     batch.validate()
                     yield batch
+
+
+def _count_rows(path: str) -> int:
+    """Add up what the record batches' own headers say."""
+    system, inner = system_of(path)
+    return int(ds.dataset(inner, format="ipc", filesystem=system).count_rows())
 
 
 def _cut(count: int, rows: int) -> list[range | None]:
@@ -120,7 +131,7 @@ def _is_mapped(batch: pa.RecordBatch, mapped: pa.MemoryMappedFile) -> bool:
 
 
 def _has_footer(path: str) -> bool:
-    with open(path, "rb") as file:
+    with open(path, "rb") if as_address(path) is None else open_input(path) as file:
         magic = file.read(len(FILE_MAGIC))
     if magic.startswith(FEATHER_1_MAGIC):
         raise ReadError(

@@ -123,6 +123,25 @@ def plain_array(array: pa.Array) -> pa.Array:
             return array if array.type == to else array.cast(to)
 
 
+def constant_array(value: pa.Scalar, rows: int) -> pa.DictionaryArray:
+    """Return a column that holds one value throughout, as a dictionary of that value.
+
+    Parameters
+    ----------
+    value : pyarrow.Scalar
+        The value; null gives nulls.
+    rows : int
+        Length of the column.
+
+    Returns
+    -------
+    pyarrow.DictionaryArray
+        `rows` values.
+    """
+    indices = pa.array(np.zeros(rows, np.int32), mask=np.full(rows, not value.is_valid))
+    return pa.DictionaryArray.from_arrays(indices, pa.array([value.as_py()], value.type))
+
+
 def is_number(data_type: pa.DataType) -> bool:
     """Tell whether values of a plain type become floats by value.
 

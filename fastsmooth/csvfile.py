@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 
 import numpy as np
@@ -11,6 +11,7 @@ import pyarrow as pa
 import pyarrow.csv as csv
 import pyarrow.types as pt
 
+from fastsmooth.addresses import as_address, open_stream
 from fastsmooth.casts import LARGEST_EXACT_INTEGER, Role, is_text
 from fastsmooth.errors import InputError
 from fastsmooth.files import Task, reading
@@ -29,7 +30,12 @@ class CsvReader(Reader):
     float64 even if they begin with integers. An empty field is null.
     """
 
-    def __init__(self, paths: Sequence[str], roles: Sequence[Role]) -> None:
+    def __init__(
+        self,
+        paths: Sequence[str],
+        roles: Sequence[Role],
+        key_types: Mapping[str, pa.DataType] | None = None,
+    ) -> None:
         """Infer the types of `paths`; `roles` are the columns that must be numbers or times."""
         self.files = tuple(identify(paths))
         self.places = tuple(paths)
@@ -46,7 +52,8 @@ class CsvReader(Reader):
                 frozenset(field.name for field in inferred if pt.is_integer(field.type))
                 & frozenset(self._roles)
             )
-        self._keys = PartitionKeys(paths)
+        self._keys = PartitionKeys(paths, key_types)
+        self.key_types = self._keys.types
         self.schemas = tuple(self._keys.extend(one, n) for n, one in enumerate(self._own))
         self.tasks = tuple(Task(n, path, None) for n, path in enumerate(paths))
         self.place_of = tuple(range(len(paths)))
@@ -94,8 +101,9 @@ class CsvReader(Reader):
 
 
 def _open(path: str, types: dict[str, pa.DataType] | None) -> csv.CSVStreamingReader:
+    address = as_address(path)
     return csv.open_csv(
-        path,
+        path if address is None else open_stream(address),
         read_options=csv.ReadOptions(use_threads=False, block_size=BLOCK_BYTES),
         parse_options=csv.ParseOptions(newlines_in_values=True),
         convert_options=csv.ConvertOptions(

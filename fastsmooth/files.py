@@ -1,20 +1,30 @@
-"""Paths, folders and globs to data files, and what identifies a file.
+"""Paths, folders, globs and addresses of data files, and what identifies a file.
 
-This is the only module that touches the file system by name.
+This is the only module that touches the file system by name; `addresses` does it for object stores.
 """
 
 from __future__ import annotations
 
 import glob
 import os
-from collections.abc import Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from concurrent.futures import ThreadPoolExecutor
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING, TypeVar
 from urllib.parse import unquote
 
+from fastsmooth import address_errors, addresses
+from fastsmooth.addresses import DEFAULT_TIMEOUT_SECONDS, as_address
 from fastsmooth.errors import InputError, ReadError
 from fastsmooth.near import advise
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+    import pyarrow.fs as pafs
+
+T = TypeVar("T")
 
 SUFFIXES = {
     ".parquet": "parquet",
@@ -27,6 +37,8 @@ SUFFIXES = {
 }
 SUFFIX_LIST = ", ".join(SUFFIXES)
 EMPTY_PARTITION = "__HIVE_DEFAULT_PARTITION__"
+# Questions to a store that may wait for their answers at a time.
+_ASKED_TOGETHER = 16
 
 
 @dataclass(frozen=True)
@@ -36,19 +48,22 @@ class FileRecord:
     Parameters
     ----------
     path : str
-        Its path, as given or found.
+        Its path or address, as given or found.
     size_bytes : int
         Its size.
     modified_ns : int
-        Its modification time, nanoseconds since 1970.
+        Its modification time, nanoseconds since 1970; 0 if an object store does not tell.
     rows : int or None
         Its rows, if its footer tells.
+    etag : str or None
+        What an object store calls its content.
     """
 
     path: str
     size_bytes: int
     modified_ns: int
     rows: int | None
+    etag: str | None = None
 
 
 @dataclass(frozen=True)
@@ -92,8 +107,13 @@ def file_format(path: str) -> str | None:
     return next((kind for suffix, kind in SUFFIXES.items() if name.endswith(suffix)), None)
 
 
-def find_files(data: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) -> tuple[str, ...]:
+def find_files(
+    data: str | os.PathLike[str] | Sequence[str | os.PathLike[str]],
+    timeout_seconds: float = DEFAULT_TIMEOUT_SECONDS,
+) -> tuple[str, ...]:
     """Turn a path, folder, glob, or a list of these into the data files meant, sorted by path.
+
+    An address (``s3://bucket/folder``) may stand for a path; see `fastsmooth.addresses`.
 
     In folders, names that begin with ``_`` or ``.`` and other suffixes than the known ones are
     passed over. A file that is named itself must have a known suffix.
@@ -102,6 +122,8 @@ def find_files(data: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) 
     ----------
     data : path or sequence of paths
         What the caller named.
+    timeout_seconds : float
+        How long a silent server is waited for.
 
     Returns
     -------
@@ -111,15 +133,16 @@ def find_files(data: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) 
     Raises
     ------
     InputError
-        Nothing there, no data file in it, an unknown suffix, two formats, or a file named twice.
+        Nothing there, no data file in it, an unknown suffix, two formats, a file named twice, or
+        a store that cannot be reached or must not be read.
     """
     given = [data] if isinstance(data, str | os.PathLike) else list(data)
     if not given:
         raise InputError("DATA", "name at least one file", "the list is empty", "name a file")
-    paths = sorted(path for one in given for path in _expand(os.fspath(one)))
+    paths = sorted(path for one in given for path in _expand(os.fspath(one), timeout_seconds))
     seen: dict[str, str] = {}
     for path in paths:
-        real = os.path.realpath(path)
+        real = path if as_address(path) else os.path.realpath(path)
         if real in seen:
             raise InputError(
                 "DATA",
@@ -141,23 +164,20 @@ def find_files(data: str | os.PathLike[str] | Sequence[str | os.PathLike[str]]) 
     return tuple(paths)
 
 
-def _expand(path: str) -> list[str]:
-    if "://" in path:
-        raise InputError(
-            "DATA",
-            "be a path, folder or glob on this computer",
-            f"'{path}' is an address",
-            "copy the files to a folder first",
-        )
+def _expand(path: str, timeout_seconds: float) -> list[str]:
+    address = as_address(path, timeout_seconds)
+    if address is not None:
+        with reading(address):
+            there = addresses.find(address, lambda name: file_format(name) is not None, _is_hidden)
+        if there is None:
+            raise _missing(address)
+        if not there:
+            raise _no_match(path) if glob.has_magic(path) else _no_data(path)
+        return [_known(one) for one in there]
     if os.path.isdir(path):
         found = list(_walk(path))
         if not found:
-            raise InputError(
-                "DATA",
-                "hold data files",
-                f"the folder '{path}' has none",
-                f"name a folder with files that end in {SUFFIX_LIST}",
-            )
+            raise _no_data(path)
         return found
     if os.path.exists(path):
         return [_known(path)]
@@ -173,17 +193,38 @@ def _expand(path: str) -> list[str]:
             else:
                 found.append(_known(match))
         if not found:
-            raise InputError(
-                "DATA", "match data files", f"'{path}' matches none", "check the pattern"
-            )
+            raise _no_match(path)
         return found
     raise _missing(path)
 
 
+def _no_data(folder: str) -> InputError:
+    return InputError(
+        "DATA",
+        "hold data files",
+        f"the folder '{folder}' has none",
+        f"name a folder with files that end in {SUFFIX_LIST}",
+    )
+
+
+def _no_match(path: str) -> InputError:
+    return InputError("DATA", "match data files", f"'{path}' matches none", "check the pattern")
+
+
 def _missing(path: str) -> InputError:
+    address = as_address(path)
+    if address is not None:
+        try:
+            if address.is_native and not addresses.has_bucket(address):
+                return address_errors.no_bucket(address)
+            folder, name, names = addresses.names_near(address)
+        except address_errors.foreign_errors():
+            # Who may not list a folder gets no hint.
+            folder, name, names = path, "", []
+        names = [one.rstrip("/") for one in names if one.endswith("/") or file_format(one)]
+        return _not_there(path, name, folder, [one for one in names if not _is_hidden(one)])
     folder, name = os.path.split(path)
     folder = folder or "."
-    requirement = "be an existing file, folder or glob"
     if not os.path.isdir(folder):
         while folder and not os.path.isdir(folder):
             folder, name = os.path.split(folder)
@@ -197,11 +238,17 @@ def _missing(path: str) -> InputError:
             )
     except OSError:
         names = []
+    return _not_there(path, name, folder, names)
+
+
+def _not_there(path: str, name: str, folder: str, names: list[str]) -> InputError:
     if not names:
         remedy = f"there are no data files in '{folder}'"
     else:
         remedy = f"{advise(name, names)} in '{folder}'"
-    return InputError("DATA", requirement, f"'{path}' does not exist", remedy)
+    return InputError(
+        "DATA", "be an existing file, folder or glob", f"'{path}' does not exist", remedy
+    )
 
 
 def _known(path: str) -> str:
@@ -259,7 +306,7 @@ def partition_keys(path: str) -> dict[str, str | None]:
 
 
 def read_identity(path: str, rows: int | None) -> FileRecord:
-    """Note a file's size and modification time.
+    """Note a file's size and modification time, and the ETag that an object store gives it.
 
     Parameters
     ----------
@@ -274,12 +321,20 @@ def read_identity(path: str, rows: int | None) -> FileRecord:
         The file as it is now.
     """
     with reading(path):
-        status = os.stat(path)
+        return _identity(path, rows)
+
+
+def _identity(path: str, rows: int | None) -> FileRecord:
+    address = as_address(path)
+    if address is not None:
+        size_bytes, modified_ns, etag = addresses.identify(address)
+        return FileRecord(path, size_bytes, modified_ns, rows, etag)
+    status = os.stat(path)
     return FileRecord(path, status.st_size, status.st_mtime_ns, rows)
 
 
 def check_unchanged(record: FileRecord) -> None:
-    """Refuse a file whose size or modification time is not what it was.
+    """Refuse a file whose size, modification time or ETag is not what it was.
 
     Parameters
     ----------
@@ -291,7 +346,9 @@ def check_unchanged(record: FileRecord) -> None:
     ReadError
         The file changed or went away.
     """
-    now = read_identity(record.path, record.rows) if os.path.exists(record.path) else None
+    now = None
+    with reading(record.path), suppress(FileNotFoundError):
+        now = _identity(record.path, record.rows)
     if now != record:
         raise ReadError(
             "DATA",
@@ -313,21 +370,23 @@ def reading(path: str) -> Iterator[None]:
     Raises
     ------
     InputError
-        The file is not there or must not be read.
+        The file is not there, must not be read, or its store does not answer.
     ReadError
         The file is damaged.
     """
-    import pyarrow as pa
-
+    address = as_address(path)
     try:
         yield
     except FileNotFoundError as error:
         raise _missing(path) from error
-    except PermissionError as error:
-        raise InputError(
-            "DATA", "be readable", f"there is no permission for '{path}'", "ask for it"
-        ) from error
-    except (pa.ArrowException, OSError) as error:
+    except address_errors.foreign_errors() as error:
+        answer = None if address is None else address_errors.explain(address, error)
+        if answer is not None:
+            raise answer from error
+        if isinstance(error, PermissionError):
+            raise InputError(
+                "DATA", "be readable", f"there is no permission for '{path}'", "ask for it"
+            ) from error
         raise ReadError(
             "DATA",
             "be readable whole",
@@ -340,6 +399,67 @@ def _first_sentence(error: BaseException) -> str:
     line = str(error).strip().split("\n")[0].strip()
     sentence = line.split(". ")[0].rstrip(".")
     return sentence[:160] if sentence else type(error).__name__
+
+
+def open_input(path: str) -> pa.NativeFile:
+    """Open a file for reading at any place: mapped into memory where it lies on this computer.
+
+    Parameters
+    ----------
+    path : str
+        Path or address of a file.
+
+    Returns
+    -------
+    pyarrow.NativeFile
+        To be closed by the caller.
+    """
+    import pyarrow as pa
+
+    address = as_address(path)
+    return pa.memory_map(path) if address is None else addresses.open_input(address)
+
+
+def system_of(path: str) -> tuple[pafs.FileSystem, str]:
+    """Return the file system that reaches a file, and the file's path in it.
+
+    Parameters
+    ----------
+    path : str
+        Path or address of a file.
+
+    Returns
+    -------
+    tuple of pyarrow.fs.FileSystem and str
+        For the parts of Arrow that take both.
+    """
+    import pyarrow.fs as pafs
+
+    address = as_address(path)
+    if address is None:
+        return pafs.LocalFileSystem(), path
+    return address.system, address.inner
+
+
+def ask_each(paths: Sequence[str], ask: Callable[[str], T]) -> list[T]:
+    """Ask the same of every file, in order; several at a time where an answer has far to come.
+
+    Parameters
+    ----------
+    paths : sequence of str
+        Paths or addresses.
+    ask : callable
+        Takes one of them.
+
+    Returns
+    -------
+    list
+        The answers.
+    """
+    if len(paths) < 2 or all(as_address(path) is None for path in paths):
+        return [ask(path) for path in paths]
+    with ThreadPoolExecutor(_ASKED_TOGETHER, thread_name_prefix="fastsmooth") as pool:
+        return list(pool.map(ask, paths))
 
 
 def join_names(names: Iterable[str]) -> str:

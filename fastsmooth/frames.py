@@ -12,6 +12,7 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from typing import Any
 
+import numpy as np
 import pyarrow as pa
 import pyarrow.dataset as ds
 import pyarrow.ipc as ipc
@@ -20,9 +21,14 @@ from fastsmooth.arrowfile import ArrowReader
 from fastsmooth.errors import InputError, ReadError
 from fastsmooth.files import Task
 from fastsmooth.parquet import ParquetReader
-from fastsmooth.readers import Extent, Reader, TableReader, pick, rebatch
+from fastsmooth.readers import Extent, Reader, TableReader, pick, rebatch, table_from_arrays
 
 IN_MEMORY = ("pandas", "polars")
+# Streams whose length is asked for first: how rows are dealt to folds depends on it.
+COUNTS: dict[str, Callable[[Any], int]] = {
+    "duckdb": len,
+    "ibis": lambda table: int(table.count().to_pyarrow().as_py()),
+}
 
 
 def open_frame(data: Any) -> Reader:
@@ -31,8 +37,8 @@ def open_frame(data: Any) -> Reader:
     Parameters
     ----------
     data : object
-        A pyarrow Table, RecordBatch, RecordBatchReader or Dataset, a polars LazyFrame, or anything
-        with ``__arrow_c_stream__``.
+        A pyarrow Table, RecordBatch, RecordBatchReader or Dataset, a NumPy array with named
+        fields, a polars LazyFrame, or anything with ``__arrow_c_stream__``.
 
     Returns
     -------
@@ -52,6 +58,9 @@ def open_frame(data: Any) -> Reader:
         return SpoolReader(data)
     if isinstance(data, ds.Dataset):
         return _dataset_reader(data)
+    if isinstance(data, np.ndarray) and data.dtype.names:
+        fields = {name: data[name] for name in data.dtype.names}
+        return TableReader(table_from_arrays(fields), "the array")
     module, name = type(data).__module__.partition(".")[0], type(data).__name__
     if module == "pyspark":
         # It has an Arrow stream, but one that gathers every row in this process.
@@ -75,9 +84,12 @@ def open_frame(data: Any) -> Reader:
         with _streaming("the frame"):
             return TableReader(pa.RecordBatchReader.from_stream(data).read_all(), "the frame")
     with _streaming("the stream", module):
+        rows = COUNTS[module](data) if module in COUNTS else None
         first = pa.RecordBatchReader.from_stream(data)
     schema = pa.schema(data) if hasattr(data, "__arrow_c_schema__") else first.schema
-    return StreamReader(lambda _: pa.RecordBatchReader.from_stream(data), schema, first, module)
+    return StreamReader(
+        lambda _: pa.RecordBatchReader.from_stream(data), schema, first, module, rows
+    )
 
 
 def _check_names(frame: Any) -> None:
@@ -94,12 +106,10 @@ def _check_names(frame: Any) -> None:
 @contextmanager
 def _streaming(name: str, module: str = "") -> Iterator[None]:
     """Tell of errors of a stream; `module` is that of the object that streams."""
-    # Database modules derive their errors from one class of this name (PEP 249).
-    own = getattr(sys.modules.get(module), "Error", None)
-    theirs = (own,) if isinstance(own, type) and issubclass(own, Exception) else ()
+    own = (pa.ArrowException, OSError, TypeError, ValueError, RuntimeError, *_errors_of(module))
     try:
         yield
-    except (pa.ArrowException, OSError, TypeError, ValueError, RuntimeError, *theirs) as error:
+    except own as error:
         first_line = str(error).strip().split("\n")[0][:160]
         raise ReadError(
             "DATA",
@@ -107,6 +117,17 @@ def _streaming(name: str, module: str = "") -> Iterator[None]:
             f"{name} broke off ({type(error).__name__}: {first_line})",
             "check what it holds, or write it to a Parquet file and name that",
         ) from error
+
+
+def _errors_of(module: str) -> tuple[type[Exception], ...]:
+    """Return the base errors of the module that streams, if it is loaded and has such."""
+    # Database modules derive their errors from one class of this name (PEP 249). Ibis has its
+    # own, and passes on those of the database behind it.
+    places = [(module, "Error")]
+    if module == "ibis":
+        places = [("ibis.common.exceptions", "IbisError"), ("duckdb", "Error")]
+    found = [getattr(sys.modules.get(place), name, None) for place, name in places]
+    return tuple(one for one in found if isinstance(one, type) and issubclass(one, Exception))
 
 
 class StreamReader(Reader):
@@ -118,16 +139,18 @@ class StreamReader(Reader):
         schema: pa.Schema,
         first: pa.RecordBatchReader | None = None,
         module: str = "",
+        rows: int | None = None,
     ) -> None:
         """Keep `open_stream`, which takes the columns wanted and may deliver more.
 
         `first` is a stream that is open already, for the first pass; `module` is that of the
-        object that streams.
+        object that streams, `rows` its length if known.
         """
         self._module = module
         self._open = open_stream
         self._first = first
-        self._rows: int | None = None
+        self._rows = rows
+        self.rows_expected = rows
         self._seen = 0
         self.places = ("the stream",)
         self.schemas = (schema,)
@@ -182,7 +205,10 @@ def _dataset_reader(dataset: ds.Dataset) -> Reader:
         )
         return scanner.to_reader()
 
-    return StreamReader(open_stream, dataset.schema)
+    with _streaming("the data set"):
+        # Footers and memory tell without reading rows.
+        rows = dataset.count_rows() if parquet or isinstance(dataset, ds.InMemoryDataset) else None
+    return StreamReader(open_stream, dataset.schema, rows=rows)
 
 
 class _Spooled(Reader):

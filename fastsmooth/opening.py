@@ -23,7 +23,11 @@ PEEK_ROWS = 65_536
 
 
 def check_present(
-    reader: Reader, roles: Sequence[Role], extra: Sequence[str], block: str | None
+    reader: Reader,
+    roles: Sequence[Role],
+    extra: Sequence[str],
+    block: str | None,
+    units: Sequence[str] = (),
 ) -> None:
     """Refuse a column that a file lacks, or has several times.
 
@@ -37,6 +41,8 @@ def check_present(
         Further columns.
     block : str or None
         The one of them that holds blocks.
+    units : sequence of str
+        Columns that tell units apart.
 
     Raises
     ------
@@ -46,6 +52,7 @@ def check_present(
     wanted = [(role.argument, role.column) for role in roles] + [
         ("--block" if name == block else "DATA", name) for name in extra
     ]
+    wanted += [("--by", name) for name in units]
     known = list(dict.fromkeys(name for schema in reader.schemas for name in schema.names))
     for argument, column in wanted:
         requirement = "name a column of DATA" if argument != "DATA" else "hold each named column"

@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import dataclasses
 import json
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from decimal import Decimal
 
 import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.dataset as ds
-import pyarrow.fs as pafs
 import pyarrow.parquet as pq
 import pyarrow.types as pt
 
+from fastsmooth.addresses import as_address
 from fastsmooth.casts import plain_type
-from fastsmooth.files import FileRecord, Task, reading
+from fastsmooth.files import Task, ask_each, open_input, reading, system_of
 from fastsmooth.readers import Extent, PartitionKeys, Reader, identify, with_constants
 
 READ_BUFFER_BYTES = 1 << 20
@@ -25,21 +26,23 @@ RAW_UNITS = {"milliseconds": "ms", "microseconds": "us", "nanoseconds": "ns"}
 class ParquetReader(Reader):
     """Parquet files by row group, each task with a file handle of its own."""
 
-    def __init__(self, paths: Sequence[str]) -> None:
+    def __init__(
+        self, paths: Sequence[str], key_types: Mapping[str, pa.DataType] | None = None
+    ) -> None:
         """Read the footers of `paths`."""
-        records: list[FileRecord] = []
-        own: list[pa.Schema] = []
-        self._footers: list[pq.FileMetaData] = []
-        for record in identify(paths):
-            with reading(record.path), _open(record.path, None) as file:
-                footer = file.metadata
-                own.append(file.schema_arrow)
-            self._footers.append(footer)
-            records.append(dataclasses.replace(record, rows=footer.num_rows))
+        records = identify(paths)
+        told = ask_each(paths, _read_footer)
+        own = [schema for _, schema in told]
+        self._footers = [footer for footer, _ in told]
         self._own = own
-        self._keys = PartitionKeys(paths)
+        self._keys = PartitionKeys(paths, key_types)
+        self.key_types = self._keys.types
         self._leaves: dict[tuple[int, str], int | None] = {}
-        self.files = tuple(records)
+        self._encoded: tuple[str, ...] = ()
+        self.files = tuple(
+            dataclasses.replace(record, rows=footer.num_rows)
+            for record, footer in zip(records, self._footers, strict=True)
+        )
         self.places = tuple(paths)
         self.schemas = tuple(self._keys.extend(schema, n) for n, schema in enumerate(own))
         self.rows_expected = sum(footer.num_rows for footer in self._footers)
@@ -65,12 +68,36 @@ class ParquetReader(Reader):
         path = self.places[place]
         constants = self._keys.constants(place, self._own[place])
         stored = [name for name in columns if name not in constants]
-        with reading(path), _open(path, self._footers[place]) as file:
+        encoded = [name for name in self._encoded if name in stored]
+        with reading(path), _open(path, self._footers[place], encoded) as file:
             # With no stored column the batches still tell the number of rows.
             for batch in file.iter_batches(
                 rows, row_groups=[group], columns=stored, use_threads=False
             ):
                 yield with_constants(batch, columns, constants)
+
+    def encode(self, columns: Iterable[str]) -> None:
+        """Read these columns, where they are text, as the dictionaries that the files hold."""
+        self._encoded = tuple(sorted(columns))
+
+    def constant(self, index: int, column: str) -> pa.Scalar | None:
+        """Return a value that stands in the folder's name, or that is both lowest and highest."""
+        place, group = self._groups[index]
+        constants = self._keys.constants(place, self._own[place])
+        if column in constants:
+            return constants[column]
+        kind, leaf = self._own[place].field(column).type, self._leaf(place, column)
+        # Others are stored in units of their own, or compare in more ways than one.
+        if leaf is None or not (pt.is_string(kind) or pt.is_signed_integer(kind)):
+            return None
+        chunk = self._footers[place].row_group(group).column(leaf)
+        statistics = chunk.statistics if chunk.is_stats_set else None
+        if statistics is None or not statistics.has_min_max or not statistics.has_null_count:
+            return None
+        # Bounds that were cut short are never equal: the upper one is raised.
+        if statistics.null_count or statistics.min != statistics.max:
+            return None
+        return pa.scalar(statistics.min, kind)
 
     def prune(self, place: int, condition: pc.Expression) -> set[int]:
         """Find the tasks of a file in which no row can meet `condition`."""
@@ -82,8 +109,9 @@ class ParquetReader(Reader):
             part = field == value if value.is_valid else field.is_null()
             fixed = part if fixed is None else fixed & part
         with reading(path):
+            system, inner = system_of(path)
             fragment = ds.ParquetFileFormat().make_fragment(
-                path, pafs.LocalFileSystem(), partition_expression=fixed
+                inner, system, partition_expression=fixed
             )
             kept = fragment.subset(condition, schema=self.schemas[place]).row_groups
         kept_groups = {group.id for group in kept}
@@ -143,13 +171,37 @@ class ParquetReader(Reader):
         return self._leaves[key]
 
 
-def _open(path: str, footer: pq.FileMetaData | None) -> pq.ParquetFile:
-    # Buffered reading instead of pre-buffering keeps memory at a few buffers, whatever the size
-    # of a row group. Checksums are verified on the pages that carry one.
-    return pq.ParquetFile(
-        path,
-        metadata=footer,
-        pre_buffer=False,
-        buffer_size=READ_BUFFER_BYTES,
-        page_checksum_verification=True,
-    )
+def _read_footer(path: str) -> tuple[pq.FileMetaData, pa.Schema]:
+    with reading(path), _open(path, None) as file:
+        return file.metadata, file.schema_arrow
+
+
+@contextmanager
+def _open(
+    path: str, footer: pq.FileMetaData | None, encoded: Sequence[str] = ()
+) -> Iterator[pq.ParquetFile]:
+    # On this computer buffered reading keeps memory at a few buffers, whatever the size of a row
+    # group. From a store the columns of the one row group that a handle reads are fetched at once,
+    # since every request has far to go. Checksums are verified on the pages that carry one.
+    if as_address(path) is None:
+        with pq.ParquetFile(
+            path,
+            metadata=footer,
+            pre_buffer=False,
+            buffer_size=READ_BUFFER_BYTES,
+            page_checksum_verification=True,
+            read_dictionary=encoded,
+        ) as file:
+            yield file
+        return
+    with (
+        open_input(path) as stored,
+        pq.ParquetFile(
+            stored,
+            metadata=footer,
+            pre_buffer=True,
+            page_checksum_verification=True,
+            read_dictionary=encoded,
+        ) as file,  # fmt: skip
+    ):
+        yield file

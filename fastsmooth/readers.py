@@ -4,14 +4,14 @@ from __future__ import annotations
 
 import abc
 import weakref
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 import pyarrow as pa
 
 from fastsmooth.errors import InputError
-from fastsmooth.files import FileRecord, Task, partition_keys, read_identity
+from fastsmooth.files import FileRecord, Task, ask_each, partition_keys, read_identity
 
 ROWS_PER_TABLE_TASK = 1 << 20
 
@@ -40,7 +40,8 @@ class Reader(abc.ABC):
     """Data opened for reading, possibly several times.
 
     `schemas` has one schema for each place (file or frame), named in `places`; `place_of` gives
-    the place of each task. Tasks exist after `prepare`.
+    the place of each task. Tasks exist after `prepare`. `key_types` are the types of columns that
+    stand in folder names.
     """
 
     files: tuple[FileRecord, ...] = ()
@@ -49,6 +50,7 @@ class Reader(abc.ABC):
     tasks: tuple[Task, ...] = ()
     place_of: tuple[int, ...] = ()
     rows_expected: int | None = None
+    key_types: Mapping[str, pa.DataType] = {}
     _spool: weakref.finalize | None = None
 
     def prepare(self, columns: Sequence[str]) -> None:  # noqa: B027 - most have nothing to prepare
@@ -58,8 +60,16 @@ class Reader(abc.ABC):
     def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
         """Deliver a task's rows in order, `rows` at a time, with just `columns`, in that order."""
 
+    def encode(self, columns: Iterable[str]) -> None:  # noqa: B027 - most cannot do better
+        """Learn which text columns may be delivered as dictionaries, where that is faster."""
+
     def extent(self, index: int, column: str) -> Extent | None:
         """Return the statistics of a task's column, if there are any."""
+        del index, column
+        return None
+
+    def constant(self, index: int, column: str) -> pa.Scalar | None:
+        """Return the value that a task's column holds in every row, if that is known unread."""
         del index, column
         return None
 
@@ -188,7 +198,7 @@ def table_from_arrays(arrays: dict[str, object]) -> pa.Table:
     Parameters
     ----------
     arrays : dict of str to (n,) array-like
-        NumPy arrays, lists, or Arrow arrays.
+        NumPy arrays, lists, Arrow arrays, or columns of frames.
 
     Returns
     -------
@@ -206,6 +216,10 @@ def table_from_arrays(arrays: dict[str, object]) -> pa.Table:
     for name, values in arrays.items():
         if isinstance(values, pa.Array | pa.ChunkedArray):
             columns[name] = values
+            continue
+        if hasattr(values, "__arrow_c_stream__"):
+            # A column of a frame keeps its time zone, categories and nulls.
+            columns[name] = pa.chunked_array(values)
             continue
         array = np.asarray(values)
         if array.ndim != 1:
@@ -244,16 +258,22 @@ class PartitionKeys:
     """Columns that stand in folder names, ``key=value``.
 
     A column's type is the same in every file: integer if every value is one, else float, else
-    text.
+    text; or what `types` says, where the paths are some of a larger set.
     """
 
-    def __init__(self, paths: Sequence[str]) -> None:
+    def __init__(
+        self, paths: Sequence[str], types: Mapping[str, pa.DataType] | None = None
+    ) -> None:
         """Read the keys off every path, in order."""
         keys = [partition_keys(path) for path in paths]
         self._values: list[dict[str, pa.Scalar]] = [{} for _ in paths]
+        self.types: dict[str, pa.DataType] = {}
         for name in dict.fromkeys(name for each in keys for name in each):
             texts = [each.get(name) for each in keys]
-            data_type = _common_type([text for text in texts if text is not None])
+            data_type = (types or {}).get(name)
+            if data_type is None:
+                data_type = _common_type([text for text in texts if text is not None])
+            self.types[name] = data_type
             for values, each, text in zip(self._values, keys, texts, strict=True):
                 if name in each:
                     values[name] = pa.scalar(text, pa.string()).cast(data_type)
@@ -331,4 +351,4 @@ def identify(paths: Sequence[str]) -> list[FileRecord]:
     list of FileRecord
         One for each, rows unknown.
     """
-    return [read_identity(path, None) for path in paths]
+    return ask_each(paths, lambda path: read_identity(path, None))

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import os
 from collections import deque
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field
 from threading import Event, Lock
@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 import numpy as np
 from numpy.typing import NDArray
 
+from fastsmooth.addresses import DEFAULT_TIMEOUT_SECONDS
 from fastsmooth.axis import Axis
 from fastsmooth.errors import InputError, ReadError
 from fastsmooth.files import FileRecord, Task, check_unchanged, file_format, find_files, join_names
@@ -63,6 +64,22 @@ class Columns:
             object.__setattr__(self, "extra", (self.block, *self.extra))
 
 
+@dataclass(frozen=True)
+class Fixed:
+    """What all files of a set share: some of them are opened alone as they were with the others.
+
+    Parameters
+    ----------
+    axis : Axis
+        What the floats of x mean.
+    key_types : mapping of str to pyarrow.DataType
+        Types of the columns that stand in folder names.
+    """
+
+    axis: Axis
+    key_types: Mapping[str, pa.DataType]
+
+
 @dataclass
 class Chunk:
     """Consecutive rows, in the file's own order, without the rows that hold a null.
@@ -85,6 +102,10 @@ class Chunk:
         that applies.
     positions : (n,) int64 or None
         Place of each row among the rows read; None when none was dropped.
+    units : tuple of pyarrow.Array
+        Columns that tell units apart, n values each.
+    refused_units : dict of str to tuple of pyarrow.Array
+        The same columns of the rows in `refused`.
     """
 
     x: NDArray[np.float64]
@@ -96,6 +117,8 @@ class Chunk:
     filtered: int
     refused: dict[str, int] = field(default_factory=dict)
     positions: NDArray[np.int64] | None = None
+    units: tuple[pa.Array, ...] = ()
+    refused_units: dict[str, tuple[pa.Array, ...]] = field(default_factory=dict)
 
 
 class Source:
@@ -111,6 +134,10 @@ class Source:
         Which columns play which part.
     where : str or None
         Row filter.
+    fixed : Fixed or None
+        What was fixed when all files were opened; None fixes it now.
+    units : sequence of str
+        Columns that tell units apart, delivered as they are or as dictionaries.
 
     Attributes
     ----------
@@ -127,9 +154,18 @@ class Source:
         the filter; None unless every one of them has a finite range.
     x_unit, y_unit : str
         Units from the fields' metadata; empty if there are none.
+    fixed : Fixed
+        What is needed to open some of the files alone.
     """
 
-    def __init__(self, reader: Reader, columns: Columns, where: str | None) -> None:
+    def __init__(
+        self,
+        reader: Reader,
+        columns: Columns,
+        where: str | None,
+        fixed: Fixed | None = None,
+        units: Sequence[str] = (),
+    ) -> None:
         """Check the columns, parse the filter and fix the axis; see `open_source`."""
         from fastsmooth.casts import caster
         from fastsmooth.opening import (
@@ -146,18 +182,26 @@ class Source:
         self.columns = columns
         self.where = where
         self._roles = _roles_of(columns)
-        check_present(reader, self._roles, columns.extra, columns.block)
+        self._units = tuple(units)
+        check_present(reader, self._roles, columns.extra, columns.block, self._units)
         if columns.block is not None:
             from fastsmooth.blocks import check_alike
 
             block = columns.block
             check_alike(block, [schema.field(block).type for schema in reader.schemas])
+        for name in self._units:
+            from fastsmooth.blocks import check_alike
+
+            check_alike(name, [schema.field(name).type for schema in reader.schemas], "--by")
         self._filters = parse_filters(reader, where)
         used = [role.column for role in self._roles] + list(columns.extra)
         used += [name for one in self._filters for name in one.columns]
-        self._needed = tuple(dict.fromkeys(used))
+        # What nothing else reads may come in any form, or not at all where it is constant.
+        self._only_units = frozenset(self._units) - frozenset(used)
+        self._needed = tuple(dict.fromkeys([*used, *self._units]))
         schemas = reader.schemas
         reader.prepare(self._needed)
+        reader.encode(self._only_units)
         if reader.schemas is not schemas:
             # A temporary file may store a column in another type than announced.
             self._filters = parse_filters(reader, where)
@@ -166,9 +210,12 @@ class Source:
         self.rows_expected = reader.rows_expected
         self.x_unit = unit_of(reader, columns.x)
         self.y_unit = unit_of(reader, columns.y)
-        kinds = check_kinds(reader, self._roles)
-        check_some_value(reader, self._roles)
-        self.axis = make_axis(reader, self._roles[0], kinds)
+        if fixed is None:
+            kinds = check_kinds(reader, self._roles)
+            check_some_value(reader, self._roles)
+            fixed = Fixed(make_axis(reader, self._roles[0], kinds), reader.key_types)
+        self.fixed = fixed
+        self.axis = fixed.axis
         self._pruned = find_pruned(reader, self._filters)
         self.x_range = self._statistics_range()
         self._casts = [
@@ -191,6 +238,16 @@ class Source:
     ) -> None:
         """Close the source."""
         self.close()
+
+    @property
+    def schemas(self) -> Sequence[pa.Schema]:
+        """The schema of each file, or of the data in memory."""
+        return self._reader.schemas
+
+    @property
+    def file_of_task(self) -> Sequence[int]:
+        """The place in `files` of each task's file."""
+        return self._reader.place_of
 
     def close(self) -> None:
         """Release what the source holds, temporary files included."""
@@ -226,10 +283,13 @@ class Source:
         place = self._reader.place_of[task.index]
         filter_ = self._filters[place] if self._filters else None
         casts = self._casts[place]
+        found = {name: self._reader.constant(task.index, name) for name in self._only_units}
+        constants = {name: value for name, value in found.items() if value is not None}
+        needed = tuple(name for name in self._needed if name not in constants)
         seen = 0
-        for batch in self._reader.batches(task.index, self._needed, rows):
+        for batch in self._reader.batches(task.index, needed, rows):
             seen += batch.num_rows
-            yield self._chunk(batch, casts, filter_)
+            yield self._chunk(batch, needed, casts, filter_, constants)
         if task.rows is not None and seen != task.rows:
             raise ReadError(
                 "DATA",
@@ -344,16 +404,26 @@ class Source:
     def _chunk(
         self,
         batch: pa.RecordBatch,
+        needed: Sequence[str],
         casts: Sequence[Callable[[pa.Array], Values]],
         filter_: Filter | None,
+        constants: Mapping[str, pa.Scalar],
     ) -> Chunk:
-        from fastsmooth.casts import filterable_type, plain_array
+        from pyarrow.types import is_dictionary
+
+        from fastsmooth.casts import constant_array, filterable_type, plain_array
 
         rows = kept = batch.num_rows
         positions: NDArray[np.int64] | None = None
-        column = dict(zip(self._needed, batch.columns, strict=True))
+        column = dict(zip(needed, batch.columns, strict=True))
+        as_they_are = [*self.columns.extra]
         for name in self.columns.extra:
             column[name] = column[name].cast(filterable_type(column[name].type))
+        for name in self._units:
+            if name not in constants and name not in as_they_are:
+                as_they_are.append(name)
+                if not is_dictionary(column[name].type):
+                    column[name] = plain_array(column[name])
         if filter_ is not None:
             mask = filter_.mask(batch)
             kept = mask.true_count
@@ -361,27 +431,30 @@ class Source:
                 positions = np.flatnonzero(mask.fill_null(False).to_numpy(zero_copy_only=False))
                 # Columns that only the filter reads are done with. Runs cannot be filtered.
                 plain = {role.column: plain_array(column[role.column]) for role in self._roles}
-                extra_columns = {name: column[name] for name in self.columns.extra}
-                column = {
-                    name: array.filter(mask) for name, array in (plain | extra_columns).items()
-                }
+                others = {name: column[name] for name in as_they_are}
+                column = {name: array.filter(mask) for name, array in (plain | others).items()}
         parts = [cast(column[role.column]) for role, cast in zip(self._roles, casts, strict=True)]
         extra = tuple(column[name] for name in self.columns.extra)
+        units = tuple(
+            constant_array(constants[name], kept) if name in constants else column[name]
+            for name in self._units
+        )
         refused: dict[str, int] = {}
+        refused_units: dict[str, tuple[pa.Array, ...]] = {}
         keep: NDArray[np.bool_] | None = None
         for role, part in zip(self._roles, parts, strict=True):
             if part.valid is not None:
                 missing = ~part.valid if keep is None else keep & ~part.valid
-                refused[f"{role.name} null"] = int(np.count_nonzero(missing))
+                reason, number = f"{role.name} null", int(np.count_nonzero(missing))
                 keep = part.valid if keep is None else keep & part.valid
+                if number:
+                    refused[reason] = number
+                    refused_units[reason] = _select(units, missing)
         floats = [part.floats for part in parts]
         if keep is not None:
-            import pyarrow as pa
-
-            mask = pa.array(keep)
             floats = [values[keep] for values in floats]
             positions = np.flatnonzero(keep) if positions is None else positions[keep]
-            extra = tuple(array.filter(mask) for array in extra)
+            extra, units = _select(extra, keep), _select(units, keep)
         named = {role.name: values for role, values in zip(self._roles, floats, strict=True)}
         return Chunk(
             named["x"],
@@ -391,8 +464,10 @@ class Source:
             extra,
             rows,
             rows - kept,
-            {reason: number for reason, number in refused.items() if number},
+            refused,
             positions,
+            units,
+            refused_units,
         )
 
     def _empty_chunk(self, task: Task) -> Chunk:
@@ -401,16 +476,18 @@ class Source:
         from fastsmooth.casts import filterable_type
 
         schema = self._reader.schemas[self._reader.place_of[task.index]]
-        types = [filterable_type(schema.field(name).type) for name in self.columns.extra]
+        names = (*self.columns.extra, *self._units)
+        empty = [pa.array([], filterable_type(schema.field(name).type)) for name in names]
         none = np.empty(0)
         return Chunk(
             none,
             none,
             none if self.columns.weight is not None else None,
             none if self.columns.count is not None else None,
-            tuple(pa.array([], data_type) for data_type in types),
+            tuple(empty[: len(self.columns.extra)]),
             rows=task.rows or 0,
             filtered=task.rows or 0,
+            units=tuple(empty[len(self.columns.extra) :]),
         )
 
     def _check_task_file(self, task: Task) -> FileRecord | None:
@@ -440,20 +517,35 @@ class Source:
         return min(lows), max(highs)
 
 
-def open_source(data: Any, columns: Columns, *, where: str | None = None) -> Source:
+def open_source(
+    data: Any,
+    columns: Columns,
+    *,
+    where: str | None = None,
+    fixed: Fixed | None = None,
+    units: Sequence[str] = (),
+    timeout_seconds: float = DEFAULT_TIMEOUT_SECONDS,
+) -> Source:
     """Open data of any kind.
 
     Parameters
     ----------
     data : path, list of paths, dict, tuple, or frame
-        A file, folder or glob (Parquet, Arrow IPC or CSV), or a list of these; a dict of column
-        name to one-dimensional array; a tuple of arrays in the order x, y, weight, count, extra
+        A file, folder or glob (Parquet, Arrow IPC or CSV), here or in an object store
+        (``s3://bucket/folder``), or a list of these; a dict of column name to one-dimensional
+        array; a tuple of arrays in the order x, y, weight, count, extra
         (those that `columns` names); a pyarrow Dataset; a polars LazyFrame; or any object with
         ``__arrow_c_stream__``.
     columns : Columns
         Which columns play which part.
     where : str or None
         Row filter, an SQL condition.
+    fixed : Fixed or None
+        Where `data` are some files of a larger set: what was fixed when all were opened.
+    units : sequence of str
+        Columns that tell units apart.
+    timeout_seconds : float
+        How long a silent object store is waited for, each time.
 
     Returns
     -------
@@ -475,23 +567,25 @@ def open_source(data: Any, columns: Columns, *, where: str | None = None) -> Sou
     ...     [chunk.rows for task in source.tasks for chunk in source.chunks(task)]
     [2]
     """
-    reader = _open_reader(data, columns)
+    reader = _open_reader(data, columns, fixed, timeout_seconds)
     try:
-        return Source(reader, columns, where)
+        return Source(reader, columns, where, fixed, units)
     except BaseException:
         reader.close()
         raise
 
 
-def _open_reader(data: Any, columns: Columns) -> Reader:
+def _open_reader(
+    data: Any, columns: Columns, fixed: Fixed | None, timeout_seconds: float
+) -> Reader:
     from fastsmooth import readers
 
     if isinstance(data, str | os.PathLike):
-        return _open_files(find_files(data), columns)
+        return _open_files(find_files(data, timeout_seconds), columns, fixed)
     if isinstance(data, list | tuple) and (
         not data or all(isinstance(one, str | os.PathLike) for one in data)
     ):
-        return _open_files(find_files(data), columns)
+        return _open_files(find_files(data, timeout_seconds), columns, fixed)
     if isinstance(data, tuple):
         names = [columns.x, columns.y, columns.weight, columns.count, *columns.extra]
         named = [name for name in names if name is not None]
@@ -510,19 +604,27 @@ def _open_reader(data: Any, columns: Columns) -> Reader:
     return open_frame(data)
 
 
-def _open_files(paths: tuple[str, ...], columns: Columns) -> Reader:
+def _open_files(paths: tuple[str, ...], columns: Columns, fixed: Fixed | None = None) -> Reader:
     kind = file_format(paths[0])
+    key_types = None if fixed is None else fixed.key_types
     if kind == "csv":
         from fastsmooth.csvfile import CsvReader
 
-        return CsvReader(paths, _roles_of(columns))
+        return CsvReader(paths, _roles_of(columns), key_types)
     if kind == "arrow":
         from fastsmooth.arrowfile import ArrowReader
 
-        return ArrowReader(paths)
+        return ArrowReader(paths, key_types)
     from fastsmooth.parquet import ParquetReader
 
-    return ParquetReader(paths)
+    return ParquetReader(paths, key_types)
+
+
+def _select(arrays: tuple[pa.Array, ...], keep: NDArray[np.bool_]) -> tuple[pa.Array, ...]:
+    import pyarrow as pa
+
+    mask = pa.array(keep)
+    return tuple(array.filter(mask) for array in arrays)
 
 
 def _roles_of(columns: Columns) -> tuple[Role, ...]:

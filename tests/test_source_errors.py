@@ -111,13 +111,6 @@ def test_unknown_suffix(tmp_path):
         )
 
 
-def test_address():
-    assert refusal("s3://plants/a.parquet") == (
-        "DATA must be a path, folder or glob on this computer, but 's3://plants/a.parquet' is an "
-        "address; copy the files to a folder first."
-    )
-
-
 def test_mixed_formats(tmp_path):
     write(tmp_path / "a.parquet")
     (tmp_path / "b.csv").write_text("wet_bulb_c,power_kw\n1,2\n")
