@@ -23,7 +23,7 @@ INSIDE, ABOVE, BELOW, THIN, NO_SUPPORT, NO_READING, NO_CURVE, UNKNOWN_UNIT = ran
 # Rows from here on have neither an expected value nor a residual.
 FIRST_WITHOUT_VALUES = NO_SUPPORT
 
-_BLOCK_ROWS = 16_384
+_BLOCK_ROWS = 65_536
 # The last row may lie a hair beyond the last point.
 _ROUNDING = 1e-9
 # Points of a curve lie evenly on its scale; this many steps are rounding.
@@ -144,7 +144,9 @@ class Lookup:
         self._between[ends] = NO_SUPPORT
         fine = self._between == INSIDE
         # Where both neighbours are fine too, a cell too far is no harm.
-        self._plain = fine & np.append(False, fine[:-1]) & np.append(fine[1:], False)
+        plain = fine & np.append(False, fine[:-1]) & np.append(fine[1:], False)
+        # Elsewhere NaN spreads to z, which is within no limits.
+        self._plain_cubic = np.where(plain, self._cubic[0], np.nan)
 
     def score(
         self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None = None
@@ -168,10 +170,12 @@ class Lookup:
             n rows.
         """
         n = x.shape[0]
+        if root_weight is not None:
+            root_weight = np.where(root_weight > 0.0, root_weight, np.nan)
         rows = ScoredRows(np.empty(n), np.empty(n), np.empty(n), np.empty(n, np.int8))
         with np.errstate(all="ignore"):  # what is undefined becomes NaN, and is told by status
             for start in range(0, n, _BLOCK_ROWS):
-                # Blocks small enough that what lies between two steps stays in the cache.
+                # What lies between two steps takes little memory, and stays in the cache.
                 part = slice(start, start + _BLOCK_ROWS)
                 self._score_block(
                     x[part], y[part], unit if isinstance(unit, int) else unit[part], z_limit,
@@ -193,18 +197,15 @@ class Lookup:
         self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None,
         out: ScoredRows,
     ) -> None:  # fmt: skip
-        """Score rows inside plain cells; find the others and score them with care."""
+        """Score rows as if all lay in plain cells and within limits; then the others with care."""
         u = np.log(x) if self.log else x
         u = (u - self._origin[unit]) * self._per_step[unit]
-        careful = ~((u >= 0.0) & (u <= self._last[unit]))
-        if careful.any():
-            u[careful] = 0.0
+        # Neither the first nor the last cell is plain, and NaN stays NaN.
+        np.clip(u, 0.0, self._last[unit], out=u)
         cell = u.astype(np.int64)
         u -= cell
         cell += self._first[unit]
-        careful |= ~self._plain.take(cell)
-        value = out.expected
-        self._cubic[0].take(cell, out=value, mode="clip")
+        value = self._plain_cubic.take(cell, out=out.expected, mode="clip")
         term = np.empty_like(value)
         for coefficient in self._cubic[1:]:
             value *= u
@@ -212,15 +213,14 @@ class Lookup:
         np.subtract(y, value, out=out.residual)
         sd = self._spread[1].take(cell, out=term, mode="clip")
         sd *= u
-        sd += self._spread[0].take(cell)
+        sd += self._spread[0].take(cell, mode="clip")
         np.divide(out.residual, sd, out=out.z)
         if root_weight is not None:
-            out.z[:] *= root_weight
-            careful |= ~(root_weight > 0.0)
-        careful |= ~np.isfinite(out.z)
-        out.status[:] = _side(out.z, z_limit)
-        if careful.any():
-            rows = np.flatnonzero(careful)
+            np.multiply(out.z, root_weight, out=out.z)
+        inside = np.abs(out.z, out=term) <= z_limit
+        out.status[:] = INSIDE
+        if not inside.all():
+            rows = np.flatnonzero(~inside)
             scored = self._score_with_care(
                 x[rows], y[rows],
                 np.full(rows.shape, unit) if isinstance(unit, int) else unit[rows], z_limit,
@@ -251,7 +251,7 @@ class Lookup:
         read = np.isfinite(x) & np.isfinite(y)
         if root_weight is not None:
             z = z * root_weight
-            read &= np.isfinite(root_weight) & (root_weight > 0.0)
+            read &= np.isfinite(root_weight)
 
         support = np.where(on_point, self._at_point[cell], self._between[cell])
         support[(x < self._x[first]) | (x > self._x[first + last])] = NO_SUPPORT
