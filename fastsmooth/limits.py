@@ -121,7 +121,7 @@ def count_residuals(
 
     def place(
         task: Task, chunks: Iterator[Chunk]
-    ) -> tuple[int, list[tuple[NDArray[np.int64], Floats | None]]]:
+    ) -> tuple[int, list[tuple[NDArray[Any], Floats | None]]]:
         find, row, read, found = find_units(), 0, 0, []
         for chunk in chunks:
             unit = find(chunk)

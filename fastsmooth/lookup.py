@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -71,17 +71,24 @@ class CurvePoints(NamedTuple):
         As in `Curve`.
     status : (n,) int64
         As in `Curve`.
+    ends : (2, n) float64 or None
+        Lowest and highest of the curve's limits; NaN where they are not known.
     """
 
     x: Floats
     estimate: Floats
     residual_sd: Floats
     status: NDArray[np.int64]
+    ends: Floats | None = None
 
     @classmethod
     def of(cls, curve: Curve) -> CurvePoints:
-        """Take the points of a curve."""
-        return cls(curve.x, curve.estimate, curve.residual_sd, curve.status)
+        """Take the points of a curve, with its limits if there are two or more."""
+        limits = curve.limits
+        ends = None
+        if limits is not None and len(limits.levels) > 1:
+            ends = limits.values[[0, -1]]
+        return cls(curve.x, curve.estimate, curve.residual_sd, curve.status, ends)
 
 
 class Lookup:
@@ -147,10 +154,12 @@ class Lookup:
         plain = fine & np.append(False, fine[:-1]) & np.append(fine[1:], False)
         # Elsewhere NaN spreads to z, which is within no limits.
         self._plain_cubic = np.where(plain, self._cubic[0], np.nan)
+        self._limits = _limit_cells(made, ends)
 
     def score(
-        self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None = None
-    ) -> ScoredRows:
+        self, x: Floats, y: Floats, unit: Units, z_limit: float | None,
+        root_weight: Floats | None = None,
+    ) -> ScoredRows:  # fmt: skip
         """Hold rows against the curves of their units.
 
         Parameters
@@ -159,8 +168,9 @@ class Lookup:
             Axis floats and readings; NaN where missing.
         unit : int or (n,) int64
             Number of each row's unit.
-        z_limit : float
-            A row whose z lies farther from 0 is outside the limits.
+        z_limit : float or None
+            A row whose z lies farther from 0 is outside the limits. None judges by the curves'
+            own limits, which all of them must have.
         root_weight : (n,) float64 or None
             Square root of each row's precision, by which its z is larger.
 
@@ -194,7 +204,7 @@ class Lookup:
         return np.where(inside, np.clip(place, 0, stretches - 1), -1)
 
     def _score_block(
-        self, x: Floats, y: Floats, unit: Units, z_limit: float, root_weight: Floats | None,
+        self, x: Floats, y: Floats, unit: Units, z_limit: float | None, root_weight: Floats | None,
         out: ScoredRows,
     ) -> None:  # fmt: skip
         """Score rows as if all lay in plain cells and within limits; then the others with care."""
@@ -217,7 +227,11 @@ class Lookup:
         np.divide(out.residual, sd, out=out.z)
         if root_weight is not None:
             np.multiply(out.z, root_weight, out=out.z)
-        inside = np.abs(out.z, out=term) <= z_limit
+        if z_limit is None:
+            low, high = self._limits_at(cell, u)
+            inside = (out.z >= low) & (out.z <= high)
+        else:
+            inside = np.abs(out.z, out=term) <= z_limit
         out.status[:] = INSIDE
         if not inside.all():
             rows = np.flatnonzero(~inside)
@@ -228,8 +242,17 @@ class Lookup:
             )  # fmt: skip
             out.put(rows, scored)
 
+    def _limits_at(self, cell: NDArray[np.int64], u: Floats) -> tuple[Floats, Floats]:
+        """The curves' own limits in z, joined by straight lines."""
+        assert self._limits is not None
+        low, high = (
+            value.take(cell, mode="clip") + step.take(cell, mode="clip") * u
+            for value, step in self._limits
+        )
+        return low, high
+
     def _score_with_care(
-        self, x: Floats, y: Floats, unit: NDArray[np.int64], z_limit: float,
+        self, x: Floats, y: Floats, unit: NDArray[np.int64], z_limit: float | None,
         root_weight: Floats | None,
     ) -> ScoredRows:  # fmt: skip
         """Score any rows: cells by comparison with the points themselves, not by rounding."""
@@ -257,19 +280,36 @@ class Lookup:
         support[(x < self._x[first]) | (x > self._x[first + last])] = NO_SUPPORT
         # Without a scatter to measure against there is no judgement either.
         support[(support == INSIDE) & np.isnan(z)] = THIN
+        low, high = (-z_limit, z_limit) if z_limit is not None else self._limits_at(cell, u)
+        support[(support == INSIDE) & np.isnan(low + high)] = THIN
         support[~read] = NO_READING
         unscored = self._unscored[unit]
         status = np.where(unscored != INSIDE, unscored, support).astype(np.int8)
         judged = status == INSIDE
-        status[judged] = _side(z[judged], z_limit)
+        low, high = np.broadcast_to(low, z.shape), np.broadcast_to(high, z.shape)
+        status[judged] = _side(z[judged], low[judged], high[judged])
         nothing = status >= FIRST_WITHOUT_VALUES
         expected[nothing] = residual[nothing] = z[nothing] = np.nan
         return ScoredRows(expected, residual, z, status)
 
 
-def _side(z: Floats, z_limit: float) -> Codes:
-    """Return `ABOVE` or `BELOW` for z beyond the limit, else `INSIDE`: the place that judges."""
-    return (z > z_limit) * np.int8(ABOVE) + (z < -z_limit) * np.int8(BELOW)
+def _side(z: Floats, low: Floats, high: Floats) -> Codes:
+    """Return `ABOVE` or `BELOW` for z beyond the limits, else `INSIDE`: the place that judges."""
+    return (z > high) * np.int8(ABOVE) + (z < low) * np.int8(BELOW)
+
+
+def _limit_cells(made: Sequence[CurvePoints], ends: NDArray[np.int64]) -> Floats | None:
+    """Limits in z: value at each point and step to the next, (low and high, 2, points)."""
+    parts = []
+    for one in made:
+        if one.ends is None:
+            return None
+        with np.errstate(all="ignore"):
+            parts.append((one.ends - one.estimate) / one.residual_sd)
+    z = np.concatenate(parts, axis=1)
+    step = np.append(np.diff(z, axis=1), np.zeros((2, 1)), axis=1)
+    step[:, ends] = 0.0
+    return np.stack([z, step], axis=1)
 
 
 def _check_even(

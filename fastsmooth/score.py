@@ -143,7 +143,8 @@ def score_rows(
     where : str or None
         SQL condition; rows that do not meet it are left out of file and counts.
     z_limit : float or None
-        Limit of \\|z\\|; by default the normal quantile that one row in a thousand exceeds, 3.29.
+        Limit of \\|z\\|. None takes the curves' own lowest and highest limits where they have two
+        or more, or else the normal quantile that one row in a thousand exceeds, 3.29.
     prefix : str
         Put before the names of the new columns.
     threads : int or None
@@ -188,11 +189,6 @@ def score_rows(
     threads = whole_number("--threads", usable_cores() if threads is None else threads, 1)
     if only is not None:
         one_of("--only", only, ONLY)
-    limit = finite_number(
-        "--beyond", DEFAULT_Z_LIMIT if z_limit is None else z_limit, "be a finite number above 0"
-    )
-    if limit <= 0.0:
-        raise InputError("--beyond", "be above 0", f"it is {limit}", "leave it out")
     if where is not None:
         check_text("--where", where, "be an SQL condition")
     check_text("--prefix", prefix, "be a text")
@@ -208,6 +204,15 @@ def score_rows(
             "--curve", "have evenly spaced points, between which rows can be scored",
             "it was made with --at", "make it without",
         )  # fmt: skip
+    levels = against.levels
+    limit = None
+    if z_limit is not None or levels is None:
+        limit = finite_number(
+            "--beyond", DEFAULT_Z_LIMIT if z_limit is None else z_limit,
+            "be a finite number above 0",
+        )  # fmt: skip
+        if limit <= 0.0:
+            raise InputError("--beyond", "be above 0", f"it is {limit}", "leave it out")
     wishes = Wishes(
         x or told["x"], y or told["y"], told["weight"], where, keep, only is not None, limit,
         prefix,
@@ -288,6 +293,12 @@ class _Against:
             (unit.points() for unit in curve.units), curve.settings, curve.axis, identity,
         )  # fmt: skip
 
+    @property
+    def levels(self) -> tuple[float, float] | None:
+        """Lowest and highest level of the curves' own limits, if they have two or more."""
+        levels = self.settings.get("limits") or []
+        return (levels[0], levels[-1]) if len(levels) > 1 else None
+
     def trace(self, wishes: Wishes) -> dict[str, Any]:
         """Return what every written file tells of its making."""
         from importlib.metadata import version
@@ -296,6 +307,7 @@ class _Against:
             "x": wishes.x, "y": wishes.y, "weight": wishes.weight, "by": list(self.by),
             "where": wishes.where, "keep": None if wishes.keep is None else list(wishes.keep),
             "only": ONLY[0] if wishes.flagged_only else None, "z_limit": wishes.z_limit,
+            "limits": self.levels if wishes.z_limit is None else None,
             "prefix": wishes.prefix, "curve_where": self.settings["where"],
         }  # fmt: skip
         versions = {name: version(name) for name in ("fastsmooth", "numpy", "pyarrow")}

@@ -110,8 +110,8 @@ class Wishes:
         Columns to keep, None for all.
     flagged_only : bool
         Whether to deliver only rows outside the limits.
-    z_limit : float
-        Rows whose z lies farther from 0 are outside.
+    z_limit : float or None
+        Rows whose z lies farther from 0 are outside; None judges by the curves' own limits.
     prefix : str
         Put before the names of the new columns.
     """
@@ -122,7 +122,7 @@ class Wishes:
     where: str | None
     keep: tuple[str, ...] | None
     flagged_only: bool
-    z_limit: float
+    z_limit: float | None
     prefix: str
 
     @property

@@ -26,7 +26,7 @@ def scored_lines(scored: Scored) -> list[str]:
     by_status = {name: n for name, n in rows["by_status"].items() if n}
     lines.append("status     " + (", ".join(f"{n:,} {name}" for name, n in by_status.items())
                                   or "no rows"))  # fmt: skip
-    lines.append(f"limits     {settings['z_limit']:.4g} residual sd on either side of the curve")
+    lines.append(f"limits     {_limit_words(settings)}")
     if scored.by:
         lines += _fleet_lines(scored, units)
     else:
@@ -34,6 +34,16 @@ def scored_lines(scored: Scored) -> list[str]:
     lines += [f"caution    {caution.text}" for caution in scored.cautions]
     return [*lines, *([] if scored.trace["out"] is None else [f"wrote      {scored.trace['out']}"]),
             "", PRUDENCE]  # fmt: skip
+
+
+def _limit_words(settings: dict[str, Any]) -> str:
+    if settings["limits"] is None:
+        return f"{settings['z_limit']:.4g} residual sd on either side of the curve"
+    low, high = settings["limits"]
+    return (
+        f"the curves' own: {100 * low:g} % of rows below, {100 * (1.0 - high):g} % above, where "
+        f"nothing has changed"
+    )
 
 
 def _curve_words(scored: Scored) -> str:
