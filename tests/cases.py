@@ -66,10 +66,22 @@ DESIGNS: dict[str, Callable[[np.random.Generator, int], np.ndarray]] = {
 }
 
 
+def outliers(rng: np.random.Generator, n: int) -> np.ndarray:
+    """A season's readings, and one in 500 (three at least) from a sensor that strays far off."""
+    x = rng.normal(10.0, 3.0, n)
+    far = max(n // 500, 3)
+    x[:far] = rng.uniform(20.0, 60.0, far)
+    return x
+
+
+# With the one that not every test can use: by default, far outliers are cut off the range.
+ALL_DESIGNS = {**DESIGNS, "outliers": outliers}
+
+
 def make_rows(design: str, n: int, seed: int = 0, noise_sd_kw: float = NOISE_SD_KW) -> Rows:
     """Readings of one design; the same for the same arguments."""
     rng = np.random.default_rng([seed, zlib.crc32(design.encode())])
-    wet_bulb_c = DESIGNS[design](rng, n)
+    wet_bulb_c = ALL_DESIGNS[design](rng, n)
     power_kw = mean_power_kw(wet_bulb_c) + noise_sd_kw * rng.normal(size=n)
     return Rows(wet_bulb_c, power_kw, noise_sd_kw)
 

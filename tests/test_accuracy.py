@@ -1,4 +1,6 @@
-"""The accuracy contract: binned results against every row, summed plainly.
+"""The accuracy contract: binned results against every row, summed by plain loops.
+
+`test_binned_against_exact.py` widens it to large data, with the exact kernels in the loops' place.
 
 Widths of at least 64 bins (16 for the Gaussian). Errors are in standard deviations of the noise.
 Smooth kernels keep within 1e-6, kernels with a kink at the ends of their window within 1e-4. The
@@ -37,7 +39,9 @@ def curve_of(rows, kernel, estimator, width_c, **columns):
         "wet_bulb_c",
         "power_kw",
         reading=FEW,
-        smoothing=Smoothing(kernel=kernel, estimator=estimator, bandwidth=width_c, widths=8),
+        smoothing=Smoothing(
+            kernel=kernel, estimator=estimator, bandwidth=width_c, widths=8, engine="binned"
+        ),
         band=Band(at=at, bias="ignored", noise="constant"),
         **names,
     )
@@ -91,7 +95,7 @@ def test_kinked_kernels_keep_within_a_ten_thousandth_of_the_noise(sweep, kernel)
 
 
 def test_the_curves_own_error_estimate_bounds_the_true_one(sweep):
-    # 1e-12: rounding, where the bins hold lone places and the sums are exact.
+    # 1e-12: what plain sums of thousands of terms lose themselves.
     bounded = [true <= own + 1e-12 for true, own in sweep.values()]
     assert np.mean(bounded) >= 0.95
     # And it is no idle bound: it is not much larger than what it bounds.
@@ -145,15 +149,9 @@ def test_a_large_y_loses_no_more_than_its_own_digits(designs, estimator, offset_
     spacing = np.spacing(abs(offset_kw))
     away = np.abs((made.estimate - offset_kw) - expected)
     assert away.max() <= 1e-6 * rows.noise_sd_kw + 2.0 * spacing
-    small = make_curve(
-        back.columns(), "wet_bulb_c", "power_kw", smoothing=Smoothing(estimator=estimator, widths=8)
-    )
-    large = make_curve(
-        lifted.columns(),
-        "wet_bulb_c",
-        "power_kw",
-        smoothing=Smoothing(estimator=estimator, widths=8),
-    )
+    smoothing = Smoothing(estimator=estimator, widths=8, engine="binned")
+    small = make_curve(back.columns(), "wet_bulb_c", "power_kw", smoothing=smoothing)
+    large = make_curve(lifted.columns(), "wet_bulb_c", "power_kw", smoothing=smoothing)
     # The standard error and the chosen width do not see the offset.
     loss = spacing / rows.noise_sd_kw
     assert large.bandwidth == pytest.approx(small.bandwidth, rel=2e-3)
