@@ -290,8 +290,9 @@ def own_points(source: Source, reading: Reading, band: Band) -> Floats | None:
     if reading.scale == "log":
         if not places[0] > 0.0:
             raise InputError(
-                "--at", "be positive with --scale log", f"it holds {places[0]:g}", "leave it out"
-            )
+                "--at", "be positive with --scale log", f"it holds {places[0]:g}",
+                "leave such points out",
+            )  # fmt: skip
         return np.log(places)
     return places
 
@@ -389,7 +390,10 @@ def _search_in_rounds(
         table = chosen.counted.table
         counted = count_finer(weighed, chosen.counted, reading, table.plan.bins, progress)
         chosen = search_counted(weighed, counted, reading, smoothing, fixed, places, progress)
-        before, core = core, core_of(sample, core.x, middle_of(chosen, smoothing, core.x)) or core
+        middle = middle_of(
+            chosen.pyramid, chosen.shape, chosen.bandwidth, smoothing.estimator, core.x
+        )
+        before, core = core, core_of(sample, core.x, middle) or core
         moved = farthest_move(before, core)
     counts = (weighed.rows[0], weighed.down[0], weighed.ignored[0])
     return replace(chosen, core=core, robust=robust_facts(core, counts, rounds, moved))
@@ -410,8 +414,8 @@ def _search_neighbours(
     near = Neighbours.of(gather_rows(source, counted.table, reading, progress))
     if smoothing.neighbours is not None and smoothing.neighbours >= near.rows.total:
         raise InputError(
-            "--neighbours", f"be below the number of rows, {near.rows.total:g}",
-            f"it is {smoothing.neighbours}", "lower it, or leave it out",
+            "--neighbours", f"be below the number of rows, {near.rows.total:,.0f}",
+            f"it is {smoothing.neighbours:,}", "lower it, or leave it out",
         )  # fmt: skip
     progress("searching", 0, None)
     found = search_neighbours(

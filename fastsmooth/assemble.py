@@ -16,8 +16,10 @@ from fastsmooth.bands import Noise, Occupied, Points, estimate_noise, fit_points
 from fastsmooth.bintable import Level, Pyramid
 from fastsmooth.cautions import (
     about_curve,
+    about_folds,
     about_rows,
     about_search,
+    fold_weights,
     standardised_residuals,
 )
 from fastsmooth.curve import EDGE, OK, Curve, Density
@@ -46,6 +48,7 @@ from fastsmooth.source import Source
 from fastsmooth.trail import Search, Trail
 
 if TYPE_CHECKING:
+    from fastsmooth.files import FileRecord
     from fastsmooth.kernels.shapes import Shape
 
 Floats = NDArray[np.float64]
@@ -130,6 +133,8 @@ class Evaluated:
         How well it predicts.
     landmarks : list of dict or None
         On the plan's scale.
+    stretches : list of (float, float) or None
+        Where landmarks were looked for, on the plan's scale.
     without_folds : FoldCurves or None
         The curve without each fold.
     residuals : (rows,) float64
@@ -141,6 +146,7 @@ class Evaluated:
     engine: dict[str, Any]
     fit: dict[str, Any]
     landmarks: list[dict[str, Any]] | None
+    stretches: list[tuple[float, float]] | None
     without_folds: FoldCurves | None
     residuals: Floats
 
@@ -158,10 +164,11 @@ def assemble(
         "settings": _settings(source, chosen, reading, smoothing, band),
         "rows": table.tally.to_dict(),
         "blocks": len(table.blocks) if plan.block is not None else None,
-        "files": [asdict(record) for record in source.files],
+        "folds_with_rows": fold_weights(table).size,
+        "files": list(_file_facts(tuple(source.files))),
         "engine": {k: _finite(v) for k, v in found.engine.items()},
         "fit": found.fit,
-        "landmarks": None,
+        "landmarks": None, "landmark_stretches": None,
         "plan": json.loads(json.dumps(plan.to_dict())),
         "versions": dict(_versions()),
         "robust": _robust_in_axis(chosen.robust, log),
@@ -169,6 +176,10 @@ def assemble(
     }
     if found.landmarks is not None:
         trace["landmarks"] = [_in_axis_terms(mark, log) for mark in found.landmarks]
+    if found.stretches is not None:
+        trace["landmark_stretches"] = [
+            [_in_axis(low, log), _in_axis(high, log)] for low, high in found.stretches
+        ]
     x = np.exp(found.places) if log else found.places
     per_x = 1.0 / x if log else np.ones_like(x)
     widths_are_factors = log and chosen.near is None
@@ -184,7 +195,8 @@ def assemble(
     )  # fmt: skip
     cautions = (
         *chosen.counted.cautions,
-        *about_rows(table, source),
+        *about_rows(table),
+        *about_folds(made, table),
         *about_search(made),
         *about_curve(made, sample, found.residuals),
     )
@@ -253,15 +265,16 @@ def _by_bandwidth(
         "level_bins_per_bandwidth": bandwidth / level.width, "passes": chosen.counted.passes,
         "error_in_noise_sd": error, "residual_sd": _residual_sd(noise),
     }  # fmt: skip
-    landmarks = None
+    landmarks, stretches = None, None
     if band.landmarks or band.crossings:
         grid, on_grid = places, points
         if chosen.places is not None:
             # The caller's few points do not show where the curve is supported.
             grid = np.linspace(low, high, _SUPPORT_POINTS)
             on_grid = evaluate(grid, replace(band, kind="pointwise"))
+        stretches = _stretches(grid, on_grid)
         marks = find_landmarks(
-            _stretches(grid, on_grid), level, shape, fits.bandwidth_bins,
+            stretches, level, shape, fits.bandwidth_bins,
             estimator=estimator, reference=plan.reference, confidence=band.level,
             crossings=band.crossings,
         )  # fmt: skip
@@ -274,7 +287,7 @@ def _by_bandwidth(
         )  # fmt: skip
     return Evaluated(
         places, points, engine, fit_facts(fits, estimator, score, plan.reference), landmarks,
-        without_folds,
+        stretches, without_folds,
         standardised_residuals(fits, noise, estimator, plan.reference, chosen.counted.sample),
     )  # fmt: skip
 
@@ -316,15 +329,16 @@ def _by_neighbours(
         )  # fmt: skip
     residuals = sample_residuals(near, k, noise, level, plan.reference, chosen.counted.sample)
     fit = neighbour_facts(near, k, score, trace, plan.reference)
-    return Evaluated(places, points, engine, fit, None, without_folds, residuals)
+    return Evaluated(places, points, engine, fit, None, None, without_folds, residuals)
 
 
-def middle_of(chosen: Chosen, smoothing: Smoothing, places: Floats) -> Floats:
+def middle_of(
+    pyramid: Pyramid, shape: Shape, bandwidth: float, estimator: str, places: Floats
+) -> Floats:
     """Return the curve at places on the plan's scale; NaN where there is none."""
-    pyramid, shape, bandwidth = chosen.pyramid, chosen.shape, chosen.bandwidth
     finer = _FINER_FOR_CURVE * shape.bins_per_bandwidth
     level = pyramid.levels[pyramid.level_for(bandwidth, finer)]
-    value = values_at(places, level, bandwidth, shape, smoothing.estimator)
+    value = values_at(places, level, bandwidth, shape, estimator)
     return value + pyramid.plan.reference
 
 
@@ -485,6 +499,12 @@ def _plain_range(reading: Reading) -> list[str] | None:
 
 def _finite(value: Any) -> Any:
     return None if isinstance(value, float) and not math.isfinite(value) else value
+
+
+@lru_cache(maxsize=4)
+def _file_facts(files: tuple[FileRecord, ...]) -> list[dict[str, Any]]:
+    """The files as plain data: one list for all the curves made from them."""
+    return [asdict(record) for record in files]
 
 
 @lru_cache(maxsize=1)

@@ -46,6 +46,8 @@ _MANY_GROUPS = 64
 Floats = NDArray[np.float64]
 
 Progress = Callable[[str, int, int | None], None]
+# What `count_pass` does: source, plan, reading and progress -> table and shown rows.
+Counting = Callable[[Source, Plan, Reading, Progress], tuple[BinTable, Floats]]
 
 
 def silent(stage: str, rows: int, of: int | None) -> None:
@@ -87,7 +89,7 @@ def count_pass(
     """
     done = 0
     dealer = None if reading.blocks is None else Dealer(reading.blocks, plan.folds)
-    stride = max(1, (source.rows_expected or _SHOWN_ROWS * 64) // _SHOWN_ROWS)
+    stride = shown_stride(source)
 
     def count(parts: Iterator[tuple[Task, Iterator[Chunk]]]) -> tuple[BinTable, Floats]:
         table = BinTable(plan)
@@ -109,24 +111,38 @@ def count_pass(
         progress("reading", done, source.rows_expected)
 
     total, shown = BinTable(plan), []
-    groups = _groups(source.tasks, plan)
+    groups = task_groups(source.tasks, plan)
     heard = None if progress is silent else report
     for part, few in source.map_groups(count, groups, reading.threads, progress=heard):
         total.merge(part)
         shown.append(few)
     rows = np.concatenate(shown, axis=1) if shown else np.empty((2, 0))
-    return total, rows[:, :: max(1, rows.shape[1] // (2 * _SHOWN_ROWS))]
+    return total, thin_out(rows)
 
 
-def _groups(tasks: Sequence[Task], plan: Plan) -> list[Sequence[Task]]:
+def shown_stride(source: Source) -> int:
+    """Return how many rows apart the rows shown in pictures are taken from each chunk."""
+    return max(1, (source.rows_expected or _SHOWN_ROWS * 64) // _SHOWN_ROWS)
+
+
+def thin_out(rows: Floats) -> Floats:
+    """Thin rows, (2, n), that turn out to be more than a picture can show."""
+    return rows[:, :: max(1, rows.shape[1] // (2 * _SHOWN_ROWS))]
+
+
+def task_groups(tasks: Sequence[Task], plan: Plan) -> list[Sequence[Task]]:
     """Tasks that are summed into one table: their number does not depend on the threads.
 
     A table with all folds costs as much to merge as some hundred thousand rows to read, so that
     tasks which meet all folds are summed in a few groups. Every so many tasks form a group: then
     all groups take equally long where rows differ along the data.
     """
-    if plan.folds_per_task < plan.folds and plan.block is None:
-        return [(task,) for task in tasks]
+    if plan.block is None:
+        if plan.folds_per_task == 1:
+            # Tasks of one fold follow each other: no two groups share a fold.
+            return [tasks[start :: plan.folds] for start in range(min(plan.folds, len(tasks)))]
+        if plan.folds_per_task < plan.folds:
+            return [(task,) for task in tasks]
     groups = max(_FEW_GROUPS, min(_MANY_GROUPS, len(tasks) // 8))
     return [tasks[start::groups] for start in range(min(groups, len(tasks)))]
 
@@ -136,8 +152,14 @@ def block_words(reading: Reading) -> str | None:
     return None if reading.block is None else str(reading.block)
 
 
-def count_rows(source: Source, reading: Reading, progress: Progress = silent) -> Counted:
+def count_rows(
+    source: Source, reading: Reading, progress: Progress = silent, counting: Counting = count_pass,
+    sample: Sample | None = None,
+) -> Counted:  # fmt: skip
     """Plan and read, as often as the range of x demands (once for ordinary data).
+
+    `counting` reads all rows once: threads of this process, or the workers of a cluster. `sample`
+    are some of the rows, if they are at hand.
 
     Raises
     ------
@@ -146,16 +168,17 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
     """
     scale = reading.scale
     check_scale(source, scale)
-    sample = draw_sample(source, scale, reading.threads)
+    if sample is None:
+        sample = draw_sample(source, scale, reading.threads)
     trimmed = False
     stated = None
     if reading.range is not None:
         bounds = user_range(source, reading.range, scale)
     else:
-        stated = _statistics_bounds(source, scale)
+        stated = statistics_bounds(source, scale)
         bounds = stated or find_range(source, scale, reading.threads)
         full = bounds
-        bounds = _plausible_bounds(bounds, sample)
+        bounds = plausible_bounds(bounds, sample)
         trimmed = bounds != full
     for passes in range(1, _MOST_PASSES + 1):
         slots = 8 if source.columns.weight is None else 16
@@ -163,10 +186,10 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
             source, sample, bounds, scale=scale, block=block_words(reading),
             bins=min(BINS, most_bins(reading.folds, reading.threads, slots)), folds=reading.folds,
         )  # fmt: skip
-        table, shown = count_pass(source, plan, reading, progress)
+        table, shown = counting(source, plan, reading, progress)
         check_rows(table, source, reading)
-        if bounds == stated and _rows_outside(table):
-            bounds = full = _corrected_bounds(source, stated, reading, _rows_outside(table))
+        if bounds == stated and rows_outside(table):
+            bounds = full = _corrected_bounds(source, stated, reading, rows_outside(table))
             continue
         if passes == _MOST_PASSES:
             break
@@ -176,8 +199,8 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
             continue
         if reading.range is not None:
             break
-        if trimmed and _rows_outside(table) > _TRIMMED_SHARE * (
-            table.tally.used + _rows_outside(table)
+        if trimmed and rows_outside(table) > _TRIMMED_SHARE * (
+            table.tally.used + rows_outside(table)
         ):
             # The sample missed too much: give the range back.
             bounds, trimmed = full, False
@@ -187,14 +210,16 @@ def count_rows(source: Source, reading: Reading, progress: Progress = silent) ->
             break
         bounds, trimmed = narrower, True
     cautions = []
-    if trimmed and _rows_outside(table):
+    if trimmed and rows_outside(table):
         cautions.append(_trim_caution(table, source))
+    cautions += about_midnight(source, reading)
     return Counted(table, sample, shown, tuple(cautions), passes)
 
 
 def count_finer(
-    source: Source, counted: Counted, reading: Reading, bins: int, progress: Progress = silent
-) -> Counted:
+    source: Source, counted: Counted, reading: Reading, bins: int, progress: Progress = silent,
+    counting: Counting = count_pass,
+) -> Counted:  # fmt: skip
     """Read again with more bins over the range that holds rows."""
     plan = counted.table.plan
     low, high = counted.table.extent.tolist()
@@ -202,7 +227,7 @@ def count_finer(
         source, counted.sample, (low, high), scale=plan.scale, block=plan.block, bins=bins,
         folds=plan.folds,
     )  # fmt: skip
-    again, shown = count_pass(source, finer, reading, progress)
+    again, shown = counting(source, finer, reading, progress)
     return replace(counted, table=again, shown=shown, passes=counted.passes + 1)
 
 
@@ -224,41 +249,62 @@ def check_rows(table: BinTable, source: Source, reading: Reading) -> None:
         refused row when `strict`.
     """
     refused = table.tally.refused
-    for role in ("weight", "count"):
-        bad = refused.get(f"{role} negative or infinite", 0)
-        if bad:
-            column = getattr(source.columns, role)
-            raise InputError(
-                f"--{role}", "name a column of positive finite numbers",
-                f"'{column}' is negative or infinite in {bad} rows",
-                "leave those rows out with "
-                + where_option(f"{sql_name(column)} > 0 AND {sql_name(column)} < 1e30"),
-            )  # fmt: skip
+    check_signs(refused, source.columns)
     if table.tally.used == 0:
-        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        counts = ", ".join(f"{rows:,} {reason}" for reason, rows in sorted(refused.items()))
         if not counts:
             raise no_usable_rows()
         raise InputError(
             "DATA", "hold rows with finite x and y",
-            f"every row was filtered or refused ({table.tally.filtered} filtered, {counts})",
+            f"every row was filtered or refused ({table.tally.filtered:,} filtered, {counts})",
             "check --where, --range and the columns",
         )  # fmt: skip
     check_sizes(table.total(), table.tally.used, source.columns)
     if reading.block is not None and len(table.sums) < 2:
+        blocks = len(table.blocks)
         raise InputError(
             "--block", "tell at least two blocks apart",
-            f"'{reading.block}' is the same in all {table.tally.used} rows",
+            f"'{reading.block}' is the same in all {table.tally.used:,} rows"
+            if blocks < 2
+            else f"the {blocks:,} blocks of '{reading.block}' were dealt to one fold",
             "name a finer block, or leave it out",
         )  # fmt: skip
     if reading.range is not None:
         # The caller left these out; they are no fault of the data.
         refused = {k: v for k, v in refused.items() if not k.endswith(" range")}
     if reading.strict and refused:
-        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        counts = ", ".join(f"{rows:,} {reason}" for reason, rows in sorted(refused.items()))
         raise InputError(
             "DATA", "hold usable rows only with --strict", f"some were refused ({counts})",
             "clean the data, filter with --where, or leave --strict out",
         )  # fmt: skip
+
+
+def check_signs(refused: dict[str, int], columns: Columns) -> None:
+    """Refuse negative or infinite weights and counts: no row with one can be meant.
+
+    Parameters
+    ----------
+    refused : dict of str to int
+        Rows refused, by reason.
+    columns : Columns
+        For the refusal.
+
+    Raises
+    ------
+    InputError
+        There are some.
+    """
+    for role in ("weight", "count"):
+        bad = refused.get(f"{role} negative or infinite", 0)
+        if bad:
+            column = getattr(columns, role)
+            raise InputError(
+                f"--{role}", "name a column of positive finite numbers",
+                f"'{column}' is negative or infinite in {bad:,} rows",
+                "leave those rows out with "
+                + where_option(f"{sql_name(column)} > 0 AND {sql_name(column)} < 1e30"),
+            )  # fmt: skip
 
 
 def check_sizes(total: Floats, rows: int, columns: Columns) -> None:
@@ -312,7 +358,8 @@ def check_sizes(total: Floats, rows: int, columns: Columns) -> None:
         )  # fmt: skip
 
 
-def _statistics_bounds(source: Source, scale: str) -> tuple[float, float] | None:
+def statistics_bounds(source: Source, scale: str) -> tuple[float, float] | None:
+    """Return the range of x by the files' statistics, on the scale; None where they do not tell."""
     if source.x_range is None:
         return None
     low, high = source.x_range
@@ -336,13 +383,13 @@ def _corrected_bounds(
     if low < stated[0] - rounding or high > stated[1] + rounding:
         raise ReadError(
             "DATA", "agree with its own statistics",
-            f"{outside} values of '{source.columns.x}' lie outside the range that the files state",
+            f"{outside:,} values of '{source.columns.x}' lie outside the range that files state",
             "copy or write the files again: some are damaged",
         )  # fmt: skip
     return min(low, stated[0]), max(high, stated[1])
 
 
-def _plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[float, float]:
+def plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[float, float]:
     """Narrow a range so wide that the sample would fall into a single bin."""
     low, high = bounds
     if sample.x.size < _SAMPLE_ENOUGH:
@@ -354,7 +401,8 @@ def _plausible_bounds(bounds: tuple[float, float], sample: Sample) -> tuple[floa
     return max(low, first - 100.0 * span), min(high, last + 100.0 * span)
 
 
-def _rows_outside(table: BinTable) -> int:
+def rows_outside(table: BinTable) -> int:
+    """Return how many rows lie outside the plan's range."""
     refused = table.tally.refused
     return refused.get("x below range", 0) + refused.get("x above range", 0)
 
@@ -385,6 +433,21 @@ def _trimmed_bounds(table: BinTable) -> tuple[float, float] | None:
     return low, high
 
 
+def about_midnight(source: Source, reading: Reading) -> list[Caution]:
+    """Tell that blocks are cut at midnight UTC where the data are written in another zone."""
+    block = reading.blocks
+    if block is None or block.unit in (None, "hour") or block.zone is not None:
+        return []
+    if not source.shows_offset(block.column):
+        return []
+    zoned = replace(block, zone="Europe/Madrid")
+    return [Caution(
+        "midnight UTC",
+        f"{block.column} is written with an offset from UTC, which reading turns into UTC: each "
+        f"{block.unit} begins at midnight UTC. Name the zone of the place, as in --block {zoned}.",
+    )]  # fmt: skip
+
+
 def _trim_caution(table: BinTable, source: Source) -> Caution:
     refused = table.tally.refused
     plan = table.plan
@@ -393,6 +456,6 @@ def _trim_caution(table: BinTable, source: Source) -> Caution:
     return Caution(
         "range trimmed",
         f"The range of {source.columns.x} was trimmed to {source.axis.label(ends[0])} to "
-        f"{source.axis.label(ends[1])} because of far outliers: {below} rows lie below and {above} "
-        f"above it and were left out. Give --range to decide yourself.",
+        f"{source.axis.label(ends[1])} because of far outliers: {below:,} rows lie below and "
+        f"{above:,} above it and were left out. Give --range to decide yourself.",
     )

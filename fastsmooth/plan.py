@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import asdict, dataclass, replace
+from dataclasses import asdict, dataclass, fields, replace
 from functools import cached_property
 from typing import Any, NamedTuple
 
@@ -140,7 +140,9 @@ class Plan:
 
     def to_dict(self) -> dict[str, Any]:
         """Return plain data for JSON."""
-        plain = asdict(self)
+        # Field by field: `asdict` would copy the pilot number by number.
+        plain = {field.name: getattr(self, field.name) for field in fields(self)}
+        plain["columns"] = asdict(self.columns)
         plain["axis"] = self.axis.to_dict()
         return plain
 
@@ -176,6 +178,10 @@ class Sample(NamedTuple):
     y: Floats
     run: NDArray[np.int64]
     place: NDArray[np.int64]
+
+    def take(self, rows: NDArray[np.int64]) -> Sample:
+        """Return some of the rows."""
+        return Sample(self.x[rows], self.y[rows], self.run[rows], self.place[rows])
 
 
 def bin_width(low: float, high: float, bins: int) -> float:
@@ -416,12 +422,14 @@ def pilot_of(sample: Sample, low: float, high: float) -> tuple[float, tuple[floa
     # Clipped as floats: a far outlier of x has no integer cell.
     cell = np.clip((sample.x - low) / (high - low) * _PILOT_NODES, 0.0, _PILOT_NODES - 1.0)
     cell = cell.astype(int)
-    order = np.argsort(cell, kind="stable")
-    ends = np.searchsorted(cell[order], np.arange(_PILOT_NODES + 1))
+    y = sample.y[np.lexsort((sample.y, cell))]
+    counts = np.bincount(cell, minlength=_PILOT_NODES)
+    first = np.cumsum(counts) - counts
     medians = np.full(_PILOT_NODES, np.nan)
-    for node in range(_PILOT_NODES):
-        if ends[node] < ends[node + 1]:
-            medians[node] = np.median(sample.y[order[ends[node] : ends[node + 1]]])
+    met = counts > 0
+    # The two middle ones of an even number, twice the one of an odd number.
+    middle = first[met] + (counts[met] - 1) // 2, first[met] + counts[met] // 2
+    medians[met] = 0.5 * (y[middle[0]] + y[middle[1]])
     known = np.flatnonzero(np.isfinite(medians))
     nodes = np.arange(_PILOT_NODES)
     right = np.clip(np.searchsorted(known, nodes), 0, known.size - 1)
