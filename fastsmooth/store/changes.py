@@ -1,0 +1,163 @@
+"""Which files are new, changed, moved, gone, or as they were when they were counted."""
+
+from __future__ import annotations
+
+import hashlib
+import os
+from dataclasses import dataclass
+
+from fastsmooth.addresses import as_address, open_stream
+from fastsmooth.errors import InputError
+from fastsmooth.files import FileRecord, read_identity, reading
+from fastsmooth.store import disk
+from fastsmooth.store.ledger import Entry
+
+
+@dataclass(frozen=True)
+class Sorted:
+    """Files by what must be done about them; known ones by their ordinal in the ledger.
+
+    Attributes
+    ----------
+    new : list of FileRecord
+        Never counted.
+    changed, touched, moved : dict of int to FileRecord
+        With another content; with the same content and another time; under another path.
+    unchanged, vanished : list of int
+        As they were; gone (named by the caller or not).
+    digests : dict of str to str
+        SHA-256 of new files, if asked for.
+    """
+
+    new: list[FileRecord]
+    changed: dict[int, FileRecord]
+    touched: dict[int, FileRecord]
+    moved: dict[int, FileRecord]
+    unchanged: list[int]
+    vanished: list[int]
+    digests: dict[str, str]
+
+
+def sort_files(paths: list[str], entries: list[Entry], with_hash: bool) -> Sorted:
+    """Sort files by what must be done about them; nothing is counted yet.
+
+    Parameters
+    ----------
+    paths : list of str
+        Files named by the caller.
+    entries : list of Entry
+        The ledger.
+    with_hash : bool
+        Whether the content is compared where its SHA-256 was noted.
+
+    Raises
+    ------
+    InputError
+        A file may be one that was counted and is gone, or another.
+    """
+    place = {entry.path: n for n, entry in enumerate(entries)}
+    known = [path for path in paths if path in place]
+    vanished = [
+        n for n, entry in enumerate(entries)
+        if as_address(entry.path) is None and not os.path.exists(entry.path)
+    ]  # fmt: skip
+    found = Sorted([], {}, {}, {}, [], vanished, {})
+    for path in known:
+        n = place[path]
+        record = read_identity(path, None)
+        digest = entries[n].sha256
+        alike = is_alike(entries[n], record)
+        if digest is not None and (with_hash or not alike):
+            same = digest == digest_of_file(path)
+            if same and not alike:
+                found.touched[n] = record
+                continue
+            alike = same
+        if alike:
+            found.unchanged.append(n)
+        else:
+            found.changed[n] = record
+    new = [read_identity(path, None) for path in paths if path not in place]
+    if with_hash:
+        found.digests.update({record.path: digest_of_file(record.path) for record in new})
+    for record in new:
+        former = _counted_before(record, new, entries, found)
+        if former is None:
+            found.new.append(record)
+        else:
+            found.moved[former] = record
+    for n in found.moved:
+        found.vanished.remove(n)
+    return found
+
+
+def _counted_before(
+    record: FileRecord, new: list[FileRecord], entries: list[Entry], found: Sorted
+) -> int | None:
+    """The file that was counted under another path and is gone from there; None if there is none.
+
+    Raises
+    ------
+    InputError
+        There may be several, or the other one is still there.
+    """
+    digest = found.digests.get(record.path)
+    if digest is not None:
+        for n, entry in enumerate(entries):
+            if entry.sha256 == digest:
+                if n in found.vanished:
+                    return n
+                raise _counted_twice(record.path, entry.path)
+        for other in new:
+            if other is not record and found.digests[other.path] == digest:
+                raise _counted_twice(record.path, other.path)
+    former = [n for n in found.vanished if _may_be(entries[n], record)]
+    if not former:
+        return None
+    rivals = [one for one in new if _may_be(entries[former[0]], one)]
+    if len(former) > 1 or len(rivals) > 1:
+        raise InputError(
+            "DATA", "be told apart from files that were counted and are gone",
+            f"'{record.path}' may be '{entries[former[0]].path}' or another",
+            "put the files back where they were, or give them another name",
+        )  # fmt: skip
+    return former[0]
+
+
+def _counted_twice(path: str, other: str) -> InputError:
+    return InputError(
+        "DATA", "hold each file once", f"'{path}' and '{other}' hold the same bytes",
+        "leave one of them out",
+    )  # fmt: skip
+
+
+def is_alike(entry: Entry, record: FileRecord) -> bool:
+    """Tell whether a file is as it was when it was counted, by ETag, or by size and time."""
+    if entry.etag is not None and record.etag is not None:
+        return entry.etag == record.etag and entry.size_bytes == record.size_bytes
+    return (entry.size_bytes, entry.modified_ns) == (record.size_bytes, record.modified_ns)
+
+
+def _may_be(entry: Entry, record: FileRecord) -> bool:
+    names = os.path.basename(entry.path), os.path.basename(record.path)
+    return names[0] == names[1] and is_alike(entry, record)
+
+
+def is_same(record: FileRecord, other: FileRecord) -> bool:
+    """Tell whether a file is as it was a moment ago."""
+    return (record.size_bytes, record.modified_ns, record.etag) == (
+        other.size_bytes, other.modified_ns, other.etag,
+    )  # fmt: skip
+
+
+def digest_of_file(path: str) -> str:
+    """Return the SHA-256 of a file, here or in an object store."""
+    address = as_address(path)
+    with reading(path):
+        if address is None:
+            return disk.file_digest(path)
+        made = hashlib.sha256()
+        with open_stream(address) as stream:
+            while block := stream.read(1 << 20):
+                made.update(block)
+        return made.hexdigest()
