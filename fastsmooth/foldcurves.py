@@ -74,7 +74,7 @@ class FoldCurves:
     @property
     def moved(self) -> Floats:
         """Deviations in units of y, (k, n)."""
-        return np.asarray(self.parts * (self.scale / _STEPS))
+        return np.asarray(self.parts / _STEPS * self.scale)
 
     @property
     def shares(self) -> Floats:

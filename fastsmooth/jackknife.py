@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 Floats = NDArray[np.float64]
 
+# Deviations by folds are off by less than a ten-thousandth of their error with so few.
+_BINS_FOR_ERRORS = 16
+
 
 @dataclass(frozen=True)
 class Deviations:
@@ -169,16 +172,25 @@ def keep_fold_curves(
     kind : str
         The fit that the band is centred on; see `fastsmooth.localweights.weights_of`.
     """
-    # Errors need fewer bins than the curve itself.
-    level = pyramid.levels[pyramid.level_for(bandwidth, shape.bins_per_bandwidth)]
-    h = width_in_bins(bandwidth, level)
-    high = level.origin + level.width * level.bins
-    places = (np.clip(x, level.origin, high) - level.origin) / level.width
+    own = shape.bins_per_bandwidth
+    level, places, h = _places_on(pyramid, x, bandwidth, own)
     unused = np.zeros((3, level.bins))
     sums = sums_at(places, level.first[0:3], level.response, shape, h, unused, unused)
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
-        left_out = leave_out_folds(places, level, shape, h, kind)
         centre = weights_of(sums.s, h, kind).apply(sums.t) + pyramid.plan.reference
+        coarse = _BINS_FOR_ERRORS if shape.smoothness else own
+        level, places, h = _places_on(pyramid, x, bandwidth, coarse)
+        left_out = leave_out_folds(places, level, shape, h, kind)
     return FoldCurves.of(
         np.array(folds, np.int64), centre, left_out.degrees, left_out.moved, left_out.shares
     )
+
+
+def _places_on(
+    pyramid: Pyramid, x: Floats, bandwidth: float, bins_per_bandwidth: int
+) -> tuple[Level, Floats, float]:
+    """The level with so many bins to a bandwidth, the places in its bins, and h in its bins."""
+    level = pyramid.levels[pyramid.level_for(bandwidth, bins_per_bandwidth)]
+    high = level.origin + level.width * level.bins
+    places = (np.clip(x, level.origin, high) - level.origin) / level.width
+    return level, places, width_in_bins(bandwidth, level)

@@ -196,7 +196,8 @@ def test_on_few_places_binning_loses_nothing(seed, count, h):
     if len(met) >= 2:
         error = oracle.jackknife_error(12.0, x.tolist(), y.tolist(), folds, h, "triangular", 0)
         assert made.std_error[0] == pytest.approx(error, rel=2e-3, abs=1e-9)
-    assert made.shares.sum(axis=0)[0] == pytest.approx(1.0)
+    if met:
+        assert made.shares.sum(axis=0)[0] == pytest.approx(1.0)
 
 
 def test_a_fold_outside_the_window_moves_nothing():
