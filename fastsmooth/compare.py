@@ -246,7 +246,7 @@ def _curve_of_data(
             "name both columns, or give a curve file as BASE",
         )  # fmt: skip
     smoothing = Smoothing() if smoothing is None else smoothing
-    check_method(smoothing.estimator, smoothing.robust)
+    check_method(smoothing.estimator, "BASE", smoothing.robust)
     smoothing = replace(smoothing, engine="binned")
     if by:
         return make_fleet(

@@ -1,4 +1,4 @@
-"""Invented data of one milk-cooling plant, for the demo and for nothing else."""
+"""Invented data of milk-cooling plants, for the demo and for nothing else."""
 
 from __future__ import annotations
 
@@ -15,6 +15,11 @@ MINUTES = 365 * 24 * 60
 FAULT_CODE = -9999.0
 WHERE = "power_kw <> -9999"
 BLOCK = "logged_at:day"
+# Plants and their size.
+PLANTS = {
+    "northmoor": 1.0, "southmere": 1.1, "eastley": 0.8, "westbrook": 1.4, "hillfoot": 0.9,
+    "lakeside": 1.0,
+}  # fmt: skip
 
 
 def true_power_kw(wet_bulb_c: np.ndarray) -> np.ndarray:
@@ -37,32 +42,94 @@ def write_demo_data(folder: Path) -> Path:
     Path
         The folder that holds the files.
     """
-    import pyarrow as pa
-
     rng = np.random.default_rng(SEED)
     minute = np.arange(MINUTES)
+    wet_bulb_c = _weather(rng, minute, 1)
+    power_kw = true_power_kw(wet_bulb_c) + _scatter(rng, wet_bulb_c, 0.997)
+    data = folder / "data"
+    _write_months(rng, data, "northmoor", _stamps("2025-01-01", minute), wet_bulb_c, power_kw)
+    return data
+
+
+def write_demo_fleet(folder: Path) -> tuple[Path, Path]:
+    """Write ten-minute readings of six plants: a year, and a month of the year after.
+
+    In June 2026 the condenser of southmere is fouled, more so in warm weather; the power meter of
+    eastley was stuck for eleven days in August 2025; hillfoot had only just begun to log.
+
+    Parameters
+    ----------
+    folder : Path
+        Where; made if it does not exist.
+
+    Returns
+    -------
+    year, month : Path
+        The folders that hold the files, one for each plant and month.
+    """
+    year, month = folder / "fleet" / "2025", folder / "fleet" / "2026-06"
+    for place, (plant, size) in enumerate(PLANTS.items()):
+        rng = np.random.default_rng((SEED, place))
+        for out, start, first, days in (
+            (year, "2025-01-01", 0, 365),
+            (month, "2026-06-01", 151, 30),
+        ):
+            minute = np.arange(first * 1440, (first + days) * 1440, 10)
+            wet_bulb_c = _weather(rng, minute, 10)
+            power_kw = size * true_power_kw(wet_bulb_c) + _scatter(rng, wet_bulb_c, 0.97)
+            stamps = _stamps(start, minute - minute[0])
+            if plant == "southmere" and out is month:
+                power_kw *= 1.0 + 0.004 * np.clip(wet_bulb_c - 8.0, 0.0, None)
+            if plant == "eastley" and out is year:
+                day = minute / 1440.0
+                stuck = (day >= 220.0) & (day < 231.0)
+                power_kw[stuck] = power_kw[stuck][0]
+            kept = slice(-144, None) if plant == "hillfoot" and out is year else slice(None)
+            _write_months(rng, out, plant, stamps[kept], wet_bulb_c[kept], power_kw[kept])
+    return year, month
+
+
+def _weather(rng: np.random.Generator, minute: np.ndarray, step: int) -> np.ndarray:
+    """Wet-bulb temperature: seasons, days and weather, every so many minutes."""
     day = minute / 1440.0
-    weather = np.repeat(_wander(rng, MINUTES // 60, 0.985, 2.6), 60)
-    wet_bulb_c = (
+    hours = -(-minute.shape[0] * step // 60)
+    weather = np.repeat(_wander(rng, hours, 0.985, 2.6), 60 // step)[: minute.shape[0]]
+    return (
         9.0
         - 8.5 * np.cos(2.0 * np.pi * (day - 18.0) / 365.0)
         - 2.4 * np.cos(2.0 * np.pi * (day - 0.16))
         + weather
-        + rng.normal(0.0, 0.15, MINUTES)
+        + rng.normal(0.0, 0.15, minute.shape[0])
     )
+
+
+def _scatter(rng: np.random.Generator, wet_bulb_c: np.ndarray, memory: float) -> np.ndarray:
+    """Dirt, door openings, a slow controller: readings of one day resemble each other."""
+    n = wet_bulb_c.shape[0]
     spread = 1.6 + 0.11 * np.clip(wet_bulb_c, 0.0, None)
-    # Dirt, door openings, a slow controller: minutes of one day resemble each other.
-    habits = _wander(rng, MINUTES, 0.997, 1.3)
-    power_kw = true_power_kw(wet_bulb_c) + habits + spread * rng.standard_normal(MINUTES)
+    habits = _wander(rng, n, memory, 1.3)
+    return habits + spread * rng.standard_normal(n)
+
+
+def _stamps(start: str, minute: np.ndarray) -> np.ndarray:
+    return np.datetime64(f"{start}T00:00:00", "s") + minute.astype("timedelta64[m]")
+
+
+def _write_months(
+    rng: np.random.Generator, folder: Path, plant: str, stamps: np.ndarray,
+    wet_bulb_c: np.ndarray, power_kw: np.ndarray,
+) -> None:  # fmt: skip
+    """Write one plant's readings, with some lost and some fault codes, one file a month."""
+    import pyarrow as pa
+
+    n = stamps.shape[0]
     wet_bulb_c, power_kw = wet_bulb_c.round(2), power_kw.round(2)
-    missing = rng.random(MINUTES) < 2e-4
-    power_kw[rng.random(MINUTES) < 3e-4] = FAULT_CODE
-    start = np.datetime64("2025-01-01T00:00:00", "s")
-    stamps = start + minute.astype("timedelta64[m]")
+    missing = rng.random(n) < 2e-4
+    power_kw[rng.random(n) < 3e-4] = FAULT_CODE
     table = pa.table(
         {
             "logged_at": pa.array(stamps, pa.timestamp("s", "UTC")),
-            "plant": pa.array(np.full(MINUTES, "northmoor")),
+            "plant": pa.array(np.full(n, plant)),
             "wet_bulb_c": pa.array(wet_bulb_c, mask=missing),
             "power_kw": power_kw,
         },
@@ -75,25 +142,20 @@ def write_demo_data(folder: Path) -> Path:
             ]
         ),
     )
-    data = folder / "data"
-    data.mkdir(parents=True, exist_ok=True)
+    folder.mkdir(parents=True, exist_ok=True)
     month = stamps.astype("datetime64[M]")
     for one in np.unique(month):
         rows = np.flatnonzero(month == one)
         part = table.slice(int(rows[0]), rows.size)
-        write_table(part, data / f"northmoor-{one}.parquet", "FOLDER")
-    return data
+        write_table(part, folder / f"{plant}-{one}.parquet", "FOLDER")
 
 
 def _wander(rng: np.random.Generator, n: int, memory: float, sd: float) -> np.ndarray:
     """A slow wander around zero with this standard deviation (first-order autoregression)."""
+    from scipy.signal import lfilter
+
     steps = rng.normal(0.0, sd * np.sqrt(1.0 - memory**2), n)
-    out = np.empty(n)
-    value = 0.0
-    for i, step in enumerate(steps.tolist()):
-        value = memory * value + step
-        out[i] = value
-    return out
+    return np.asarray(lfilter([1.0], [1.0, -memory], steps))
 
 
 def run_demo(folder: Path, progress: Progress = silent) -> Curve:

@@ -129,16 +129,16 @@ def columns_of(
     return Columns(x or told["x"], y or told["y"], None, count or told["count"], block=block)
 
 
-def check_method(estimator: str, robust: bool) -> None:
-    """Refuse curves that are no plain means with a bandwidth."""
+def check_method(estimator: str, argument: str, robust: bool) -> None:
+    """Refuse curves that are no means with a bandwidth; a robust one may be the baseline."""
     if estimator == NEAREST:
         raise InputError(
             "--estimator", "be one with a bandwidth to be compared", f"it is {NEAREST}",
             "make the curve without it",
         )  # fmt: skip
-    if robust:
+    if robust and argument == "NOW":
         raise InputError(
-            "BASE and NOW", "be plain means to be compared",
+            "NOW", "be a plain mean to be compared",
             "a robust curve leaves far rows out, which are part of what rows add up to",
             "make the curve without --robust",
         )  # fmt: skip
@@ -152,7 +152,7 @@ def folds_of(curve: Curve, argument: str) -> FoldCurves:
     InputError
         It keeps nothing, or its points do not follow it.
     """
-    check_method(curve.settings["estimator"], curve.settings.get("robust", False))
+    check_method(curve.settings["estimator"], argument, curve.settings.get("robust", False))
     if has_own_points(curve):
         raise InputError(
             argument, "have evenly spaced points to be compared", "it was made with --at",
@@ -322,6 +322,12 @@ def _cautions(
         for caution in curve.cautions:
             if caution.code in _BEARING:
                 yield Caution(caution.code, f"{side}: {caution.text}")
+    if base.settings.get("robust"):
+        yield Caution(
+            "robust baseline",
+            "The baseline leaves far rows out and the current rows are all counted: faults of the "
+            "current period are part of the difference.",
+        )
     blocks = base.settings["block"], now.settings["block"]
     if blocks[0] != blocks[1]:
         told = [one or "runs of rows" for one in blocks]

@@ -358,11 +358,11 @@ def test_weights_have_no_excess():
 
 def test_other_methods_are_refused(base):
     rows = period(41)
-    for smoothing, match in (
-        (Smoothing(estimator="nearest"), "--estimator must be one with a bandwidth"),
-        (Smoothing(robust=True), "BASE and NOW must be plain means"),
-    ):
-        refused(match, rows, rows, "wet_bulb_c", "power_kw", smoothing=smoothing)
+    nearest = Smoothing(estimator="nearest")
+    match = "--estimator must be one with a bandwidth"
+    refused(match, rows, rows, "wet_bulb_c", "power_kw", smoothing=nearest)
+    robust = make_curve(rows, "wet_bulb_c", "power_kw", smoothing=Smoothing(robust=True, **MANY))
+    refused("NOW must be a plain mean to be compared", base, robust)
     kernel = make_curve(
         rows, "wet_bulb_c", "power_kw", smoothing=Smoothing(kernel="triweight", **MANY)
     )
@@ -375,6 +375,22 @@ def test_other_methods_are_refused(base):
         rows, "wet_bulb_c", "power_kw", smoothing=Smoothing(**MANY), band=Band(at=(1.0, 2.0))
     )
     refused("BASE must have evenly spaced points to be compared", own, rows)
+
+
+def test_a_robust_baseline_shrugs_off_its_faults():
+    """Every fiftieth baseline row is a fault; the excess is that of a clean baseline."""
+    rows, now = period(42), period(43)
+    faulty = {**rows, "power_kw": rows["power_kw"].copy()}
+    faulty["power_kw"][::50] = -9999.0
+    told = {
+        name: compare_curves(
+            data, now, "wet_bulb_c", "power_kw", smoothing=Smoothing(robust=robust, **MANY)
+        ).units[0]
+        for name, data, robust in (("clean", rows, False), ("robust", faulty, True))
+    }
+    clean, robust = told["clean"].excess, told["robust"].excess
+    assert abs(robust.amount - clean.amount) < 2.0 * clean.std_error
+    assert "robust baseline" in [caution.code for caution in told["robust"].cautions]
 
 
 def test_a_store_is_a_baseline_but_not_what_is_compared(files, tmp_path, capsys):
