@@ -319,8 +319,8 @@ def _draw_units(made: Figure, found: CurveComparison) -> None:
     real = {unit.key for unit in found.discoveries()}
     said = (
         f"Excess of {len(ranked):,} units by {', '.join(found.by)} with {100 * found.level:g} % "
-        f"intervals. Dark: real, with at most {100 * (1.0 - found.level):.3g} % false discoveries "
-        f"(Benjamini & Hochberg): {len(real):,} units."
+        f"intervals. In red the {len(real):,} that are real, with at most "
+        f"{100 * (1.0 - found.level):.3g} % false discoveries (Benjamini & Hochberg)."
     )
     if len(ranked) > len(shown):
         said += f" The first {len(shown)} are drawn."
