@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
@@ -10,11 +11,19 @@ from fastsmooth.curve import Curve
 from fastsmooth.files_out import write_table
 from fastsmooth.passes import Progress, silent
 
+if TYPE_CHECKING:
+    from fastsmooth.comparison import CurveComparison
+    from fastsmooth.fleet import Fleet
+    from fastsmooth.score import Scored
+    from fastsmooth.store.update import Updated
+
 SEED = 20_260_101
 MINUTES = 365 * 24 * 60
 FAULT_CODE = -9999.0
 WHERE = "power_kw <> -9999"
 BLOCK = "logged_at:day"
+LIMITS = (0.005, 0.995)
+HOURS_PER_ROW = 1.0 / 6.0
 # Plants and their size.
 PLANTS = {
     "northmoor": 1.0, "southmere": 1.1, "eastley": 0.8, "westbrook": 1.4, "hillfoot": 0.9,
@@ -178,3 +187,84 @@ def run_demo(folder: Path, progress: Progress = silent) -> Curve:
         made.save(folder / name)
     made.plot(folder / "curve.png")
     return made
+
+
+class Night(NamedTuple):
+    """What a night's work on the fleet gives.
+
+    Attributes
+    ----------
+    updated : Updated
+        The store of the year's sums.
+    fleet : Fleet
+        Curves of the year, robust, with limits.
+    scored : Scored
+        The month's rows outside the limits.
+    compared : CurveComparison
+        What the month cost beyond the year's curves.
+    """
+
+    updated: Updated
+    fleet: Fleet
+    scored: Scored
+    compared: CurveComparison
+
+
+def run_night(folder: Path, progress: Progress = silent) -> Night:
+    """Write the fleet's data and do a night's work on them; everything is left in the folder.
+
+    Raises
+    ------
+    WriteError
+        The folder cannot be written.
+    """
+    from fastsmooth.compare import compare_curves
+    from fastsmooth.manyunits import make_fleet
+    from fastsmooth.report.page import write_page
+    from fastsmooth.score import score_rows
+    from fastsmooth.settings import Band, Reading, Smoothing
+    from fastsmooth.store.settings import StoreSettings
+    from fastsmooth.store.update import update_store
+
+    year, month = write_demo_fleet(folder)
+    store = folder / "plants.store"
+    settings = StoreSettings(
+        "wet_bulb_c", "power_kw", by=("plant",), block=BLOCK, period="logged_at:month", where=WHERE
+    )
+    updated = update_store(store, year, settings, progress=progress)
+    fleet = make_fleet(
+        year, "wet_bulb_c", "power_kw", by="plant", reading=Reading(where=WHERE, block=BLOCK),
+        smoothing=Smoothing(robust=True), band=Band(limits=LIMITS), progress=progress,
+    )  # fmt: skip
+    fleet.save(folder / "curves.parquet")
+    write_page(fleet, folder / "fleet.html")
+    scored = score_rows(
+        month, folder / "curves.parquet", out=folder / "flagged", only="outside-limits",
+        where=WHERE, progress=progress,
+    )  # fmt: skip
+    compared = compare_curves(
+        folder / "curves.parquet", month, hours_per_row=HOURS_PER_ROW, progress=progress
+    )
+    compared.save_units(folder / "excess.csv")
+    compared.plot(folder / "drift.png")
+    return Night(updated, fleet, scored, compared)
+
+
+def night_commands(folder: str) -> list[str]:
+    """Return the commands that do a night's work, in order."""
+    year, month = f"{folder}/fleet/2025", f"{folder}/fleet/2026-06"
+    where = f'--where "{WHERE}"'
+    curves = f"{folder}/curves.parquet"
+    return [
+        f"fastsmooth update {folder}/plants.store {year} --x wet_bulb_c --y power_kw \\\n"
+        f"    --by plant --block {BLOCK} --period logged_at:month {where}",
+        f"fastsmooth search {folder}/plants.store --last '12 months'",
+        f"fastsmooth curve {year} --x wet_bulb_c --y power_kw --by plant {where} \\\n"
+        f"    --block {BLOCK} --robust --limits {','.join(str(one) for one in LIMITS)} \\\n"
+        f"    --out {curves} --page {folder}/fleet.html",
+        f"fastsmooth score {month} --curve {curves} {where} \\\n"
+        f"    --only outside-limits --out {folder}/flagged",
+        f"fastsmooth compare {curves} {month} --hours-per-row {HOURS_PER_ROW:.6g} \\\n"
+        f"    --units-out {folder}/excess.csv --plot {folder}/drift.png",
+        f"fastsmooth info {curves}",
+    ]
