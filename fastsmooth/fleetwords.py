@@ -13,6 +13,7 @@ from fastsmooth.summary import row_lines
 
 _FIRST_UNITS = 10
 _FIRST_WITHOUT = 5
+_MOST_ROBUST = 3
 
 
 def fleet_lines(fleet: Fleet) -> list[str]:
@@ -30,6 +31,7 @@ def fleet_lines(fleet: Fleet) -> list[str]:
     lines += _width_lines(fleet)
     kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(f"band       {settings['band']} {100 * settings['level']:g} %, {kind}")
+    lines += _robust_lines(fleet)
     if "bins" in engine:
         times = "one pass" if engine["passes"] == 1 else f"{engine['passes']} passes"
         lines.append(
@@ -53,6 +55,7 @@ def fleet_facts(fleet: Fleet) -> dict[str, Any]:
         "files": len(fleet.trace["files"]),
         "engine": fleet.trace["engine"],
         "shared_bandwidth": fleet.trace["shared_bandwidth"],
+        "robust": fleet.trace.get("robust"),
         "status_counts": fleet.status_counts(),
         "cautions": [caution._asdict() for caution in fleet.cautions],
         "caution_counts": caution_counts(fleet),
@@ -98,6 +101,23 @@ def _width_lines(fleet: Fleet) -> list[str]:
         f"{_label(fleet, widths[high])} ({made[high].name}), median {_label(fleet, middle)}; each "
         f"unit's own, chosen by {settings['criterion']}; {estimator}"
     ]
+
+
+def _robust_lines(fleet: Fleet) -> list[str]:
+    counts = fleet.trace.get("robust")
+    if counts is None:
+        return []
+    judged, down, ignored = (sum(one[place] for one in counts) for place in range(3))
+    shares = [one[2] / one[0] if one[0] else 0.0 for one in counts]
+    most = sorted(range(len(shares)), key=lambda place: -shares[place])[:_MOST_ROBUST]
+    told = ", ".join(
+        f"{fleet.units[place].name} {shares[place]:.2%}" for place in most if shares[place] > 0.0
+    )
+    text = (
+        f"robust     {down:,} rows ({down / max(judged, 1):.2%}) count less than half, {ignored:,} "
+        f"of them not at all"
+    )
+    return [text + (f"; most in {told}" if told else "")]
 
 
 def _unit_lines(fleet: Fleet) -> list[str]:

@@ -39,6 +39,7 @@ from fastsmooth.settings import NEAREST, Band, Reading, Smoothing, check_flag
 from fastsmooth.source import Columns, Source, open_source
 from fastsmooth.store.disk import is_store
 from fastsmooth.unitpasses import add_unit_limits, weigh_in_rounds
+from fastsmooth.unitsums import CountedUnits
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
@@ -49,7 +50,10 @@ Floats = NDArray[np.float64]
 T = TypeVar("T")
 U = TypeVar("U")
 
-_MOST_PASSES = 3
+# All units are searched, those whose width asks for it again with finer bins, and once more.
+_MOST_ROUNDS = 3
+# A round may take so many passes where memory does not hold the finer bins of all its units.
+_MOST_PARTS = 4
 _FEWEST_PLACES = 4
 # The common width must be one at which units with this share of the rows can be judged.
 _SHARE_JUDGED = 0.95
@@ -265,7 +269,7 @@ class Weighed:
 
 
 # Gives tables with the bins that some units ask for; None where rows are not at hand any more.
-Recount = Callable[[dict[Key, Plan]], Tables]
+Recount = Callable[[Mapping[Key, Plan | None]], Tables]
 
 
 def make_units(job: Job, progress: Progress) -> Fleet:
@@ -281,7 +285,7 @@ def make_units(job: Job, progress: Progress) -> Fleet:
     tables: Tables = counted.units
     together = counted.together
 
-    def count(source: Source, plan_for: Callable[[Key], Plan | None]) -> Tables:
+    def count(source: Source, plan_for: Callable[[Key], Plan | None]) -> CountedUnits:
         base = replace(ways.base, columns=source.columns)
         return count_units(
             source, base, plan_for, job.reading, job.grouping, progress,
@@ -298,17 +302,21 @@ def make_units(job: Job, progress: Progress) -> Fleet:
         together = replace(together, passes=together.passes + rounds.passes)
         job = replace(job, cores=rounds.cores, robust=rounds.facts)
 
-    def recount(finer: dict[Key, Plan]) -> Tables:
+    held = [counted.units]
+
+    def recount(finer: Mapping[Key, Plan | None]) -> Tables:
+        if not job.smoothing.robust:
+            # Tables of the former pass have served; two of them might not fit into memory.
+            held.pop().release()
         made = count(source, finer.get)
+        held.append(made)
         return Weighed(made, counted.units, frozenset(finer)) if job.smoothing.robust else made
 
     layout = {
         "bins": ways.base.bins, "folds": ways.base.folds, "planned_units": counted.layout.units,
         "memory_cap_bytes": MEMORY_CAP_BYTES,
     }  # fmt: skip
-    return fleet_of_tables(
-        job, tables, counted.units.keys, together, layout, recount, progress
-    )
+    return fleet_of_tables(job, tables, counted.units.keys, together, layout, recount, progress)
 
 
 def fleet_of_tables(
@@ -353,18 +361,27 @@ def fleet_of_tables(
         job = replace(job, fixed=shared["bandwidth_on_scale"])
     passes = together.passes
     settings: dict[str, Any] = {}
-    for tried in range(1, _MOST_PASSES + 1):
-        progress("fitting", 0, None)
-        last = recount is None or tried == _MOST_PASSES
-        worker = Worker(job, tables, passes, settings, last=last)
-        made = dict(zip(makers, spread(worker.make, makers, job.reading.threads), strict=True))
-        units |= {key: one for key, one in made.items() if isinstance(one, Unit)}
-        finer = {key: one.plan for key, one in made.items() if isinstance(one, Finer)}
-        if recount is None or not finer:
+    # The first round has its tables; later ones count some units after the other.
+    parts: list[Mapping[Key, Plan | None]] = [dict.fromkeys(makers)]
+    for tried in range(1, _MOST_ROUNDS + 1):
+        last = recount is None or tried == _MOST_ROUNDS
+        sharing = sum(map(len, parts))
+        finer: dict[Key, Plan] = {}
+        for part in parts:
+            if recount is not None and tried > 1:
+                tables = recount(part)
+                passes += 1
+            progress("fitting", 0, None)
+            worker = Worker(job, tables, passes, settings, last, sharing)
+            made = zip(part, spread(worker.make, list(part), job.reading.threads), strict=True)
+            for key, one in made:
+                if isinstance(one, Finer):
+                    finer[key] = one.plan
+                else:
+                    units[key] = one
+        if not finer:
             break
-        tables = recount(within_memory(finer, together.table.slots))
-        passes += 1
-        makers = [key for key in makers if key in finer]
+        parts = [*in_parts(finer, together.table.slots)]
     if "shared" not in settings:
         raise _none_made([units[key] for key in keys])
     trace = {
@@ -374,9 +391,18 @@ def fleet_of_tables(
         "rows": together.table.tally.to_dict(),
         "engine": {"name": "binned", **layout, "passes": passes},
         "shared_bandwidth": shared,
+        "robust": _robust_counts(job, keys),
     }
     cautions = together.cautions
     return Fleet(job.grouping.words, tuple(units[key] for key in keys), cautions, trace)
+
+
+def _robust_counts(job: Job, keys: Sequence[Key]) -> list[list[int]] | None:
+    """Rows judged, down-weighted and ignored in each unit, in the order of the units."""
+    if not job.robust:
+        return None
+    names = ("rows_judged", "rows_down_weighted", "rows_ignored")
+    return [[job.robust.get(key, {}).get(name, 0) for name in names] for key in keys]
 
 
 def spread(function: Callable[[T], U], values: Sequence[T], threads: int) -> list[U]:
@@ -448,12 +474,30 @@ def why_not(job: Job, table: BinTable) -> tuple[str, str] | None:
 
 
 class Worker:
-    """Makes the curve of one unit after the other, in any thread."""
+    """Makes the curve of one unit after the other, in any thread.
+
+    Parameters
+    ----------
+    job : Job
+        What is to be made.
+    tables : Tables
+        The units' tables.
+    passes : int
+        How often the data were read for them.
+    settings : dict
+        Takes what all curves share, from the first to be made.
+    last : bool
+        Whether there is no other round with finer bins.
+    sharing : int
+        Units that would share the memory of another round.
+    """
 
     def __init__(
-        self, job: Job, tables: Tables, passes: int, settings: dict[str, Any], last: bool
-    ) -> None:
+        self, job: Job, tables: Tables, passes: int, settings: dict[str, Any], last: bool,
+        sharing: int = 1,
+    ) -> None:  # fmt: skip
         self.job = job
+        self.sharing = sharing
         self.tables = tables
         self.passes = passes
         self.last = last
@@ -512,7 +556,9 @@ class Worker:
         low, high = table.extent.tolist()
         wanted = ahead * shape.bins_per_bandwidth * (high - low) / bandwidth * 1.05
         bins = 1 << max(0, math.ceil(math.log2(max(wanted, 1.0))))
-        bins = min(bins, _most_bins(plan.folds, table.slots, 1))
+        room = _room(plan.folds, table.slots)
+        most = max(1, min(room, _MOST_PARTS * room // self.sharing))
+        bins = min(bins, 1 << int(math.log2(most)))
         if (high - low) / bins > 0.8 * plan.width:
             return None
         reference, pilot = plan.reference, plan.pilot
@@ -525,16 +571,29 @@ class Worker:
         )  # fmt: skip
 
 
-def _most_bins(folds: int, slots: int, units: int) -> int:
-    """Return how many bins each of some units may have in a second pass."""
-    # Half for the tables, half for the tasks at work.
-    return 1 << max(0, int(math.log2(MEMORY_CAP_BYTES / (2 * 8 * slots * folds * units))))
+def _room(folds: int, slots: int) -> int:
+    """Return how many bins all units of one pass may have together."""
+    # Half of the memory for the tables, half for the tasks at work.
+    return MEMORY_CAP_BYTES // (2 * 8 * slots * folds)
+
+
+def in_parts(finer: dict[Key, Plan], slots: int) -> list[dict[Key, Plan]]:
+    """Deal units that ask for finer bins to passes whose tables fit into memory."""
+    parts: list[dict[Key, Plan]] = []
+    bins = 0
+    for key, plan in finer.items():
+        if not parts or bins + plan.bins > _room(plan.folds, slots):
+            parts.append({})
+            bins = 0
+        parts[-1][key] = plan
+        bins += plan.bins
+    return parts
 
 
 def within_memory(finer: dict[Key, Plan], slots: int) -> dict[Key, Plan]:
     """Cut the bins of the finest plans until all of them fit."""
     bins = {key: plan.bins for key, plan in finer.items()}
-    room = _most_bins(next(iter(finer.values())).folds, slots, 1)
+    room = _room(next(iter(finer.values())).folds, slots)
     while sum(bins.values()) > room:
         most = max(bins.values())
         bins = {key: one // 2 if one == most else one for key, one in bins.items()}

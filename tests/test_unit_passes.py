@@ -13,6 +13,7 @@ from fastsmooth import (
     make_fleet,
     score_rows,
 )
+from fastsmooth.fleetwords import fleet_lines
 from fastsmooth.summary import curve_lines
 from tests.conftest import write_parquet
 
@@ -52,6 +53,9 @@ def test_each_unit_is_weighed_by_its_own_curve():
         assert ignored <= facts["rows_ignored"] <= ignored + 5
         assert facts["rows_judged"] == (data["plant"] == plant).sum()
         assert any(line.startswith("robust") for line in curve_lines(curve))
+    line = next(one for one in fleet_lines(made) if one.startswith("robust"))
+    assert f"{sum(one[2] for one in made.trace['robust']):,} of them not at all" in line
+    assert "most in brezo" in line
     assert made.trace["engine"]["passes"] == 1 + max(
         curve.trace["robust"]["rounds"] for curve in made.curves.values()
     )
