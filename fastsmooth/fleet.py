@@ -400,6 +400,18 @@ class Fleet:
         spare_data([record["path"] for record in self.trace["files"]], path, "--out")
         write_fleet(self, path)
 
+    def page(self, path: Any) -> None:
+        """Write all curves as one HTML file: a table of units, and a picture of each.
+
+        Raises
+        ------
+        WriteError
+            The file cannot be written; nothing is left behind.
+        """
+        from fastsmooth.report.page import write_page
+
+        write_page(self, path)
+
 
 def _value_columns(trace: dict[str, Any]) -> list[str]:
     """Names of the columns of numbers: a curve's values, then its limits."""

@@ -379,6 +379,22 @@ def test_one_outlier_does_not_widen_the_picture():
     assert low > plain[0] - 0.2 * (plain[1] - plain[0])
 
 
+@pytest.mark.parametrize("share", [0.01, 0.1, 0.3])
+@pytest.mark.parametrize("edge", [False, True])
+def test_the_line_is_seen_wherever_a_code_for_missing_has_pulled_it(share, edge):
+    """A mean of readings and of -9999 lies where no row does, and may be all edge."""
+    plain = CASES["plain"]()
+    estimate, lower, upper = (
+        (1.0 - share) * one - share * 9999.0 for one in (plain.estimate, plain.lower, plain.upper)
+    )
+    status = np.where(plain.status == OK, EDGE, plain.status) if edge else plain.status
+    curve = replace(plain, estimate=estimate, lower=lower, upper=upper, status=status)
+    low, high = limits(curve)
+    line, band = estimate[np.isfinite(estimate)], np.stack((lower, upper))[:, plain.status == OK]
+    assert low < min(line.min(), band.min())
+    assert high > max(line.max(), band.max())
+
+
 @pytest.mark.parametrize("spread", [0.5, 20.0])
 def test_code_for_missing_does_not_widen_the_picture(spread):
     curve = CASES["plain"]()
@@ -455,8 +471,8 @@ def test_limits_are_finite_whatever_the_curve(values, codes):
     )  # fmt: skip
     low, high = limits(curve)
     assert np.isfinite([low, high]).all()
-    firm = estimate[status == OK]
-    assert not firm.size or (low <= firm.min() and firm.max() <= high)
+    line = estimate[status != OUTSIDE]
+    assert not line.size or (low <= line.min() and line.max() <= high)
 
 
 # -- the lower panel

@@ -43,8 +43,22 @@ _FAR_AWAY = 1e6
 
 
 @dataclass(frozen=True)
-class _Path:
-    """One estimator's criterion, ready to draw: widths on the plan's scale."""
+class CriterionPath:
+    """One estimator's criterion, ready to draw: widths on the plan's scale.
+
+    Attributes
+    ----------
+    trail : Trail
+        What the search found.
+    widths, values : (k,) float64
+        The criterion over the width; NaN where undefined.
+    best, least : float
+        The chosen width, and the criterion there; NaN if it is defined nowhere.
+    flat_zone : (2,) float64
+        Ends of the flat zone.
+    used : bool
+        Whether the curve was made by this estimator.
+    """
 
     trail: Trail
     widths: Floats
@@ -56,33 +70,37 @@ class _Path:
 
     @property
     def colour(self) -> str:
+        """What it is drawn in."""
         return CURVE if self.used else OTHER
 
 
-def _paths(curve: Curve) -> list[_Path]:
-    """The used estimator last, so that it is drawn on top."""
+def criterion_paths(curve: Curve) -> list[CriterionPath]:
+    """Return one path per estimator, the used one last, so that it is drawn on top."""
     made = []
     for name, trail in curve.search.trails.items():
         values = trail.values(curve.search.criterion)
-        widths = _on_scale(curve, trail.bandwidths)
-        best = float(_on_scale(curve, np.array([trail.bandwidth]))[0])
+        widths = on_scale(curve, trail.bandwidths)
+        best = float(on_scale(curve, np.array([trail.bandwidth]))[0])
         known = np.isfinite(values)
-        flat = _on_scale(curve, np.array(trail.flat_zone))
+        flat = on_scale(curve, np.array(trail.flat_zone))
         least = np.nan
         if known.any():
             # On the drawn line, so that the marker sits there; between grid points it is a hair
             # above the refined minimum.
             least = float(np.interp(np.log(best), np.log(widths[known]), values[known]))
         used = name == curve.settings["estimator"]
-        made.append(_Path(trail, widths, np.where(known, values, np.nan), best, flat, least, used))
+        made.append(
+            CriterionPath(trail, widths, np.where(known, values, np.nan), best, flat, least, used)
+        )
     return sorted(made, key=lambda path: path.used)
 
 
-def _on_scale(curve: Curve, widths: Floats) -> Floats:
+def on_scale(curve: Curve, widths: Floats) -> Floats:
+    """Return widths on the plan's scale: logarithms of factors on a log scale."""
     return np.log(widths) if curve.scale == "log" else widths
 
 
-def valley_ends(paths: Iterable[_Path]) -> tuple[float, float]:
+def valley_ends(paths: Iterable[CriterionPath]) -> tuple[float, float]:
     """Return the ends of the criterion's axis: the used estimator's valley fills it.
 
     A criterion may rise by decades towards narrow or wide bandwidths; showing all of that would
@@ -113,6 +131,23 @@ def valley_ends(paths: Iterable[_Path]) -> tuple[float, float]:
     return bottom, top
 
 
+def panel_ends(paths: Iterable[CriterionPath]) -> tuple[float, float]:
+    """Return the valley's ends with room for markers below, and for their labels above."""
+    bottom, top = valley_ends(paths)
+    return bottom - 0.08 * (top - bottom), top + 0.12 * (top - bottom)
+
+
+def given_width(curve: Curve, paths: list[CriterionPath]) -> float | None:
+    """Return the caller's own width on the plan's scale; None if there is none to be drawn."""
+    if not curve.width_given:
+        return None
+    given = float(on_scale(curve, np.array([curve.bandwidth]))[0])
+    low, high = width_ends(paths, None)
+    if paths and not low / _FAR_AWAY < given < high * _FAR_AWAY:
+        return None  # showing it would make a point of all that was searched
+    return given
+
+
 def draw_criteria(panel: Axes, lanes: Axes, place: Box, curve: Curve, ruler: Ruler) -> Ticks:
     """Draw the criterion curves, their minima and flat zones; return the ticks of y.
 
@@ -127,17 +162,10 @@ def draw_criteria(panel: Axes, lanes: Axes, place: Box, curve: Curve, ruler: Rul
     ruler : Ruler
         Measures labels.
     """
-    paths = _paths(curve)
-    given = None
-    if curve.width_given:
-        given = float(_on_scale(curve, np.array([curve.bandwidth]))[0])
-        low, high = _width_ends(paths, None)
-        if paths and not low / _FAR_AWAY < given < high * _FAR_AWAY:
-            given = None  # showing it would make a point of all that was searched
-    low, high = _width_ends(paths, given)
-    bottom, top = valley_ends(paths)
-    # Room for markers below, and for their labels above.
-    bottom, top = bottom - 0.08 * (top - bottom), top + 0.12 * (top - bottom)
+    paths = criterion_paths(curve)
+    given = given_width(curve, paths)
+    low, high = width_ends(paths, given)
+    bottom, top = panel_ends(paths)
     for axes in (panel, lanes):
         axes.set_xscale("log")
         axes.set_xlim(low, high)
@@ -199,7 +227,8 @@ class _Inches:
         return dense(np.column_stack(([self.across(width) for width in widths.tolist()], cut)))
 
 
-def _width_ends(paths: list[_Path], given: float | None) -> tuple[float, float]:
+def width_ends(paths: list[CriterionPath], given: float | None) -> tuple[float, float]:
+    """Return the ends of the width axis: all that was searched, and the given width."""
     widths = [path.widths for path in paths]
     if given is not None:
         widths.append(np.array([given]))
@@ -212,7 +241,7 @@ def _width_ends(paths: list[_Path], given: float | None) -> tuple[float, float]:
 def _write_labels(
     panel: Axes,
     curve: Curve,
-    paths: list[_Path],
+    paths: list[CriterionPath],
     given: float | None,
     scale: _Inches,
     ruler: Ruler,
@@ -236,7 +265,7 @@ def _write_labels(
         taken.append(label.box(spot))
     texts, labels = [], []
     for path, (x, y) in zip(paths, markers, strict=True):
-        text = _best_text(curve, path)
+        text = best_text(curve, path)
         inside = box.bottom <= y <= box.top
         if np.isfinite(y) and not inside:
             text += f" ({'above' if y > box.top else 'below'} this panel)"
@@ -261,7 +290,7 @@ def _write_labels(
             ))  # fmt: skip
 
 
-def _weight(path: _Path) -> str:
+def _weight(path: CriterionPath) -> str:
     return "bold" if path.used else "normal"
 
 
@@ -273,7 +302,8 @@ def _put(panel: Axes, text: str, colour: str, weight: str, spot: Spot) -> None:
     )  # fmt: skip
 
 
-def _best_text(curve: Curve, path: _Path) -> str:
+def best_text(curve: Curve, path: CriterionPath) -> str:
+    """Write an estimator with its best width."""
     name = path.trail.estimator
     if not np.isfinite(path.least):
         return f"{name}: undefined at every width"
@@ -286,7 +316,7 @@ def _best_text(curve: Curve, path: _Path) -> str:
 
 
 def _draw_lanes(
-    lanes: Axes, curve: Curve, paths: list[_Path], scale: _Inches, ruler: Ruler
+    lanes: Axes, curve: Curve, paths: list[CriterionPath], scale: _Inches, ruler: Ruler
 ) -> None:
     """Draw one bar per estimator over its flat zone, the words in it or beside it."""
     lanes.set_ylim(-0.5, max(len(paths), 1) - 0.5)
@@ -301,7 +331,7 @@ def _draw_lanes(
             [low / hair, high * hair], lane - 0.34, lane + 0.34, linewidth=0.0,
             color=path.colour if path.used else OTHER_PALE, gid=f"flat zone {path.trail.estimator}",
         )  # fmt: skip
-        text = _flat_text(curve, path)
+        text = flat_text(curve, path)
         width = ruler.width(text, SMALL_PT)
         start, stop = scale.across(low), scale.across(high)
         x, align, colour = stop + 0.08, "left", path.colour
@@ -317,7 +347,8 @@ def _draw_lanes(
         )  # fmt: skip
 
 
-def _flat_text(curve: Curve, path: _Path) -> str:
+def flat_text(curve: Curve, path: CriterionPath) -> str:
+    """Write an estimator with its flat zone."""
     low, high = path.trail.flat_zone
     name = path.trail.estimator
     if path.trail.is_flat:

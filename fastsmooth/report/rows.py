@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.patheffects import withStroke
 from numpy.typing import NDArray
 
-from fastsmooth.curve import OK, OUTSIDE, STATUSES, Curve, has_own_points
+from fastsmooth.curve import EDGE, OK, OUTSIDE, STATUSES, Curve, has_own_points
 from fastsmooth.report.labels import Box, Ruler
 from fastsmooth.report.look import (  # fmt: skip
     BAND,
@@ -77,8 +77,11 @@ def x_ends(curve: Curve) -> tuple[float, float]:
 def y_ends(curve: Curve) -> tuple[float, float]:
     """Return the ends of the y axis: curve, band and the bulk of the rows, no outlier."""
     columns = np.stack((curve.estimate, curve.lower, curve.upper))
-    firm = columns[:, curve.status == OK]
-    values = [firm[np.isfinite(firm)], _bulk(curve)]
+    # Where windows are wider than the data, edges are all there is.
+    firm = columns[:, curve.status == (OK if (curve.status == OK).any() else EDGE)]
+    # The line is always seen, even where a code for missing has pulled it away from the rows.
+    line = curve.estimate[np.isfinite(curve.estimate)]
+    values = [line, firm[np.isfinite(firm)], _bulk(curve)]
     low, high = _span(np.concatenate(values), columns)
     reach = _REACH * (high - low)
     # A band that opens up where rows are few is cut rather than flattening all else.
@@ -160,7 +163,7 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
         if has_own_points(curve):
             break  # points of the caller's own: nothing is known of what lies between
         name = STATUSES[stretch.status]
-        start, stop = _joined(curve.status, stretch)
+        start, stop = joined(curve.status, stretch)
         panel.plot(
             x[start:stop], curve.estimate[start:stop], color=CURVE, linestyle=STYLES[name],
             linewidth=2.2, dash_capstyle="butt", solid_capstyle="round", path_effects=halo,
@@ -179,16 +182,23 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
     return ticks
 
 
-def _draw_cells(panel: Axes, curve: Curve, shown: Shown) -> None:
+def cell_shades(curve: Curve) -> Floats | None:
+    """Return how dark each cell is, (k, m) from 0 for none; None where cells say nothing."""
     sampled = curve.density.sampled
     seen = sampled[sampled > 0.0]
     if not seen.size or cells_are_coarse(curve):
-        return
+        return None
     # Square roots let both crowded and rare cells show.
-    shade = np.sqrt(np.minimum(sampled, np.quantile(seen, 0.99)))
+    return np.sqrt(np.minimum(sampled, np.quantile(seen, 0.99)))
+
+
+def _draw_cells(panel: Axes, curve: Curve, shown: Shown) -> None:
+    shade = cell_shades(curve)
+    if shade is None:
+        return
     panel.pcolormesh(
         shown.plotted(curve.density.x_edges), curve.density.y_edges,
-        np.ma.masked_where(sampled <= 0.0, shade).T, cmap=CELLS, vmin=0.0,
+        np.ma.masked_where(shade <= 0.0, shade).T, cmap=CELLS, vmin=0.0,
         rasterized=True, zorder=1, gid="cells",
     )  # fmt: skip
 
@@ -208,8 +218,8 @@ def _draw_band(panel: Axes, curve: Curve, x: Floats) -> None:
     )  # fmt: skip
 
 
-def _joined(status: NDArray[np.int64], stretch: Stretch) -> tuple[int, int]:
-    """The stretch and the gap to its neighbours, drawn in the style of the weaker side."""
+def joined(status: NDArray[np.int64], stretch: Stretch) -> tuple[int, int]:
+    """Return a stretch with the gaps to its neighbours, drawn in the style of the weaker side."""
     start, stop = stretch.start, stretch.stop
     if start > 0 and status[start - 1] != OUTSIDE and stretch.status != OK:
         start -= 1
@@ -231,19 +241,11 @@ def draw_ribbon(ribbon: Axes, place: Box, curve: Curve, shown: Shown, ruler: Rul
     if curve.scale == "log":
         ribbon.set_xscale("log")
     ribbon.set_xlim(*shown.plotted(ends))
-    found = [one for one in stretches(curve.status) if one.status != OK]
     transform = np.log if curve.scale == "log" else np.asarray
     low, high = transform(ends)
-    middles = 0.5 * (curve.x[1:] + curve.x[:-1])
     pieces = []
-    for stretch in found:
-        left = float(middles[stretch.start - 1]) if stretch.start else float(ends[0])
-        right = float(middles[stretch.stop - 1]) if stretch.stop < curve.x.size else float(ends[1])
-        left, right = max(left, float(ends[0])), min(right, float(ends[1]))
-        if not left < right:
-            continue
-        name = STATUSES[stretch.status]
-        if stretch.status != OUTSIDE:
+    for name, left, right in weak_stretches(curve):
+        if name != STATUSES[OUTSIDE]:
             ribbon.plot(
                 shown.plotted(np.array([left, right])), [0.12, 0.12], color=MUTED, linewidth=1.4,
                 linestyle=STYLES[name], gid=f"ribbon {name}", dash_capstyle="butt",
@@ -251,6 +253,20 @@ def draw_ribbon(ribbon: Axes, place: Box, curve: Curve, shown: Shown, ruler: Rul
         share = (transform(np.array([left, right])) - low) / (high - low)
         pieces.append((name, *(place.left + share * (place.right - place.left))))
     _name_pieces(ribbon, place, pieces, ruler)
+
+
+def weak_stretches(curve: Curve) -> list[tuple[str, float, float]]:
+    """Return status and ends, in axis floats, of the stretches that are not fully supported."""
+    low, high = x_ends(curve)
+    middles = 0.5 * (curve.x[1:] + curve.x[:-1])
+    found = []
+    for stretch in stretches(curve.status):
+        left = float(middles[stretch.start - 1]) if stretch.start else low
+        right = float(middles[stretch.stop - 1]) if stretch.stop < curve.x.size else high
+        left, right = max(left, low), min(right, high)
+        if stretch.status != OK and left < right:
+            found.append((STATUSES[stretch.status], left, right))
+    return found
 
 
 def _name_pieces(
@@ -280,26 +296,46 @@ def _name_pieces(
 def draw_counts(strip: Axes, curve: Curve, shown: Shown) -> str:
     """Draw the exact number of rows of each stretch; return what the heights are."""
     rows = curve.density.rows
-    seen = rows[rows > 0.0]
-    top = float(seen.max()) if seen.size else 1.0
-    log = bool(seen.size) and top >= _DECADES_FOR_LOG * float(np.quantile(seen, 0.05))
-    floor = 0.0
+    floor, ceiling, log, ticks = count_heights(curve)
     if log:
         strip.set_yscale("log")
-        floor = 0.7 * float(seen.min())
     if curve.scale == "log":
         strip.set_xscale("log")
     strip.stairs(
         np.where(rows > 0.0, rows, floor), shown.plotted(curve.density.x_edges), baseline=floor,
         fill=True, color=ROWS, linewidth=0.0, gid="rows",
     )  # fmt: skip
-    strip.set_ylim(floor, top * (1.3 if log else 1.04))
-    places = [top] if not log else _decades(float(seen.min()), top)
-    set_ticks(strip.yaxis, Ticks(places, [short_count(place) for place in places], ""))
+    strip.set_ylim(floor, ceiling)
+    set_ticks(strip.yaxis, ticks)
     strip.tick_params(axis="y", length=0.0, labelsize=SMALL_PT, labelcolor=MUTED)
     strip.set_xlim(*shown.plotted(np.array(x_ends(curve))))
     set_ticks(strip.xaxis, shown.ticks)
     strip.spines["left"].set_visible(False)
+    return heights_text(log)
+
+
+class Heights(NamedTuple):
+    """How the numbers of rows are drawn: ends of their axis, whether logarithmic, its ticks."""
+
+    floor: float
+    ceiling: float
+    log: bool
+    ticks: Ticks
+
+
+def count_heights(curve: Curve) -> Heights:
+    """Decide how the number of rows of each stretch is drawn."""
+    seen = curve.density.rows[curve.density.rows > 0.0]
+    top = float(seen.max()) if seen.size else 1.0
+    log = bool(seen.size) and top >= _DECADES_FOR_LOG * float(np.quantile(seen, 0.05))
+    floor = 0.7 * float(seen.min()) if log else 0.0
+    places = _decades(float(seen.min()), top) if log else [top]
+    ticks = Ticks(places, [short_count(place) for place in places], "")
+    return Heights(floor, top * (1.3 if log else 1.04), log, ticks)
+
+
+def heights_text(log: bool) -> str:
+    """Return what the heights of the strip are."""
     return "rows per stretch, logarithmic height" if log else "rows per stretch"
 
 

@@ -26,9 +26,7 @@ def width_text(curve: Curve, width: float) -> str:
     """Write a bandwidth with the unit of x, where it is a plain number."""
     text = curve.width_label(width)
     unit = curve.settings["x_unit"]
-    plain = (
-        curve.scale == "linear" and curve.axis.kind == "number" and not curve.by_neighbours
-    )
+    plain = curve.scale == "linear" and curve.axis.kind == "number" and not curve.by_neighbours
     return f"{text} {unit}" if plain and unit else text
 
 
