@@ -10,6 +10,14 @@ from fastsmooth.demo import BLOCK, WHERE
 README = Path(__file__).parent.parent.joinpath("README.md").read_text(encoding="utf-8")
 
 
+# First words and last words of what the commands of a night print.
+NIGHT = (
+    ("power_kw against wet_bulb_c, by plant", "blocks share one fold."),
+    ("power_kw against wet_bulb_c, held against curves of 6", "wrote      flagged"),
+    ("power_kw against wet_bulb_c: now less base\nunits", "one block only."),
+)
+
+
 def shown(first_line: str, last_line: str) -> list[str]:
     start = README.index(first_line)
     return README[start : README.index(last_line, start) + len(last_line)].split()
@@ -36,6 +44,9 @@ def test_the_tour_is_what_the_demo_prints(tmp_path, capsys):
     wanted = shown("power_kw against wet_bulb_c\nrows", "thin\n```")[:-1]
     told = capsys.readouterr().out
     assert_alike(wanted, from_words(told, "power_kw against wet_bulb_c", len(wanted)))
+    for first, last in NIGHT:
+        wanted = shown(first, last)
+        assert_alike(wanted, from_words(told.replace(f"{tmp_path}/", ""), first, len(wanted)))
     data = str(tmp_path / "data")
     main(["curve", data, "--x", "wet_bulb_c", "--y", "power_kw", "--where", WHERE])
     wanted = shown("caution    Residuals", "--block logged_at:day.")
