@@ -181,6 +181,32 @@ def is_text(data_type: pa.DataType) -> bool:
     )
 
 
+def kind_of(data_type: pa.DataType) -> str:
+    """Return the kind of a plain type.
+
+    Parameters
+    ----------
+    data_type : pyarrow.DataType
+        A type as `plain_type` returns it.
+
+    Returns
+    -------
+    str
+        ``number``, ``boolean``, ``text``, ``timestamp``, ``date``, ``duration`` or ``other``.
+    """
+    if pt.is_boolean(data_type):
+        return "boolean"
+    if is_number(data_type):
+        return "number"
+    if is_text(data_type):
+        return "text"
+    if pt.is_timestamp(data_type):
+        return "timestamp"
+    if pt.is_date(data_type):
+        return "date"
+    return "duration" if pt.is_duration(data_type) else "other"
+
+
 def column_kind(role: Role, data_type: pa.DataType, place: str) -> str:
     """Tell what kind of numbers a column gives in its role, or refuse its type.
 
@@ -207,18 +233,15 @@ def column_kind(role: Role, data_type: pa.DataType, place: str) -> str:
     plain = plain_type(data_type)
     if pt.is_null(plain):
         return "empty"
-    if is_number(plain):
+    kind = kind_of(plain)
+    if kind in ("number", "boolean"):
         return "number"
     requirement = "name a column of numbers"
     if role.name == "x":
         requirement += ", times, dates or durations"
-        if pt.is_timestamp(plain):
-            return "timestamp"
-        if pt.is_date(plain):
-            return "date"
-        if pt.is_duration(plain):
-            return "duration"
-    if is_text(plain):
+        if kind in ("timestamp", "date", "duration"):
+            return kind
+    if kind == "text":
         found, remedy = "text", "cast the column to a number"
     elif pt.is_nested(plain):
         found, remedy = f"nested ({plain})", "write its parts as columns of their own"
@@ -343,8 +366,8 @@ def _integer_values(role: Role, array: pa.Array) -> Values:
         low, high = (pc.min_max(plain)[name].as_py() for name in ("min", "max"))
         raise InputError(
             role.argument,
-            f"hold integers of at most 2^53 ({largest}), which a float64 keeps exactly",
-            f"'{role.column}' has {high if high > largest else low}",
+            f"hold integers of at most 2^53 ({largest:,}), which a float64 keeps exactly",
+            f"'{role.column}' has {high if high > largest else low:,}",
             "subtract an offset from the column, or divide it, first",
         ) from error
 

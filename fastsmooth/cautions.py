@@ -8,13 +8,13 @@ from collections.abc import Iterator
 import numpy as np
 from numpy.typing import NDArray
 
-from fastsmooth.bands import Noise
+from fastsmooth.bands import FEWEST_DEGREES, Noise
 from fastsmooth.bintable import BinTable
 from fastsmooth.curve import FEWEST_FOLDS, OUTSIDE, THIN, Caution, Curve
 from fastsmooth.plan import Sample
 from fastsmooth.quoting import sql_name, where_option
+from fastsmooth.settings import Reading
 from fastsmooth.smoother import Fits
-from fastsmooth.source import Source
 
 Floats = NDArray[np.float64]
 
@@ -24,38 +24,84 @@ _STANDS_OUT = 0.2
 # At the narrowest width one row in a hundred may be alone by chance.
 # The narrowest width leaves up to one row in twenty without three others, by its definition.
 _MANY_ALONE = 0.03
+_MANY_THIN = 0.5
 _HEAVY_FOLD = 0.5
+# Fewer folds than this leave the standard errors of the criterion to chance.
+_FEWEST_FOLDS_FOR_ZONE = 8
+_UNEQUAL_FOLDS = 0.5
 _CORRELATION_WORTH_TELLING = 0.1
 _FAR_OUT_SD = 10.0
+# Sums of a store are not counted again.
+_FINER_STORE = "Make another store with more --bins."
 
 
-def about_rows(table: BinTable, source: Source) -> Iterator[Caution]:
-    """Yield cautions about refused rows and about folds."""
+def about_rows(table: BinTable) -> Iterator[Caution]:
+    """Yield cautions about refused rows."""
     tally = table.tally
     kept = tally.read - tally.filtered
     refused = {
         k: v for k, v in tally.refused.items() if k not in ("x below range", "x above range")
     }
     if kept and sum(refused.values()) > _MANY_REFUSED * kept:
-        counts = ", ".join(f"{rows} {reason}" for reason, rows in sorted(refused.items()))
+        counts = ", ".join(f"{rows:,} {reason}" for reason, rows in sorted(refused.items()))
         share = sum(refused.values()) / kept
         yield Caution(
             "many rows refused",
             f"{share:.0%} of the rows could not be used ({counts}). Find out why before you trust "
             f"what is left.",
         )
-    if table.plan.block is not None and len(table.blocks) < FEWEST_FOLDS:
+
+
+def fold_weights(table: BinTable) -> Floats:
+    """Return the weight of the rows of each fold that has any."""
+    weights = np.array([float(sums[:, 0].sum()) for sums in table.sums.values()])
+    return weights[weights > 0.0]
+
+
+def about_folds(made: Curve, table: BinTable) -> Iterator[Caution]:
+    """Yield cautions about the number of folds and their sizes."""
+    weights, block, blocks = fold_weights(table), table.plan.block, len(table.blocks)
+    folds = weights.size
+    so = []
+    if made.errors_by_fold and folds < FEWEST_FOLDS:
+        so.append("every point is thin")
+    if folds < _FEWEST_FOLDS_FOR_ZONE:
+        so.append("the flat zone rests on next to nothing")
+    if block is not None and blocks < FEWEST_FOLDS:
         yield Caution(
             "few blocks",
-            f"There are only {len(table.blocks)} blocks by {table.plan.block}: fewer than "
-            f"{FEWEST_FOLDS} say little about how much blocks differ, so every point is thin.",
+            f"There are only {blocks} blocks by {block}: fewer than {FEWEST_FOLDS} say little "
+            f"about how much blocks differ, so {' and '.join(so)}.",
         )
-    weights = np.array([float(sums[:, 0].sum()) for sums in table.sums.values()])
-    if weights.size > 1 and weights.max() > _HEAVY_FOLD * weights.sum():
+    elif so:
+        parts = "rows" if block is None else f"{blocks:,} blocks by {block}"
+        remedy = "Read more rows" if block is None else "Name a finer block"
+        if table.plan.folds < Reading().folds:
+            passes = made.trace["engine"]["passes"]
+            remedy = "Leave out --folds" if passes else "Make another store without --folds"
+        yield Caution(
+            "few folds",
+            f"The {parts} lie in only {folds} folds, so {' and '.join(so)}. {remedy}.",
+        )
+    largest, equal = weights.max() / weights.sum(), weights.sum() ** 2 / (weights**2).sum()
+    # One of two folds holds half of everything, and one of three may well do.
+    if largest > max(_HEAVY_FOLD, 2.0 / folds):
         yield Caution(
             "one fold dominates",
-            f"One of {weights.size} folds holds {weights.max() / weights.sum():.0%} of the weight, "
-            f"so the flat zone rests on few independent parts.",
+            f"One of {folds} folds holds {largest:.0%} of the weight, so the flat zone rests on "
+            f"few independent parts.",
+        )
+    elif block is not None and equal < _UNEQUAL_FOLDS * min(table.plan.folds, blocks):
+        numbered = all(isinstance(key, int) for key in table.blocks)
+        yield Caution(
+            "unequal folds",
+            f"The blocks by {block} fill {folds} folds so unevenly that these are worth "
+            f"{equal:.0f} equal ones, which is what width and band rest on. "
+            + (
+                "Name a block of more even size."
+                if numbered
+                else "Whole numbers or times as blocks are dealt more evenly than other values."
+            ),
         )
 
 
@@ -67,8 +113,11 @@ def about_search(made: Curve) -> Iterator[Caution]:
     label, word = made.width_label, made.width_word
     option = "--neighbours" if made.by_neighbours else "--bandwidth"
     low, high = trail.flat_zone
+    if made.few_rows_vote:
+        yield _few_rows_vote(made)
     if made.width_given:
-        if not low <= made.bandwidth <= high:
+        # A criterion that most rows take no part in cannot call the caller wrong.
+        if not (low <= made.bandwidth <= high or made.few_rows_vote):
             yield Caution(
                 "width outside the flat zone",
                 f"The given {word} {label(made.bandwidth)} lies outside the flat zone "
@@ -101,14 +150,31 @@ def about_search(made: Curve) -> Iterator[Caution]:
             f"Every {word} searched is within one standard error of the best: the data do not "
             "say how much to smooth.",
         )
-    if made.search.rows_alone > _MANY_ALONE * made.trace["rows"]["used"]:
-        by_fold = made.search.criterion == "leave-block-out"
-        of_others = " in other folds" if by_fold else ""
+    if made.search.rows_alone > _MANY_ALONE * made.rows_counted and not made.few_rows_vote:
+        of_others = " in other folds" if criterion == "leave-block-out" else ""
         yield Caution(
             "rows alone",
             f"{made.search.rows_alone:,.0f} rows have no neighbour{of_others} within the narrowest "
             f"width and took no part in the choice of the {word}.",
         )
+
+
+def _few_rows_vote(made: Curve) -> Caution:
+    voting = made.rows_counted - made.search.rows_alone
+    by_fold = made.search.criterion == "leave-block-out"
+    around = "rows of other folds on both sides" if by_fold else "others"
+    text = (
+        f"Only {voting:,.0f} of {made.rows_counted:,.0f} rows have {around} within the narrowest "
+        f"width, so the choice of the {made.width_word} and its flat zone rest on these few. "
+    )
+    option = "--neighbours" if made.by_neighbours else "--bandwidth"
+    if not by_fold:
+        return Caution("few rows vote", f"{text}Give {option}.")
+    return Caution(
+        "few rows vote",
+        f"{text}This is so where x runs along with the blocks, as time does with its days: they "
+        f"cannot choose it there, so give {option}.",
+    )
 
 
 def about_curve(made: Curve, sample: Sample, residuals: Floats) -> Iterator[Caution]:
@@ -121,16 +187,30 @@ def about_curve(made: Curve, sample: Sample, residuals: Floats) -> Iterator[Caut
         yield Caution(
             "coarse bins",
             f"The bandwidth spans only {engine['bins_per_bandwidth']:.1f} bins within the memory "
-            f"cap; the curve's binning error {told}. Narrow --range for finer bins.",
+            f"cap; the curve's binning error {told}. "
+            + ("Narrow --range for finer bins." if engine["passes"] else _FINER_STORE),
         )
-    unsupported = np.mean((made.status == THIN) | (made.status == OUTSIDE))
-    if unsupported > 0.5:
-        yield Caution(
-            "mostly thin",
-            f"{unsupported:.0%} of the points have too few rows; the curve says little there.",
-        )
+    yield from _about_support(made)
     yield from _about_correlation(made)
     yield from _about_spikes(made, sample, residuals)
+
+
+def _about_support(made: Curve) -> Iterator[Caution]:
+    """Tell why most points are thin or outside, if they are."""
+    thin, outside = made.status == THIN, made.status == OUTSIDE
+    if np.mean(thin | outside) <= _MANY_THIN:
+        return
+    # Every window of the nearest rows holds the same number; what is thin there for want of rows
+    # lies in a gap between them, where folds are not lacking.
+    few_rows = thin & ~(made.effective_rows >= made.settings["least_rows"])
+    few_folds = thin & ~few_rows & made.errors_by_fold
+    shares = {
+        "too few rows": np.mean((thin & ~few_folds) | outside),
+        f"rows enough, but of too few folds (fewer than {FEWEST_FOLDS}, or so unequal that their "
+        f"error has fewer than {FEWEST_DEGREES:g} degrees of freedom)": np.mean(few_folds),
+    }
+    told = [f"{share:.0%} of the points have {what}" for what, share in shares.items() if share]
+    yield Caution("mostly thin", f"{'; '.join(told)}. The curve says little there.")
 
 
 def standardised_residuals(
@@ -159,12 +239,19 @@ def _about_correlation(made: Curve) -> Iterator[Caution]:
     first = found["lag_one"]
     if first <= max(_CORRELATION_WORTH_TELLING, 3.0 / math.sqrt(found["pairs"])):
         return
+    remedy = "Give --block, as in --block logged_at:day"
+    if made.axis.kind in ("timestamp", "date"):
+        # Days of a curve over time are gaps that their neighbours must bridge.
+        remedy = (
+            "Give --bandwidth, and --block with times that last longer than that and are short "
+            "beside it"
+        )
     yield Caution(
         "neighbouring rows alike",
         f"Residuals of neighbouring rows are correlated ({first:.2f}; it takes "
-        f"{found['reach_rows']} rows to fade), so {made.trace['rows']['used']:,} rows are worth "
+        f"{found['reach_rows']:,} rows to fade), so {made.trace['rows']['used']:,} rows are worth "
         f"about {found['worth_rows']:,.0f} independent ones: {made.search.criterion} chooses too "
-        f"narrow a width and the band is too narrow. Give --block, as in --block logged_at:day.",
+        f"narrow a width and the band is too narrow. {remedy}.",
     )
 
 
@@ -185,7 +272,7 @@ def _about_spikes(made: Curve, sample: Sample, z: Floats) -> Iterator[Caution]:
         column = made.trace["settings"]["y"]
         yield Caution(
             "repeated far value",
-            f"{column} is {values[most]:g} in {counts[most]} of {sample.y.size} sampled rows, far "
-            f"from all others: is it a code for a missing reading? Leave such rows out with "
+            f"{column} is {values[most]:g} in {counts[most]:,} of {sample.y.size:,} sampled rows, "
+            f"far from all others: is it a code for a missing reading? Leave such rows out with "
             f"{where_option(f'{sql_name(column)} <> {values[most]:g}')}.",
         )

@@ -8,6 +8,7 @@ from contextlib import contextmanager
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.csv as csv
 import pyarrow.types as pt
 
@@ -20,6 +21,7 @@ from fastsmooth.readers import PartitionKeys, Reader, identify, rebatch, with_co
 BLOCK_BYTES = 1 << 20
 # Spellings of NaN are left out: they are read as NaN, like everywhere else.
 NULLS = ["", "NA", "N/A", "#N/A", "null", "NULL"]
+OFFSET, NO_OFFSET = r":\d\d.*[+-]\d\d(:?\d\d)?$", r"[+-]00(:?00)?$"
 BAD_VALUE = re.compile(r"CSV column #(\d+):(?: Row #(\d+):)? CSV conversion error to (.*?): (.*)")
 
 
@@ -80,6 +82,19 @@ class CsvReader(Reader):
                 for name in whole:
                     _check_whole(path, self._roles[name], batch.column(name))
                 yield with_constants(batch, columns, constants)
+
+    def shows_offset(self, column: str) -> bool:
+        """Look for an offset other than zero in the first megabyte of the first file."""
+        if column not in self._own[0].names:
+            return False
+        path = self.places[0]
+        with reading(path), _open(path, {column: pa.string()}) as stream:
+            texts = next(iter(stream)).column(0)
+        other = pc.and_(
+            pc.match_substring_regex(texts, OFFSET),
+            pc.invert(pc.match_substring_regex(texts, NO_OFFSET)),
+        )
+        return pc.any(other).as_py() is True
 
     @contextmanager
     def _naming(self, path: str, own: pa.Schema) -> Iterator[None]:
@@ -153,7 +168,7 @@ def _check_whole(path: str, role: Role, column: pa.Array) -> None:
     if np.any(np.abs(floats) >= LARGEST_EXACT_INTEGER):
         raise InputError(
             role.argument,
-            f"hold integers below 2^53 ({LARGEST_EXACT_INTEGER}), which a float64 keeps exactly",
+            f"hold integers below 2^53 ({LARGEST_EXACT_INTEGER:,}), which a float64 keeps exactly",
             f"'{role.column}' in '{path}' holds larger ones",
             "subtract an offset from the column, or divide it, first",
         )

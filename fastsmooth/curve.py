@@ -38,6 +38,8 @@ VALUES = (
 )
 # A window that meets fewer folds of blocks is thin, however many rows it holds.
 FEWEST_FOLDS = 12
+# Beyond this share of rows without a vote, the choice of the width says little about the others.
+_MOST_ROWS_ALONE = 0.5
 CURVE_KEY = b"fastsmooth.curve"
 FORMAT = 1
 
@@ -206,6 +208,22 @@ class Curve:
     def scale(self) -> str:
         """``linear`` or ``log``."""
         return str(self.trace["settings"]["scale"])
+
+    @property
+    def rows_counted(self) -> float:
+        """Rows that made the curve, each as often as its repeat count says."""
+        return float(self.density.rows.sum())
+
+    @property
+    def errors_by_fold(self) -> bool:
+        """Whether the band's standard errors come from leaving out folds."""
+        robust = self.trace.get("robust")
+        return self.settings["block"] is not None or bool(robust and robust["rounds"])
+
+    @property
+    def few_rows_vote(self) -> bool:
+        """Whether most rows took no part in the choice of the width, as `rows_alone` tells."""
+        return self.search.rows_alone > _MOST_ROWS_ALONE * self.rows_counted
 
     @property
     def by_neighbours(self) -> bool:
@@ -405,6 +423,18 @@ class Curve:
 
         self._spare_data(path, "--plot")
         draw(self, path)
+
+    def page(self, path: Any) -> None:
+        """Write the curve as one HTML file, where values can be read by pointing at them.
+
+        Raises
+        ------
+        WriteError
+            The file cannot be written; nothing is left behind.
+        """
+        from fastsmooth.report.page import write_page
+
+        write_page(self, path)
 
     def _spare_data(self, path: Any, argument: str) -> None:
         """Refuse to write over the data that the curve was made from."""

@@ -8,7 +8,10 @@ from typing import Any
 from fastsmooth.curve import CURVE_KEY, Curve
 from fastsmooth.files import find_files
 from fastsmooth.files_out import load_curve
+from fastsmooth.fleet import FLEET_KEY, Fleet
+from fastsmooth.fleetwords import fleet_facts, fleet_lines
 from fastsmooth.source import Columns, _open_files
+from fastsmooth.store.disk import is_store
 from fastsmooth.summary import curve_facts, curve_lines
 
 
@@ -23,7 +26,7 @@ def describe(path: str | os.PathLike[str]) -> dict[str, Any]:
     Returns
     -------
     dict
-        ``kind`` is ``curve`` or ``data``.
+        ``kind`` is ``curve``, ``fleet``, ``store`` or ``data``.
 
     Raises
     ------
@@ -31,12 +34,21 @@ def describe(path: str | os.PathLike[str]) -> dict[str, Any]:
         There is no such file, or it is neither.
     """
     name = os.fspath(path)
-    made = _curve_of(name)
-    if made is not None:
+    if is_store(name):
+        from fastsmooth.store.telling import store_facts
+
+        return store_facts(name)
+    made = result_in_file(name)
+    if isinstance(made, Curve):
         plan = {k: v for k, v in made.trace["plan"].items() if k != "pilot"}
         return {
             "kind": "curve", "path": name, "lines": curve_lines(made), **curve_facts(made),
             "files": made.trace["files"], "plan": plan, "versions": made.trace["versions"],
+        }  # fmt: skip
+    if isinstance(made, Fleet):
+        return {
+            "kind": "fleet", "path": name, "lines": fleet_lines(made), **fleet_facts(made),
+            "files": made.trace["files"], "versions": made.trace["versions"],
         }  # fmt: skip
     reader = _open_files(find_files(name), Columns("", ""))
     try:
@@ -59,8 +71,8 @@ def describe(path: str | os.PathLike[str]) -> dict[str, Any]:
         reader.close()
 
 
-def _curve_of(path: str) -> Curve | None:
-    """The curve in a file, or None if the file is no curve."""
+def result_in_file(path: str) -> Curve | Fleet | None:
+    """Return the curve or the curves that a file holds; None if it holds neither."""
     suffix = os.path.splitext(path)[1].lower()
     if not os.path.isfile(path):
         return None
@@ -78,19 +90,24 @@ def _curve_of(path: str) -> Curve | None:
                     metadata = pa.ipc.open_file(opened).schema.metadata
         except (pa.ArrowInvalid, OSError):
             return None  # the data reader says what is wrong with it
-        if CURVE_KEY in (metadata or {}):
+        if {CURVE_KEY, FLEET_KEY} & set(metadata or {}):
             return load_curve(path)
     return None
 
 
 def description_lines(told: dict[str, Any]) -> list[str]:
     """Return a description as lines for people."""
-    if told["kind"] == "curve":
+    if told["kind"] == "store":
+        from fastsmooth.store.telling import store_lines
+
+        return store_lines(told)
+    if told["kind"] in ("curve", "fleet"):
         lines = [*told["lines"], ""]
         settings = told["settings"]
         given = {k: v for k, v in settings.items() if v not in (None, "")}
-        lines.append("settings   " + ", ".join(f"{k} {v}" for k, v in given.items()))
-        lines.append("fit        " + told["fit_definitions"])
+        lines.append("settings   " + ", ".join(f"{k} {_plainly(v)}" for k, v in given.items()))
+        if "fit_definitions" in told:
+            lines.append("fit        " + told["fit_definitions"])
         versions = told["versions"]
         lines.append("versions   " + ", ".join(f"{k} {v}" for k, v in versions.items()))
         for record in told["files"]:
@@ -98,9 +115,15 @@ def description_lines(told: dict[str, Any]) -> list[str]:
             lines.append(f"file       {record['path']} ({record['size_bytes']:,} bytes{rows})")
         return lines
     rows = "unknown number of" if told["rows"] is None else f"{told['rows']:,}"
-    lines = [f"{rows} rows in {told['files']} file{'s' if told['files'] != 1 else ''}", ""]
+    lines = [f"{rows} rows in {told['files']:,} file{'s' if told['files'] != 1 else ''}", ""]
     width = max((len(column["name"]) for column in told["columns"]), default=0)
     for column in told["columns"]:
         unit = f"  [{column['unit']}]" if column["unit"] else ""
         lines.append(f"  {column['name']:<{width}}  {column['type']}{unit}")
     return lines
+
+
+def _plainly(value: object) -> str:
+    """A setting as people write it."""
+    whole = isinstance(value, int) and not isinstance(value, bool)
+    return f"{value:,}" if whole else str(value)

@@ -106,7 +106,7 @@ def gather_rows(
     if x.shape[0] != table.tally.used:
         raise ReadError(
             "DATA", "stay as it is while it is read",
-            f"{table.tally.used} rows could be used at first, {x.shape[0]} now",
+            f"{table.tally.used:,} rows could be used at first, {x.shape[0]:,} now",
             "run it again when nothing writes to it",
         )  # fmt: skip
     progress("sorting", 0, None)
@@ -366,10 +366,10 @@ def choose_engine(
     if not compact:
         return "binned", f"the {kernel} kernel has no end"
     if rows > AUTO_ROWS:
-        return "binned", f"more than {AUTO_ROWS} rows"
+        return "binned", f"more than {AUTO_ROWS:,} rows"
     if needed > memory_gigabytes:
         return "binned", f"--memory {memory_gigabytes:g}"
-    return "exact", f"at most {AUTO_ROWS} rows"
+    return "exact", f"at most {AUTO_ROWS:,} rows"
 
 
 def check_memory(argument: str, instead: str, table: BinTable, memory_gigabytes: float) -> None:
@@ -385,6 +385,6 @@ def check_memory(argument: str, instead: str, table: BinTable, memory_gigabytes:
     if needed > memory_gigabytes:
         raise InputError(
             argument, f"stay within --memory {memory_gigabytes:g} (gigabytes)",
-            f"{rows} rows need {needed:.3g}",
+            f"{rows:,} rows need {needed:.3g}",
             f"raise it to {needed * 1.05:.2g}, or take {instead}",
         )  # fmt: skip

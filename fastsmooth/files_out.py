@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import base64
 import contextlib
 import errno
 import fnmatch
@@ -13,6 +14,7 @@ import stat
 from collections.abc import Callable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any, BinaryIO
 
+from fastsmooth.addresses import as_address
 from fastsmooth.curve import CURVE_KEY, Curve
 from fastsmooth.errors import InputError, ReadError, WriteError
 from fastsmooth.files import file_format
@@ -21,8 +23,11 @@ from fastsmooth.near import find_near
 if TYPE_CHECKING:
     import pyarrow as pa
 
+    from fastsmooth.fleet import Fleet
+
 TABLE_SUFFIXES = (".parquet", ".arrow", ".csv", ".json")
 PICTURE_SUFFIXES = (".png", ".svg", ".pdf")
+PAGE_SUFFIXES = (".html",)
 # Schema metadata under these keys is a JSON object that belongs to the result.
 _OWN_KEYS = b"fastsmooth."
 _READ_BACK = (".parquet", ".arrow", ".json")
@@ -95,7 +100,10 @@ def keep_outside(path: str | os.PathLike[str], data: Sequence[str]) -> None:
 
 
 def write_atomically(
-    path: str | os.PathLike[str], writer: Callable[[BinaryIO], None], argument: str = "--out"
+    path: str | os.PathLike[str],
+    writer: Callable[[BinaryIO], None],
+    argument: str = "--out",
+    on_disk: bool = True,
 ) -> None:
     """Write a file whole or not at all.
 
@@ -111,6 +119,9 @@ def write_atomically(
         Writes the content into the open binary file that it is given.
     argument : str
         The option that named the path, for the refusal.
+    on_disk : bool
+        Whether to wait for the disk. Without, a file may be lost if the power fails soon after,
+        which is well for large ones that can be made again.
 
     Raises
     ------
@@ -131,11 +142,13 @@ def write_atomically(
         with os.fdopen(os.open(temporary, flags, former or 0o666), "wb") as stream:
             writer(stream)
             stream.flush()
-            os.fsync(stream.fileno())
+            if on_disk:
+                os.fsync(stream.fileno())
         if former is not None:
             os.chmod(temporary, former)
         os.replace(temporary, target)
-        _sync_folder(folder)
+        if on_disk:
+            _sync_folder(folder)
     except OSError as error:
         raise _refusal(error, name, argument) from error
     finally:
@@ -191,8 +204,32 @@ def write_curve(curve: Curve, path: str | os.PathLike[str]) -> None:
     write_table(curve.table(), path)
 
 
-def load_curve(path: str | os.PathLike[str]) -> Curve:
-    """Read a curve that `write_curve` or `Curve.save` wrote, equal to the last bit.
+def write_fleet(fleet: Fleet, path: str | os.PathLike[str]) -> None:
+    """Write curves of many units; the suffix decides: .parquet, .arrow, .csv or .json.
+
+    Parameters
+    ----------
+    fleet : Fleet
+        The curves.
+    path : path
+        Where the file shall be.
+
+    Raises
+    ------
+    WriteError
+        The file cannot be written; nothing is left behind.
+    """
+    from fastsmooth.fleet import FACTS
+
+    suffix = check_writable(path, "--out", TABLE_SUFFIXES)
+    table = fleet.table()
+    if suffix == ".csv":
+        table = table.drop_columns([FACTS])
+    write_table(table, path)
+
+
+def load_curve(path: str | os.PathLike[str]) -> Curve | Fleet:
+    """Read what `Curve.save` or `Fleet.save` wrote, equal to the last bit.
 
     Parameters
     ----------
@@ -201,8 +238,8 @@ def load_curve(path: str | os.PathLike[str]) -> Curve:
 
     Returns
     -------
-    Curve
-        The curve.
+    Curve or Fleet
+        The curve, or the curves of many units.
 
     Raises
     ------
@@ -221,14 +258,23 @@ def load_curve(path: str | os.PathLike[str]) -> Curve:
             received = f"'{name}' holds the table alone"
             remedy = "save the curve as .parquet too and name that file"
         raise InputError("CURVE", f"end in {_either(_READ_BACK)}", received, remedy)
+    if as_address(name) is not None:
+        raise InputError(
+            "CURVE", "lie on this computer", f"'{name}' is an address", "copy it here first"
+        )
     if not os.path.isfile(name):
         what = "is a folder" if os.path.isdir(name) else "does not exist"
         remedy = _near_files(name) or "check the path"
         raise InputError("CURVE", "name a file", f"'{name}' {what}", remedy)
     reader = {".parquet": _read_parquet, ".arrow": _read_arrow, ".json": _read_json}[suffix]
+    from fastsmooth.fleet import FLEET_KEY, Fleet
+
     # Schema metadata outlive a selection of columns or rows, so a trace alone proves nothing.
     try:
-        curve = Curve.from_table(reader(name), f"'{name}'")
+        table = reader(name)
+        if FLEET_KEY in (table.schema.metadata or {}):
+            return Fleet.from_table(table, f"'{name}'")
+        curve = Curve.from_table(table, f"'{name}'")
     except KeyError as error:
         raise _altered(name, f"lacks {error}") from None
     except (OSError, ValueError, pa.ArrowException) as error:
@@ -237,7 +283,7 @@ def load_curve(path: str | os.PathLike[str]) -> Curve:
             "make the curve again",
         ) from error  # fmt: skip
     if curve.x.shape != curve.estimate.shape:
-        raise _altered(name, f"holds {curve.estimate.size} of {curve.x.size} points")
+        raise _altered(name, f"holds {curve.estimate.size:,} of {curve.x.size:,} points")
     return curve
 
 
@@ -250,6 +296,11 @@ def _altered(name: str, what: str) -> InputError:
 
 def _check_place(target: str, name: str, argument: str) -> None:
     """Refuse a place that cannot take a file; `name` is the path as the caller wrote it."""
+    if as_address(name) is not None:
+        raise WriteError(
+            argument, "name a file on this computer", f"'{name}' is an address",
+            "write it here and copy it there",
+        )  # fmt: skip
     folder = os.path.dirname(target)
     shown = os.path.dirname(name) or folder
     if os.path.isdir(target):
@@ -306,7 +357,7 @@ def _sync_folder(folder: str) -> None:
 
 
 def _either(names: Sequence[str]) -> str:
-    return f"{', '.join(names[:-1])} or {names[-1]}"
+    return " or ".join([", ".join(names[:-1]), names[-1]] if len(names) > 1 else names)
 
 
 def _near_folders(folder: str) -> str:
@@ -363,9 +414,11 @@ def _write_json(table: pa.Table, stream: BinaryIO) -> None:
             plain.update(json.loads(value))
     columns = {}
     for name, column in zip(table.column_names, _plain_durations(table).columns, strict=True):
-        if pa.types.is_temporal(column.type):
+        if pa.types.is_temporal(column.type) or pa.types.is_decimal(column.type):
             column = column.cast(pa.string())
         values = column.to_pylist()
+        if _is_binary(column.type):
+            values = [None if one is None else base64.b64encode(one).decode() for one in values]
         if pa.types.is_floating(column.type):
             values = [one if one is not None and math.isfinite(one) else None for one in values]
         columns[name] = values
@@ -407,6 +460,8 @@ def _read_json(name: str) -> pa.Table:
 
     with open(name, encoding="utf-8") as file:
         told = json.load(file)
+    if isinstance(told, Mapping) and {"format", "columns", "by", "units"} <= told.keys():
+        return _fleet_table(dict(told))
     if not isinstance(told, Mapping) or not {"format", "columns", "x_floats"} <= told.keys():
         return pa.table({})  # carries no trace; `Curve.from_table` says so
     columns = {
@@ -416,3 +471,42 @@ def _read_json(name: str) -> pa.Table:
     }
     rest = {key: value for key, value in told.items() if key != "columns"}
     return pa.table(columns).replace_schema_metadata({CURVE_KEY: json.dumps(rest).encode()})
+
+
+def _fleet_table(told: dict[str, Any]) -> pa.Table:
+    import pyarrow as pa
+
+    from fastsmooth.fleet import FACTS, FLEET_KEY, arrow_type, column_of
+
+    plain = told.pop("columns")
+    del plain["x"]  # the facts hold it as floats
+    kinds = {"status": pa.string(), FACTS: pa.large_binary()}
+    for name, kind in zip(told["by"], told["trace"]["by_types"], strict=True):
+        kinds[column_of(name)] = arrow_type(kind)
+    columns = {
+        name: _from_plain(values, kinds.get(name, pa.float64())) for name, values in plain.items()
+    }
+    metadata = {FLEET_KEY: json.dumps(told).encode()}
+    return pa.table(columns).replace_schema_metadata(metadata)
+
+
+def _from_plain(values: list[Any], kind: pa.DataType) -> pa.Array:
+    """Undo what `_write_json` does to a column."""
+    import pyarrow as pa
+
+    from fastsmooth.axis import TICKS_PER_SECOND
+
+    if _is_binary(kind):
+        return pa.array([None if one is None else base64.b64decode(one) for one in values], kind)
+    if pa.types.is_duration(kind):
+        ticks = TICKS_PER_SECOND[kind.unit]
+        return pa.array([None if one is None else round(one * ticks) for one in values], kind)
+    if pa.types.is_temporal(kind) or pa.types.is_decimal(kind):
+        return pa.array(values, pa.string()).cast(kind)
+    return pa.array(values, kind)
+
+
+def _is_binary(kind: pa.DataType) -> bool:
+    import pyarrow.types as pt
+
+    return bool(pt.is_binary(kind) or pt.is_large_binary(kind) or pt.is_fixed_size_binary(kind))

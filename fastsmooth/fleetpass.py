@@ -25,7 +25,7 @@ Floats = NDArray[np.float64]
 # Tables of all units, folds and the tasks at work may take this much together.
 MEMORY_CAP_BYTES = 1 << 30
 # While the bins of all units in one fold fit the processor's cache, a row costs half.
-CACHE_BYTES = 8 << 20
+CACHE_BYTES = 4 << 20
 _WORKING_BINS = 2048
 _FEWEST_BINS = 32
 # With fewer bins than this, half the folds are worth more.
@@ -45,8 +45,10 @@ _MARGIN = 1.25
 _SAMPLE_TASKS = 16
 _SAMPLE_ROWS = 4096
 _ROWS_FOR_PILOT = 64
+# Where one task holds this share of all units, every task does.
+_SHARE_IN_EVERY_TASK = 0.8
 # Rows of each unit kept as they are, for cautions, and of all units together.
-_KEPT_ROWS = 16_384
+_KEPT_ROWS = 8192
 _KEPT_ROWS_OF_ALL = 2_000_000
 _SHOWN_ROWS = 200_000
 
@@ -111,24 +113,42 @@ def draw_units(source: Source, grouping: Grouping, scale: str, threads: int = 1)
         chunks = [one for one in pool.map(draw, chosen.tolist()) if one is not None]
     keys = Keys(grouping)
     parts = [(np.empty(0), np.empty(0), *(np.empty(0, np.int64) for _ in range(3)))]
-    met, known = [], []
+    # Row groups that hold one unit alone tell so unread.
+    told = [source.constant_units(task) for task in tasks]
+    untold = sum(one is None for one in told) - sum(told[index] is None for index in chosen)
+    held, known = [], []
     for run, chunk in enumerate(chunks):
         code = keys.codes(chunk.units).astype(np.int64)
-        met.append(np.unique(code).size)
+        held.append(_species(code))
         known.append(len(keys.keys))
         x, y, usable = on_scale(chunk.x, chunk.y, scale)
         kept = np.flatnonzero(usable)
         place = kept if chunk.positions is None else chunk.positions[kept]
         parts.append((x[kept], y[kept], np.full(kept.size, run), place, code[kept]))
     x, y, run_of, places, codes = (np.concatenate(column) for column in zip(*parts, strict=True))
-    # What the later half of the sampled tasks added tells how many the others may add.
     units, per_task = len(keys.keys), 1.0
-    if met:
-        half = len(met) // 2
-        later = (known[-1] - known[half - 1]) / (len(met) - half) if half else known[-1]
-        units += math.ceil(later * max(0, len(tasks) - chosen.size))
-        per_task = float(np.mean(met))
+    if held:
+        per_task, seen = float(np.mean(held)), _species(codes)
+        if per_task < _SHARE_IN_EVERY_TASK * seen:
+            # Tasks differ: what the later half of those sampled added, the others may add too.
+            half = len(held) // 2
+            later = (known[-1] - known[half - 1]) / (len(held) - half) if half else known[-1]
+            seen = units + later * untold
+        for arrays in told:
+            if arrays is not None:
+                keys.codes(arrays)
+        units = max(len(keys.keys), math.ceil(seen))
     return UnitSample(Sample(x, y, run_of, places), codes, keys.keys, units, per_task)
+
+
+def _species(code: NDArray[np.int64]) -> float:
+    """Estimate how many units there are from some rows (Chao 1984, Scand. J. Statist. 11:265).
+
+    Units met once, f1, and twice, f2, tell how many were not met: f1 (f1 - 1) / (2 (f2 + 1)).
+    """
+    counts = np.bincount(code)
+    once, twice = np.count_nonzero(counts == 1), np.count_nonzero(counts == 2)
+    return float(np.count_nonzero(counts) + once * (once - 1) / (2.0 * (twice + 1)))
 
 
 @dataclass(frozen=True)
@@ -218,7 +238,8 @@ def lay_out(
             f"there may be {units:,}, too many for {MEMORY_CAP_BYTES >> 30} GiB of memory",
             "leave out a column, or make some units at a time with --where",
         )  # fmt: skip
-    working = max(_WORKING_BINS, _power_below(CACHE_BYTES / (lane * min(units, units_per_task))))
+    at_once = min(units, units_per_task) * per_task
+    working = max(_WORKING_BINS, _power_below(CACHE_BYTES / (lane * at_once)))
     bins = min(BINS, working, _power_below(fitting))
     run = _ALL_ROWS
     if not apart:
@@ -244,7 +265,8 @@ def count_units(
     grouping: Grouping,
     progress: Progress = silent,
     *,
-    most_units: int = 1 << 30,
+    most_units: int | None = None,
+    room: int = 0,
     sampled_rows: int = 1,
     pooled: bool = False,
 ) -> CountedUnits:
@@ -268,8 +290,10 @@ def count_units(
         What tells units apart.
     progress : callable
         Called as ``progress("reading", rows_done, rows_expected)``.
-    most_units : int
-        More are refused with `TooManyUnits`.
+    most_units : int or None
+        More are refused with `TooManyUnits`; None takes any number.
+    room : int
+        Bins that all units together will have, as far as is known: memory is not moved then.
     sampled_rows : int
         First rows of each unit in each task that are kept as they are.
     pooled : bool
@@ -282,7 +306,7 @@ def count_units(
     """
     dealer = None if reading.blocks is None else Dealer(reading.blocks, base.folds)
     stride = max(1, (source.rows_expected or 64 * _SHOWN_ROWS) // _SHOWN_ROWS)
-    ways = Ways(grouping, base, plan_for, dealer, most_units, max(1, sampled_rows), stride)
+    ways = Ways(grouping, base, plan_for, dealer, most_units, room, max(1, sampled_rows), stride)
     alone = base.folds_per_task == 1 and base.block is None
 
     def count(parts: Iterator[tuple[Task, Iterator[Chunk]]]) -> UnitSums:
@@ -372,7 +396,7 @@ def count_fleet(
             try:
                 units = count_units(
                     source, base, plans_of(base, sample), replace(reading, threads=layout.workers),
-                    grouping, progress, most_units=room,
+                    grouping, progress, most_units=room, room=room * layout.bins,
                     sampled_rows=_sampled_rows(layout, source, sample), pooled=True,
                 )  # fmt: skip
             except TooManyUnits:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import abc
 import os
 import shutil
 import sys
@@ -173,7 +174,7 @@ class StreamReader(Reader):
             raise ReadError(
                 "DATA",
                 "deliver the same rows on each pass",
-                f"the stream gave {before} rows first and {delivered} rows then",
+                f"the stream gave {before:,} rows first and {delivered:,} rows then",
                 "write it to a Parquet file and name that",
             )
         self._rows = delivered
@@ -234,8 +235,9 @@ class _Spooled(Reader):
         self.place_of = self._inner.place_of
         self.rows_expected = self._inner.rows_expected
 
+    @abc.abstractmethod
     def _write(self, folder: str, columns: Sequence[str]) -> Reader:
-        raise NotImplementedError
+        """Write the columns into the folder and return a reader of what was written."""
 
     def batches(self, index: int, columns: Sequence[str], rows: int) -> Iterator[pa.RecordBatch]:
         """Read the temporary file."""

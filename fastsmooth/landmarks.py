@@ -20,8 +20,9 @@ Floats = NDArray[np.float64]
 
 _POINTS_PER_BANDWIDTH = 6
 _MOST_POINTS = 600
-# A swing between turning points counts when it exceeds this many of its own standard errors.
-_REAL_SWING = 3.0
+# A swing between turning points counts when chance makes one as large so rarely: three of its own
+# standard errors, or more where few folds tell these.
+_REAL_SWING = 0.9973
 # Without a fold, a place is looked for within so many bandwidths of where all data have it.
 _SEARCHED_BANDWIDTHS = 3.0
 _SAME_SLOPE = 1e-6
@@ -197,18 +198,22 @@ class _Stretch:
         """Zeros of the slope between real swings of the curve."""
         folds = self.value.shape[0] - 1
         moved = self.value[1:] - self.value[0]
-        error = np.sqrt((folds - 1.0) / folds * np.nansum(moved**2, axis=0))
+        # Where some fold cannot be left out, the error is not known and no swing is real.
+        known = np.isfinite(moved).all(axis=0)
+        error = np.sqrt((folds - 1.0) / folds * np.sum(moved**2, axis=0, where=known))
+        error = np.where(known, error, np.inf)
         zeros = _zeros(self.x, self.slope[0])
         ends = [float(self.x[0]), *zeros, float(self.x[-1])]
         heights = [float(v) for v in np.interp(ends, self.x, self.value[0])]
         errors = [float(v) for v in np.interp(ends, self.x, error)]
+        real = float(pointwise_value(_REAL_SWING, np.array([self.met - 1.0]))[0])
         while len(ends) > 2:
             swings = [
                 abs(heights[i + 1] - heights[i]) / max(np.hypot(errors[i], errors[i + 1]), 1e-300)
                 for i in range(len(ends) - 1)
             ]
             least = int(np.argmin(swings))
-            if swings[least] >= _REAL_SWING:
+            if swings[least] >= real:
                 break
             # A swing that is not real takes both its turning points with it, or the inner one
             # where it ends at the end of the stretch.

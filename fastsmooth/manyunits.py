@@ -285,11 +285,13 @@ def make_units(job: Job, progress: Progress) -> Fleet:
     tables: Tables = counted.units
     together = counted.together
 
-    def count(source: Source, plan_for: Callable[[Key], Plan | None]) -> CountedUnits:
+    def count(
+        source: Source, plan_for: Callable[[Key], Plan | None], room: int = 0
+    ) -> CountedUnits:
         base = replace(ways.base, columns=source.columns)
         return count_units(
             source, base, plan_for, job.reading, job.grouping, progress,
-            sampled_rows=ways.sampled_rows,
+            sampled_rows=ways.sampled_rows, room=room,
         )  # fmt: skip
 
     if job.smoothing.robust:
@@ -308,7 +310,8 @@ def make_units(job: Job, progress: Progress) -> Fleet:
         if not job.smoothing.robust:
             # Tables of the former pass have served; two of them might not fit into memory.
             held.pop().release()
-        made = count(source, finer.get)
+        room = sum(plan.bins for plan in finer.values() if plan is not None)
+        made = count(source, finer.get, room)
         held.append(made)
         return Weighed(made, counted.units, frozenset(finer)) if job.smoothing.robust else made
 
@@ -463,14 +466,17 @@ def why_not(job: Job, table: BinTable) -> tuple[str, str] | None:
         check_sizes(total, rows, columns)
     except InputError as error:
         return "data refused", str(error)
-    try:
-        narrowest_width(table)
-    except InputError:
-        return "too few distinct x", (
-            f"{rows:,} rows hold fewer than {_FEWEST_PLACES} distinct {columns.x} that bins tell "
-            "apart."
-        )
     return None
+
+
+def _why_no_width(job: Job, table: BinTable, error: InputError) -> tuple[str, str]:
+    """Status and reason of a unit that refuses a search."""
+    if error.argument != "--x":
+        return "too few rows", str(error)
+    return "too few distinct x", (
+        f"{table.tally.used:,} rows hold fewer than {_FEWEST_PLACES} distinct "
+        f"{job.source.columns.x} that bins tell apart."
+    )
 
 
 class Worker:
@@ -514,7 +520,7 @@ class Worker:
                 by_block=job.reading.block is not None, widths=job.smoothing.widths,
             )  # fmt: skip
         except InputError as error:
-            return Unit(key, "too few rows", str(error), table.tally.used, None)
+            return Unit(key, *_why_no_width(job, table, error), table.tally.used, None)
         if job.fixed is not None:
             check_width(job.fixed, table)
         bandwidth = job.fixed or found.trails[estimator].bandwidth
@@ -656,17 +662,30 @@ def _shared_bandwidth(job: Job, tables: Tables, keys: Sequence[Key]) -> dict[str
 
 def _common_interval(tables: Tables, keys: Sequence[Key]) -> tuple[float, float, list[Key]]:
     """The widths to compare, and the units that can judge all of them."""
-    narrow, rows, high = np.empty(len(keys)), np.empty(len(keys)), 0.0
+    narrow, rows, high = np.full(len(keys), np.inf), np.zeros(len(keys)), 0.0
     for place, key in enumerate(keys):
         table = tables.table(key)
-        narrow[place] = max(narrowest_width(table), _COARSEST_BINS_PER_BANDWIDTH * table.plan.width)
+        try:
+            own = narrowest_width(table)
+        except InputError:
+            continue  # too few distinct x to judge any width; the unit's own search tells
+        narrow[place] = max(own, _COARSEST_BINS_PER_BANDWIDTH * table.plan.width)
         rows[place] = table.tally.used
         high = max(high, float(table.extent[1] - table.extent[0]))
+    if not rows.any():
+        raise _nobody_judges(keys)
     order = np.argsort(narrow, kind="stable")
     share = np.cumsum(rows[order]) / rows.sum()
     low = float(narrow[order[int(np.argmax(share >= _SHARE_JUDGED * (1.0 - 1e-12)))]])
     judges = [key for place, key in enumerate(keys) if narrow[place] <= low]
     return low, max(high, 2.0 * low), judges
+
+
+def _nobody_judges(keys: Sequence[Key]) -> InputError:
+    return InputError(
+        "--shared-bandwidth", "find a unit with rows enough to judge a width",
+        f"none of {len(keys)} has", "give --bandwidth",
+    )  # fmt: skip
 
 
 def _relative(values: Floats, criterion: str) -> Floats:

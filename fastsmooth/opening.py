@@ -61,13 +61,9 @@ def check_present(
         for place, schema in zip(reader.places, reader.schemas, strict=True):
             found = count_fields(schema, column)
             if found == 0:
-                raise InputError(
-                    argument,
-                    requirement.replace("DATA", "every file")
-                    + (" in every file" if argument == "DATA" else ""),
-                    f"'{column}' is missing from '{place}'",
-                    "leave the file out or write the column to it",
-                )
+                every = requirement.replace("DATA", "every file")
+                every += " in every file" if argument == "DATA" else ""
+                raise _missing(argument, every, column, place)
             if found > 1:
                 raise InputError(
                     argument,
@@ -75,6 +71,13 @@ def check_present(
                     f"'{place}' has {found} columns called '{column}'",
                     "rename all but one",
                 )
+
+
+def _missing(argument: str, requirement: str, column: str, place: str) -> InputError:
+    return InputError(
+        argument, requirement, f"'{column}' is missing from '{place}'",
+        "leave the file out or write the column to it",
+    )  # fmt: skip
 
 
 def check_kinds(reader: Reader, roles: Sequence[Role]) -> list[str]:
@@ -180,12 +183,7 @@ def parse_filters(reader: Reader, where: str | None) -> list[Filter]:
     for place, schema in zip(reader.places, reader.schemas, strict=True):
         for name in filters[0].columns if filters else ():
             if name not in schema.names:
-                raise InputError(
-                    "--where",
-                    "name columns of every file",
-                    f"'{name}' is missing from '{place}'",
-                    "leave the file out or write the column to it",
-                )
+                raise _missing("--where", "name columns of every file", name, place)
         # Metadata does not matter here and would only multiply the schemas.
         bare = schema.remove_metadata()
         if bare not in parsed:

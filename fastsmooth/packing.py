@@ -135,6 +135,8 @@ def _as_array(values: Any) -> np.ndarray[Any, Any] | None:
         length = len(values[0])
         if not length or any(not isinstance(row, list) or len(row) != length for row in values):
             return None
+        if isinstance(values[0][0], list):
+            return None
         flat = _as_array([one for row in values for one in row])
         # A missing number is told by NaN in plain lists only.
         if flat is None or np.isnan(flat).any():

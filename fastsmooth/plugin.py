@@ -285,7 +285,7 @@ def _data(pyramid: Pyramid) -> _Data:
         raise InputError(
             "DATA",
             f"hold rows at {_LEAST_PLACES} or more places of x for a plug-in bandwidth",
-            f"the {rows:g} rows lie at {used.size}",
+            f"the {rows:,.0f} rows lie at {used.size:,}",
             "use --criterion leave-one-out or give --bandwidth",
         )
     x = _mean_places(finest, used)

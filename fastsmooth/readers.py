@@ -73,6 +73,11 @@ class Reader(abc.ABC):
         del index, column
         return None
 
+    def shows_offset(self, column: str) -> bool:
+        """Tell whether times are written with an offset from UTC that reading them loses."""
+        del column
+        return False
+
     def close(self) -> None:
         """Remove temporary files, if there are any."""
         if self._spool is not None:
@@ -172,7 +177,7 @@ class TableReader(Reader):
         self.tasks = tuple(
             Task(
                 index,
-                f"rows {start} to {min(start + ROWS_PER_TABLE_TASK, table.num_rows) - 1}",
+                f"rows {start:,} to {min(start + ROWS_PER_TABLE_TASK, table.num_rows) - 1:,}",
                 min(ROWS_PER_TABLE_TASK, table.num_rows - start),
             )
             for index, start in enumerate(starts)
@@ -248,7 +253,7 @@ def table_from_arrays(arrays: dict[str, object]) -> pa.Table:
             raise InputError(
                 "DATA",
                 "hold arrays of equal length",
-                f"'{first}' has {lengths[first]} values and '{name}' has {length}",
+                f"'{first}' has {lengths[first]:,} values and '{name}' has {length:,}",
                 "hand in one value of each for every row",
             )
     return pa.table(columns)

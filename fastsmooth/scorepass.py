@@ -295,7 +295,7 @@ class ScorePass:
         if task.rows is not None and seen != task.rows:
             raise ReadError(
                 "DATA", "hold as many rows as it says",
-                f"{task.label} delivered {seen} of {task.rows} rows",
+                f"{task.label} delivered {seen:,} of {task.rows:,} rows",
                 "copy or write the file again",
             )  # fmt: skip
         if record is not None:

@@ -255,5 +255,8 @@ def _fold_voters(
     s = others(np.array(parts))
     with np.errstate(invalid="ignore", divide="ignore"):
         keep = (s[:, 0] > empty) & (np.abs(s[:, 1] / s[:, 0]) < _MOST_LOPSIDED * shape.reach)
-    lost = float(level.folds[:, 0][~keep].sum())
-    return np.repeat(keep, finest.bins // level.bins, axis=1), lost
+    # Folds know weights, not rows: those lost are taken to weigh what all rows of their bin do.
+    weight = np.where(keep, 0.0, level.folds[:, 0]).sum(axis=0)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        lost = np.where(level.first[0] > 0.0, weight / level.first[0] * level.count, 0.0)
+    return np.repeat(keep, finest.bins // level.bins, axis=1), float(lost.sum())

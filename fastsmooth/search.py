@@ -126,11 +126,14 @@ def search_table(
     grid = np.geomspace(low / unit, high / unit, widths) * unit
     job = scoring or BinnedScoring(table, pyramid, shape)
     with ThreadPoolExecutor(threads) as pool:
-        points, rows_alone = job.points(grid.tolist(), pool.map)
+        # With one thread there is nobody to hand the work to.
+        mapped = pool.map if threads > 1 else map
+        points, rows_alone = job.points(grid.tolist(), mapped)
         by_fold: list[dict[str, Point]] = []
         if by_block:
-            by_fold, rows_alone = job.left_out_points(grid.tolist(), pool.map)
-        found = pool.map(
+            by_fold, not_judged = job.left_out_points(grid.tolist(), mapped)
+            rows_alone = not_judged if criterion == "leave-block-out" else rows_alone
+        found = mapped(
             lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS
         )
         trails = dict(zip(ESTIMATORS, found, strict=True))
@@ -162,7 +165,8 @@ def search_neighbours(
         points, rows_alone = job.points(grid.tolist(), pool.map)
         by_fold: list[dict[str, Point]] = []
         if by_block:
-            by_fold, rows_alone = job.left_out_points(grid.tolist(), pool.map)
+            by_fold, not_judged = job.left_out_points(grid.tolist(), pool.map)
+            rows_alone = not_judged if criterion == "leave-block-out" else rows_alone
     trail = _trail(job, NEAREST, grid, points, by_fold, criterion)
     return Search(criterion, NEAREST, {NEAREST: trail}, rows_alone)
 

@@ -61,16 +61,16 @@ def check_flag(argument: str, value: object) -> None:
 
 def whole_number(argument: str, value: Any, low: int, high: int | None = None) -> int:
     """Return a whole number as a plain int, or refuse it."""
-    limits = f"be at least {low}" if high is None else f"be between {low} and {high}"
+    limits = f"be at least {low:,}" if high is None else f"be between {low:,} and {high:,}"
     if not isinstance(value, Integral) or isinstance(value, bool):
         kind = "be a whole number"
         raise InputError(
-            argument, f"{kind}, {low} or more" if high is None else limits.replace("be", kind, 1),
+            argument, f"{kind}, {low:,} or more" if high is None else limits.replace("be", kind, 1),
             f"it is {value!r}", "leave it out",
         )  # fmt: skip
     plain = int(value)
     if plain < low or (high is not None and plain > high):
-        raise InputError(argument, limits, f"it is {plain}", "leave it out")
+        raise InputError(argument, limits, f"it is {plain:,}", "leave it out")
     return plain
 
 
@@ -118,7 +118,8 @@ class Reading:
         Parts into which the rows are dealt for standard errors.
     block : Block or str or None
         Which rows may depend on each other: a column, or a time column with a unit
-        (``logged_at:day``). None deals runs of consecutive rows to the folds.
+        (``logged_at:day``); a name that holds a colon stands in double quotes. None deals runs of
+        consecutive rows to the folds.
     timeout_seconds : float
         How long a silent object store is waited for, each time.
     last : str or None

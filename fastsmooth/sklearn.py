@@ -190,7 +190,7 @@ class CurveRegressor(RegressorMixin, BaseEstimator):
             if self.outside == "raise":
                 raise ValueError(
                     "X must lie where the data carry the curve, but "
-                    f"{np.count_nonzero(away)} of {x.size} values do not, such as "
+                    f"{np.count_nonzero(away):,} of {x.size:,} values do not, such as "
                     f'{x[away][0]:g}; set outside="nearest" or outside="nan"'
                 )
             if self.outside == "nearest":

@@ -249,9 +249,25 @@ class Source:
         """The place in `files` of each task's file."""
         return self._reader.place_of
 
+    def shows_offset(self, column: str) -> bool:
+        """Tell whether times are written with an offset from UTC that reading them loses."""
+        return self._reader.shows_offset(column)
+
     def close(self) -> None:
         """Release what the source holds, temporary files included."""
         self._reader.close()
+
+    def constant_units(self, task: Task) -> tuple[pa.Array, ...] | None:
+        """Return the one value of each unit column in a task, (1,) each, if all are known unread."""
+        from fastsmooth.casts import constant_array
+
+        arrays = []
+        for name in self._units:
+            value = self._reader.constant(task.index, name) if name in self._only_units else None
+            if value is None:
+                return None
+            arrays.append(constant_array(value, 1))
+        return tuple(arrays)
 
     def chunks(self, task: Task, rows: int = CHUNK_ROWS) -> Iterator[Chunk]:
         """Read one task from start to end.
@@ -294,7 +310,7 @@ class Source:
             raise ReadError(
                 "DATA",
                 "hold as many rows as it says",
-                f"{task.label} delivered {seen} of {task.rows} rows",
+                f"{task.label} delivered {seen:,} of {task.rows:,} rows",
                 "copy or write the file again",
             )
         if record is not None:

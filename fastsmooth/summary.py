@@ -24,29 +24,22 @@ PRUDENCE = (
 def curve_lines(made: Curve) -> list[str]:
     """Return what a person should read first about a curve, one fact a line."""
     settings, engine = made.settings, made.trace["engine"]
-    lines = [f"{settings['y']} against {settings['x']}", *_row_lines(made)]
+    lines = [f"{settings['y']} against {settings['x']}", *row_lines(made.trace)]
     if settings["block"] is not None:
-        blocks = made.trace["blocks"]
-        by_fold = made.search.criterion == "leave-block-out" and not made.width_given
-        rests = "width and band rest" if by_fold else "the band rests"
-        lines.append(
-            f"blocks     {blocks:,} by {settings['block']}, dealt to {settings['folds']} folds; "
-            f"{rests} on leaving out folds"
-        )
+        lines.append(_block_line(made))
     lines += _width_lines(made)
-    kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(
-        f"band       {settings['band']} {100 * settings['level']:g} %, {kind}; rows scatter around "
+        f"band       {_band_words(made)}; rows scatter around "
         f"the curve by {engine['residual_sd']:.4g} (residual sd"
         + (" of a row of weight 1)" if settings["weight"] is not None else ")")
     )
     lines.append(_fit_line(made))
     lines += _robust_lines(made)
     lines += _limit_lines(made)
-    lines += [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
-    counts = ", ".join(f"{n} {name}" for name, n in status_counts(made).items() if n)
+    lines += _landmark_lines(made)
+    counts = ", ".join(f"{n:,} {name}" for name, n in status_counts(made).items() if n)
     ends = f"{made.axis.label(float(made.x[0]))} to {made.axis.label(float(made.x[-1]))}"
-    lines.append(f"points     {made.x.shape[0]} from {ends}: {counts}")
+    lines.append(f"points     {made.x.shape[0]:,} from {ends}: {counts}")
     lines.append(_engine_line(engine))
     lines += [f"caution    {caution.text}" for caution in made.cautions]
     return lines
@@ -56,7 +49,7 @@ def search_lines(made: Curve) -> list[str]:
     """Return the search as a table for people."""
     found = made.search
     names = list(found.trails)
-    lines = [f"{made.settings['y']} against {made.settings['x']}", *_row_lines(made)]
+    lines = [f"{made.settings['y']} against {made.settings['x']}", *row_lines(made.trace)]
     shown = "" if found.criterion != "plug-in" else "; the table shows leave-one-out"
     kernel = "" if made.by_neighbours else f", kernel {found.kernel}"
     lines.append(f"criterion  {found.criterion}{kernel}{shown}")
@@ -90,6 +83,8 @@ def curve_facts(made: Curve) -> dict[str, Any]:
     return {
         "settings": made.settings,
         "rows": made.trace["rows"],
+        "blocks": made.trace["blocks"],
+        "folds_with_rows": made.trace.get("folds_with_rows"),
         "files": len(made.trace["files"]),
         "bandwidth": made.bandwidth,
         "chosen_by": "caller" if made.width_given else made.search.criterion,
@@ -101,6 +96,7 @@ def curve_facts(made: Curve) -> dict[str, Any]:
         "robust": made.trace.get("robust"),
         "fit_definitions": DEFINITIONS,
         "landmarks": made.trace["landmarks"],
+        "landmark_stretches": made.trace.get("landmark_stretches"),
         "limits": None
         if made.limits is None
         else {
@@ -186,6 +182,40 @@ def _robust_lines(made: Curve) -> list[str]:
     return [text + f"{facts['last_move_in_sd']:.2g} residual sd"]
 
 
+def _block_line(made: Curve) -> str:
+    settings, held = made.settings, made.trace.get("folds_with_rows")
+    of = "" if held in (None, settings["folds"]) else f"{held} of "
+    text = f"blocks     {made.trace['blocks']:,} by {settings['block']}, dealt to {of}"
+    text += f"{settings['folds']} folds"
+    by_fold = made.search.criterion == "leave-block-out" and not made.width_given
+    if not _has_band(made):
+        return text + ("; the width rests on leaving out folds" if by_fold else "")
+    rests = "width and band rest" if by_fold else "the band rests"
+    return f"{text}; {rests} on leaving out folds"
+
+
+def _has_band(made: Curve) -> bool:
+    return bool((np.isfinite(made.lower) & np.isfinite(made.upper)).any())
+
+
+def _band_words(made: Curve) -> str:
+    settings = made.settings
+    if _has_band(made):
+        kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
+        return f"{settings['band']} {100 * settings['level']:g} %, {kind}"
+    if not np.isfinite(made.estimate).any():
+        return "none, because no point has rows near enough"
+    if made.errors_by_fold:
+        return "none, because no window meets enough folds to tell how much they differ"
+    return "none, because no window holds enough places to tell its error"
+
+
+def _landmark_lines(made: Curve) -> list[str]:
+    if made.trace.get("landmark_stretches") == []:
+        return ["landmark   none, because no point is supported: all are thin or outside"]
+    return [_landmark_line(made, mark) for mark in made.trace["landmarks"] or []]
+
+
 def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
     label = made.axis.label
     words = {
@@ -205,13 +235,14 @@ def _landmark_line(made: Curve, mark: dict[str, Any]) -> str:
     return text + f" ({level:g} % interval {label(mark['lower'])} to {label(mark['upper'])})"
 
 
-def _row_lines(made: Curve) -> list[str]:
-    rows = made.trace["rows"]
-    stored = made.trace.get("store")
-    files = len(made.trace["files"]) if stored is None else stored["files"]
+def row_lines(trace: dict[str, Any]) -> list[str]:
+    """Return what became of the rows that a result was made from."""
+    rows = trace["rows"]
+    stored = trace.get("store")
+    files = len(trace["files"]) if stored is None else stored["files"]
     text = f"rows       {rows['used']:,} used of {rows['read']:,} read"
     if files:
-        text += f" from {files} file{'s' if files > 1 else ''}"
+        text += f" from {files:,} file{'s' if files > 1 else ''}"
     if stored is not None:
         text += " in a store"
     if stored is not None and stored["periods"]:
@@ -240,7 +271,10 @@ def _width_lines(made: Curve) -> list[str]:
         lines = [f"width      the nearest {label(made.bandwidth)}, {by}; their mean"]
     if made.width_given:
         lines.append(f"           {made.search.criterion} would choose {label(mine.bandwidth)}")
-    lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone)")
+    judges = ""
+    if made.few_rows_vote:
+        judges = f", by the {made.rows_counted - made.search.rows_alone:,.0f} rows that could judge"
+    lines.append(f"           {label(low)} to {label(high)} would do as well (flat zone){judges}")
     by_row = mine.leave_one_out_bandwidth
     ratio = by_row / mine.bandwidth
     if made.widths_are_factors:
@@ -250,7 +284,7 @@ def _width_lines(made: Curve) -> list[str]:
         lines.append(
             f"           leave-one-out would choose {label(by_row)}: rows of one block resemble "
             f"each other, so it takes their common wander for signal"
-            if by_row < low
+            if by_row < low and not made.few_rows_vote
             else f"           leave-one-out would choose {label(by_row)}"
         )
     for other_name, other in made.search.trails.items():
@@ -270,7 +304,7 @@ def _engine_line(engine: dict[str, Any]) -> str:
     if engine["name"] == "exact":
         return f"engine     exact, sums over every row ({engine['reason']})"
     return (
-        f"engine     binned, {engine['bins']} bins, {engine['bins_per_bandwidth']:.3g} to a "
+        f"engine     binned, {engine['bins']:,} bins, {engine['bins_per_bandwidth']:.3g} to a "
         f"bandwidth, {_times(engine['passes'])} over the data"
         + _error_words(engine["error_in_noise_sd"])
     )

@@ -15,7 +15,7 @@ import pyarrow.compute as pc
 import pyarrow.types as pt
 
 from fastsmooth.axis import parse_moment
-from fastsmooth.casts import is_number, is_text, plain_array, plain_type
+from fastsmooth.casts import kind_of, plain_array, plain_type
 from fastsmooth.errors import InputError
 
 LONGEST_QUOTE = 160
@@ -139,32 +139,6 @@ def balanced(combine: Callable[[Any, Any], Any], values: list[Any]) -> Any:
         pairs = [combine(*values[n : n + 2]) for n in range(0, len(values) - 1, 2)]
         values = pairs + (values[-1:] if len(values) % 2 else [])
     return values[0]
-
-
-def kind_of(data_type: pa.DataType) -> str:
-    """Return the kind of a plain type.
-
-    Parameters
-    ----------
-    data_type : pyarrow.DataType
-        A type as `plain_type` returns it.
-
-    Returns
-    -------
-    str
-        A kind of `Term`, or ``other``.
-    """
-    if pt.is_boolean(data_type):
-        return "boolean"
-    if is_number(data_type):
-        return "number"
-    if is_text(data_type):
-        return "text"
-    if pt.is_timestamp(data_type):
-        return "timestamp"
-    if pt.is_date(data_type):
-        return "date"
-    return "duration" if pt.is_duration(data_type) else "other"
 
 
 def loaded_type(name: str, stored: pa.DataType) -> tuple[str, pa.DataType]:

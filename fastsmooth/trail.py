@@ -128,8 +128,8 @@ class Search:
     trails : dict of str to Trail
         Per estimator.
     rows_alone : float
-        Weight of rows that took no part in the criterion at any width, because the narrowest
-        window around them holds no other row.
+        Rows that took no part in the criterion at any width, because the narrowest window around
+        them holds no other row (with blocks: none of other folds to both sides).
     """
 
     criterion: str

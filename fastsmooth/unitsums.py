@@ -50,8 +50,10 @@ class Ways:
         Gives the plan of a unit; None leaves its rows out.
     dealer : Dealer or None
         Deals blocks to folds; None deals runs of a unit's own rows.
-    most_units : int
+    most_units : int or None
         More units than this are too many.
+    room : int
+        Bins that all units together may have, as far as is known.
     sampled_rows : int
         The first rows of each unit in each task that are kept as they are.
     stride : int
@@ -62,7 +64,8 @@ class Ways:
     base: Plan
     plan_for: PlanFor
     dealer: Dealer | None
-    most_units: int
+    most_units: int | None
+    room: int
     sampled_rows: int
     stride: int
 
@@ -105,6 +108,8 @@ class UnitSums:
         How rows are counted.
     folds : sequence of int
         The folds that rows may go to, ascending.
+    room : int
+        Bins to make room for at first.
 
     Attributes
     ----------
@@ -120,9 +125,10 @@ class UnitSums:
         See `count_bins`.
     """
 
-    def __init__(self, ways: Ways, folds: Sequence[int]) -> None:
+    def __init__(self, ways: Ways, folds: Sequence[int], room: int = 0) -> None:
         self.ways = ways
         self.folds = tuple(folds)
+        self._room = room
         self.tally = Tally()
         self._keys = Keys(ways.grouping)
         self.plans: list[Plan | None] = []
@@ -211,7 +217,7 @@ class UnitSums:
         """Make room for the units that have been met since."""
         from fastsmooth.kernels.accumulate import REASONS
 
-        if len(self.keys) > self.ways.most_units:
+        if self.ways.most_units is not None and len(self.keys) > self.ways.most_units:
             raise TooManyUnits
         new = [self.ways.plan_for(key) for key in self.keys[len(self.plans) :]]
         self.plans += new
@@ -241,7 +247,7 @@ class UnitSums:
         if self._filled > self._pool.shape[1]:
             former = self._pool
             # Memory that no row reaches is never touched, and so costs nothing.
-            room = max(_LEAST_BINS, self._filled + self._filled // 2)
+            room = max(self._room, _LEAST_BINS, self._filled + self._filled // 2)
             self._pool = np.zeros((former.shape[0], room, former.shape[2]))
             before = int(start[0])
             self._pool[:, :before] = former[:, :before]
@@ -428,7 +434,8 @@ class CountedUnits:
             self._parts.append(part)
             return
         if not self._parts:
-            self._parts.append(UnitSums(self.ways, range(self.ways.base.folds)))
+            folds = range(self.ways.base.folds)
+            self._parts.append(UnitSums(self.ways, folds, self.ways.room))
         self._parts[0].merge(part)
 
     def finish(self) -> None:
@@ -443,6 +450,11 @@ class CountedUnits:
         self._shown, self._sample = self._all.kept()
         self._shown_ends = np.searchsorted(self._shown[0], ends)
         self._sample_ends = np.searchsorted(self._sample[0], ends)
+
+    def release(self) -> None:
+        """Give the memory of the sums back; no table can be asked for any more."""
+        self._parts.clear()
+        self._numbers.clear()
 
     @property
     def tally(self) -> Tally:

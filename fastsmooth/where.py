@@ -20,7 +20,7 @@ import sqlglot
 from sqlglot import exp
 from sqlglot.errors import SqlglotError
 
-from fastsmooth.casts import plain_type
+from fastsmooth.casts import kind_of, plain_type
 from fastsmooth.errors import InputError
 from fastsmooth.near import advise
 from fastsmooth.quoting import sql_name
@@ -33,7 +33,6 @@ from fastsmooth.terms import (
     balanced,
     compared,
     in_texts,
-    kind_of,
     loaded_type,
     moment_literal,
     number_literal,

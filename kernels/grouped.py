@@ -38,6 +38,9 @@ def deal_runs(code, rows_per_run, turns, seen, slot):
     of others lie between. Empty input changes nothing.
     """
     k = turns.shape[0]
+    former = np.int32(-1)
+    due = np.int64(0)
+    now = np.int32(0)
     for i in range(code.shape[0]):
         u = code[i]
         if u < 0:
@@ -45,9 +48,16 @@ def deal_runs(code, rows_per_run, turns, seen, slot):
             continue
         row = seen[u]
         seen[u] = row + 1
-        # Most runs are longer than what a task holds of a unit: no division then.
-        turn = 0 if row < rows_per_run else (row // rows_per_run) % k
-        slot[i] = turns[turn]
+        # Divisions are slow: most rows are in the first run, or follow one of the same run.
+        if row < rows_per_run:
+            slot[i] = turns[0]
+            continue
+        if u != former or row == due:
+            run = row // rows_per_run
+            former = u
+            due = (run + 1) * rows_per_run
+            now = turns[run % k]
+        slot[i] = now
 
 
 @kernel(

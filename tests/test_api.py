@@ -223,7 +223,7 @@ def test_progress_goes_through_its_stages():
         ),
         (
             lambda: Smoothing(widths=3),
-            "--widths must be between 8 and 1000, but it is 3; leave it out.",
+            "--widths must be between 8 and 1,000, but it is 3; leave it out.",
         ),
         (
             lambda: Band(level=95.0),
@@ -239,7 +239,7 @@ def test_progress_goes_through_its_stages():
         ),
         (
             lambda: Band(points=1),
-            "--points must be between 2 and 1000000, but it is 1; leave it out.",
+            "--points must be between 2 and 1,000,000, but it is 1; leave it out.",
         ),
         (
             lambda: Band(at=()),
@@ -248,7 +248,7 @@ def test_progress_goes_through_its_stages():
         (lambda: Reading(threads=0), "--threads must be at least 1, but it is 0; leave it out."),
         (
             lambda: Reading(folds=1),
-            "--folds must be between 2 and 1024, but it is 1; leave it out.",
+            "--folds must be between 2 and 1,024, but it is 1; leave it out.",
         ),
     ],
 )  # fmt: skip
@@ -298,7 +298,7 @@ def test_bandwidths_that_mean_nothing_are_refused(function, bandwidth, scale, te
 def test_points_that_mean_nothing_are_refused():
     log = Reading(scale="log")
     assert refused(reading=log, band=Band(at=(-1.0, 3.0))) == (
-        "--at must be positive with --scale log, but it holds -1; leave it out."
+        "--at must be positive with --scale log, but it holds -1; leave such points out."
     )
     assert refused(band=Band(at=(float("inf"),))) == (
         "--at must be a finite number, but inf was given; write a number."

@@ -2,6 +2,7 @@
 
 import time
 from collections import Counter
+from dataclasses import replace
 from datetime import UTC, date, datetime, timedelta
 from itertools import pairwise
 
@@ -16,6 +17,10 @@ from hypothesis import strategies as st
 from fastsmooth import Band, InputError, Reading, Smoothing, make_curve
 from fastsmooth.blocks import UNITS, Block, Dealer, fold_of_key, fold_of_number, merge_keys
 from fastsmooth.curve import OUTSIDE, THIN
+from fastsmooth.engines.parts import block_of
+from fastsmooth.plan import Plan
+from fastsmooth.source import Columns
+from fastsmooth.store.settings import StoreSettings
 from tests import cases
 from tests.oracle import blocks as oracle
 
@@ -42,11 +47,69 @@ def deal(column, block, folds=FOLDS):
         ("logged_at:day", Block("logged_at", "day")),
         ("logged_at:week@Europe/Madrid", Block("logged_at", "week", MADRID)),
         ("site:batch:hour", Block("site:batch", "hour")),
+        ('"site:batch"', Block("site:batch")),
+        ('"site:day"', Block("site:day")),
+        ('"the ""good"" batch"', Block('the "good" batch')),
     ],
 )
 def test_a_block_is_read_from_words_and_said_in_the_same(text, block):
     assert Block.parse(text) == block
-    assert str(block) == text
+    if not text.startswith('"the'):
+        assert str(block) == text
+
+
+@pytest.mark.parametrize(
+    ("text", "block"),
+    [
+        ('"plant"', Block("plant")),
+        ('"logged_at":day', Block("logged_at", "day")),
+        ('"site:batch":day@Europe/Madrid', Block("site:batch", "day", MADRID)),
+        ('"logged@day":week', Block("logged@day", "week")),
+    ],
+)
+def test_any_name_may_stand_in_quotes(text, block):
+    assert Block.parse(text) == block
+
+
+@given(
+    st.text(st.sampled_from('ab:@" day'), min_size=1), st.sampled_from([None, *UNITS]),
+    st.sampled_from([None, MADRID]),
+)  # fmt: skip
+def test_words_say_the_whole_block_whatever_its_name(column, unit, zone):
+    block = Block(column, unit, zone if unit else None)
+    assert Block.parse(str(block)) == block
+
+
+@pytest.mark.parametrize(
+    "block",
+    [
+        Block("site:batch"), Block("logged:at", "day"), Block('"at"', "week", MADRID),
+        Block("plant"), Block("a by b"),
+    ],
+)  # fmt: skip
+def test_a_plan_carries_its_block_to_other_processes(block):
+    columns = Columns("wet_bulb_c", "power_kw", block=block.column)
+    plan = replace(Plan.simple(0.0, 30.0), columns=columns, block=str(block))
+    assert block_of(plan) == block
+    by_function = replace(plan, block=f"{block} by shift")
+    with pytest.raises(InputError, match="it is made by a function"):
+        block_of(by_function)
+
+
+def test_a_store_keeps_blocks_and_units_in_one_spelling():
+    plain = StoreSettings(block="logged_at:day", by=("plant",), period="logged_at:month")
+    quoted = StoreSettings(block='"logged_at":day', by=('"plant"',), period='"logged_at":month')
+    assert quoted == plain
+
+
+@pytest.mark.parametrize("text", ['"', '""', '"plant', '"plant"day', '"plant":', '"a"b"'])
+def test_quotes_that_hold_no_name_are_refused(text):
+    with pytest.raises(InputError) as caught:
+        Block.parse(text)
+    assert str(caught.value) == (
+        "--block must name a column, or a time column with a unit as in logged_at:day, but the "
+        f"quotes in {text} do not hold a name; write '\"site:batch\"' or '\"logged:at\":day'."
+    )
 
 
 def test_a_function_is_named_in_the_words():
@@ -63,7 +126,9 @@ def test_an_unknown_unit_is_refused_with_the_nearest_one():
         "--block must name a column, or a time column with a unit as in logged_at:day, but 'dya' "
         "is no unit; "
     )
-    assert "day" in caught.value.remedy
+    assert caught.value.remedy == (
+        "use 'day', or put quotes around a name that holds a colon, as in '\"logged_at:dya\"'"
+    )
 
 
 @pytest.mark.parametrize("zone", ["Europe/Nowhere", "../etc", ""])
@@ -262,10 +327,22 @@ def test_a_unit_needs_times():
 
 
 @pytest.mark.parametrize(
+    ("kind", "holds"), [(pa.date32(), "date32[day]"), (pa.date64(), "date64[ms]")]
+)
+def test_dates_have_no_hours(kind, holds):
+    with pytest.raises(InputError) as caught:
+        deal(pa.array([date(2026, 3, 1)], kind), Block("logged on", "hour"))
+    assert str(caught.value) == (
+        "--block must name a column of times when the unit is an hour, but 'logged on' holds "
+        f"{holds}, which tells no hours; write --block logged on:day."
+    )
+
+
+@pytest.mark.parametrize(
     ("column", "holds"),
     [
         (pa.array([datetime(2026, 3, 1, 4)], pa.timestamp("us")), "timestamp[us]"),
-        (pa.array([date(2026, 3, 1)], pa.date32()), "timestamp[s]"),
+        (pa.array([date(2026, 3, 1)], pa.date32()), "date32[day]"),
     ],
 )
 def test_a_zone_needs_instants(column, holds):
@@ -360,9 +437,50 @@ def test_a_single_block_is_refused():
     with pytest.raises(InputError) as caught:
         curve_of(table, block="plant")
     assert str(caught.value) == (
-        "--block must tell at least two blocks apart, but 'plant' is the same in all 2400 rows; "
+        "--block must tell at least two blocks apart, but 'plant' is the same in all 2,400 rows; "
         "name a finer block, or leave it out."
     )
+
+
+def test_blocks_that_share_a_fold_are_not_called_the_same():
+    # Both names go to one of two folds.
+    names = [name for name in map(str, range(20)) if fold_of_key(name, 2) == 0][:2]
+    table = readings().append_column("plant", pa.array(names * 1200))
+    with pytest.raises(InputError) as caught:
+        curve_of(table, block="plant", folds=2)
+    assert str(caught.value) == (
+        "--block must tell at least two blocks apart, but the 2 blocks of 'plant' were dealt to "
+        "one fold; name a finer block, or leave it out."
+    )
+
+
+OFFSETS = {"+02:00": True, "-0530": True, "+01": True, "Z": False, "+00:00": False, "": False}
+
+
+@pytest.mark.parametrize("offset", OFFSETS)
+def test_an_offset_in_a_csv_file_is_told_where_days_begin_at_another_midnight(tmp_path, offset):
+    rng = np.random.default_rng(4)
+    lines = ["logged_at,wet_bulb_c,power_kw"]
+    for place in range(40 * 24):
+        moment = datetime(2026, 3, 1) + timedelta(hours=place)
+        x = rng.uniform(0.0, 25.0)
+        lines.append(f"{moment.isoformat()}{offset},{x},{cases.mean_power_kw(x) + rng.normal()}")
+    path = tmp_path / "readings.csv"
+    path.write_text("\n".join(lines))
+    made = curve_of(str(path))
+    told = [one.text for one in made.cautions if one.code == "midnight UTC"]
+    assert told == OFFSETS[offset] * [
+        "logged_at is written with an offset from UTC, which reading turns into UTC: each day "
+        "begins at midnight UTC. Name the zone of the place, as in --block "
+        "logged_at:day@Europe/Madrid."
+    ]
+    if offset == "+02:00":
+        # 40 days of the place touch 41 of UTC; a zone two hours ahead gives the former.
+        assert made.trace["blocks"] == 41
+        zoned = curve_of(str(path), block="logged_at:day@Etc/GMT-2")
+        assert zoned.trace["blocks"] == 40
+        for quiet in (zoned, curve_of(str(path), block="logged_at:hour")):
+            assert "midnight UTC" not in {one.code for one in quiet.cautions}
 
 
 def test_few_blocks_make_thin_points_and_a_caution():

@@ -6,7 +6,12 @@ import numpy as np
 import pytest
 
 from fastsmooth import Band, Reading, Smoothing, make_curve
+from fastsmooth.blocks import fold_of_key
+from fastsmooth.curve import OUTSIDE, THIN
+from fastsmooth.store.settings import StoreSettings
+from fastsmooth.store.update import update_store
 from tests import cases
+from tests.store_tools import write_day
 
 
 def curve_of(x, y, *, reading=None, smoothing=None, band=None, **columns):
@@ -175,7 +180,10 @@ def test_mostly_thin():
     x, y = clean(150)
     made = curve_of(x, y, smoothing=Smoothing(bandwidth=0.5))
     assert "mostly thin" in codes(made)
-    assert "of the points have too few rows" in text(made, "mostly thin")
+    assert "% of the points have too few rows. The curve says little there." in text(
+        made, "mostly thin"
+    )
+    assert "folds" not in text(made, "mostly thin")
     gentle = curve_of(x, y, smoothing=Smoothing(bandwidth=0.5), band=Band(least_rows=0.0))
     assert "mostly thin" not in codes(gentle)
 
@@ -220,8 +228,9 @@ def test_repeated_far_value(code_kw):
         y[::200] = 0.0
         made = curve_of(x, y)
     assert "repeated far value" in codes(made)
-    assert f"power_kw is {code_kw:g} in 20 of 4000 sampled rows" in text(made, "repeated far value")
-    assert f"--where 'power_kw <> {code_kw:g}'" in text(made, "repeated far value")
+    said = text(made, "repeated far value")
+    assert f"power_kw is {code_kw:g} in 20 of 4,000 sampled rows" in said
+    assert f"--where 'power_kw <> {code_kw:g}'" in said
 
 
 def test_single_spikes_and_rounded_readings_are_no_codes():
@@ -235,10 +244,186 @@ def test_few_blocks():
     x, y = clean(3000)
     day = np.repeat(np.arange(5), 600)
     made = curve_of(x, y, reading=Reading(block="day"), day=day)
-    assert "few blocks" in codes(made)
-    assert "There are only 5 blocks by day" in text(made, "few blocks")
+    assert {"few blocks", "mostly thin"} <= set(codes(made))
+    assert "few folds" not in codes(made)
+    assert text(made, "few blocks") == (
+        "There are only 5 blocks by day: fewer than 12 say little about how much blocks differ, so "
+        "every point is thin and the flat zone rests on next to nothing."
+    )
+    ten = curve_of(x, y, reading=Reading(block="day"), day=np.repeat(np.arange(10), 300))
+    assert text(ten, "few blocks").endswith("so every point is thin.")
     many = curve_of(x, y, reading=Reading(block="day"), day=np.repeat(np.arange(60), 50))
     assert codes(many) == []
+
+
+def by_day(folds, days=60, n=6000, key=None):
+    x, y = clean(n)
+    day = np.repeat(np.arange(days), n // days)
+    return curve_of(
+        x, y, reading=Reading(block="day", folds=folds), day=day if key is None else key(day)
+    )
+
+
+@pytest.mark.parametrize(
+    ("folds", "so"),
+    [
+        (4, "every point is thin and the flat zone rests on next to nothing"),
+        (7, "every point is thin and the flat zone rests on next to nothing"),
+        (8, "every point is thin"),
+        (11, "every point is thin"),
+    ],
+)
+def test_few_folds_of_many_blocks_are_the_reason_and_are_named(folds, so):
+    """Rows are many: what thins the curve are the folds, and the sentence must say so."""
+    made = by_day(folds)
+    assert codes(made) == ["few folds", "mostly thin"]
+    assert text(made, "few folds") == (
+        f"The 60 blocks by day lie in only {folds} folds, so {so}. Leave out --folds."
+    )
+    assert (made.status[made.status != OUTSIDE] == THIN).all()
+    assert (made.effective_rows[10:-10] > 30.0).all()
+    said = text(made, "mostly thin")
+    assert said.endswith(
+        "% of the points have rows enough, but of too few folds (fewer than 12, or so unequal that "
+        "their error has fewer than 4 degrees of freedom). The curve says little there."
+    )
+
+
+def test_folds_enough_raise_none():
+    assert codes(by_day(12)) == []
+
+
+def test_blocks_that_chance_deals_to_few_folds_ask_for_a_finer_block():
+    """Fourteen names, of which some share a fold."""
+    made = by_day(32, days=14, n=7000, key=lambda day: np.array([f"batch {one}" for one in day]))
+    held = made.trace["folds_with_rows"]
+    assert held == len({fold_of_key(f"batch {one}", 32) for one in range(14)}) < 12
+    assert text(made, "few folds") == (
+        f"The 14 blocks by day lie in only {held} folds, so every point is thin. Name a finer "
+        "block."
+    )
+
+
+@pytest.mark.parametrize("folds", [2, 7])
+def test_a_flat_zone_of_few_folds_rests_on_next_to_nothing(folds):
+    made = curve_of(*clean(), reading=Reading(folds=folds))
+    assert codes(made) == ["few folds"]
+    assert text(made, "few folds") == (
+        f"The rows lie in only {folds} folds, so the flat zone rests on next to nothing. Leave out "
+        "--folds."
+    )
+    assert codes(curve_of(*clean(), reading=Reading(folds=8))) == []
+
+
+def test_robust_errors_need_folds_too():
+    made = curve_of(*clean(), reading=Reading(folds=9), smoothing=Smoothing(robust=True))
+    assert "so every point is thin. Leave out --folds." in text(made, "few folds")
+    assert "but of too few folds" in text(made, "mostly thin")
+
+
+@pytest.mark.parametrize("named", [False, True])
+def test_unequal_folds(named):
+    """Batch 5 is as long as twenty others: what width and band rest on are few equal folds."""
+    lengths = np.full(40, 100)
+    lengths[[5, 17, 29]] = 2000
+    batch = np.repeat(np.arange(40), lengths)
+    x, y = clean(batch.size)
+    key = np.array([f"batch {one}" for one in batch]) if named else batch
+    made = curve_of(x, y, reading=Reading(block="batch"), batch=key)
+    assert "unequal folds" in codes(made)
+    said = text(made, "unequal folds")
+    held = made.trace["folds_with_rows"]
+    deal = {}
+    for one, rows in enumerate(lengths.tolist()):
+        fold = fold_of_key(f"batch {one}" if named else one, 32)
+        deal[fold] = deal.get(fold, 0) + rows
+    worth = batch.size**2 / sum(rows**2 for rows in deal.values())
+    assert said.startswith(
+        f"The blocks by batch fill {held} folds so unevenly that these are worth {worth:.0f} equal "
+        "ones, which is what width and band rest on. "
+    )
+    assert said.endswith(
+        "Whole numbers or times as blocks are dealt more evenly than other values."
+        if named
+        else "Name a block of more even size."
+    )
+    even = curve_of(x, y, reading=Reading(block="batch"), batch=np.arange(batch.size) // 245)
+    assert codes(even) == []
+
+
+def times(days=30, per_day=96):
+    """Readings over time: a trend, a level of each day, noise."""
+    rng = np.random.default_rng(8)
+    n = days * per_day
+    stamps = np.datetime64("2026-03-01", "s") + np.arange(n) * (86_400 // per_day)
+    share = np.arange(n) / n
+    level = np.repeat(rng.normal(0.0, 0.3, days), per_day)
+    return stamps, 20.0 + np.sin(6.0 * share) + level + rng.normal(0.0, 0.5, n)
+
+
+def test_days_of_a_curve_over_time_leave_most_rows_without_a_vote():
+    stamps, y = times()
+    data = {"logged_at": stamps, "power_kw": y}
+    reading = Reading(block="logged_at:day")
+    made = make_curve(data, "logged_at", "power_kw", reading=reading)
+    assert "few rows vote" in codes(made)
+    assert "rows alone" not in codes(made)
+    voting = 2880 - made.search.rows_alone
+    assert 0 < voting < 1440
+    assert text(made, "few rows vote") == (
+        f"Only {voting:,.0f} of 2,880 rows have rows of other folds on both sides within the "
+        "narrowest width, so the choice of the bandwidth and its flat zone rest on these few. This "
+        "is so where x runs along with the blocks, as time does with its days: they cannot choose "
+        "it there, so give --bandwidth."
+    )
+    given = make_curve(
+        data, "logged_at", "power_kw", reading=reading, smoothing=Smoothing(bandwidth="4h")
+    )
+    low, _ = given.search.trails["local-linear"].flat_zone
+    assert given.bandwidth < low
+    # The caller may well be right: hardly a row was asked.
+    assert "width outside the flat zone" not in codes(given)
+    assert "few rows vote" in codes(given)
+    across = curve_of(
+        np.random.default_rng(1).permutation(y.size), y, reading=reading, logged_at=stamps
+    )
+    assert "few rows vote" not in codes(across)
+
+
+def test_votes_are_those_of_the_criterion_that_chose():
+    """All rows vote on leave-one-out, whatever leaving out days would ask."""
+    stamps, y = times()
+    made = make_curve(
+        {"logged_at": stamps, "power_kw": y}, "logged_at", "power_kw",
+        reading=Reading(block="logged_at:day"), smoothing=Smoothing(criterion="leave-one-out"),
+    )  # fmt: skip
+    assert made.search.rows_alone == 0.0
+    assert "few rows vote" not in codes(made)
+
+
+def test_votes_are_counted_in_rows_whatever_their_weight():
+    stamps, y = times()
+    weighed = {"logged_at": stamps, "power_kw": y, "precision": np.full(y.size, 0.01)}
+    alone = [
+        make_curve(
+            weighed, "logged_at", "power_kw", weight=weight, reading=Reading(block="logged_at:day"),
+            smoothing=Smoothing(engine="binned", bandwidth="1d"),
+        ).search.rows_alone
+        for weight in (None, "precision")
+    ]  # fmt: skip
+    assert alone[1] == pytest.approx(alone[0], rel=1e-9)
+    assert alone[0] > 1000.0
+
+
+def test_likeness_along_time_is_not_answered_with_days():
+    stamps, _ = times()
+    noise = correlated(stamps.size, 0.9)[1]
+    made = make_curve({"logged_at": stamps, "power_kw": noise}, "logged_at", "power_kw",
+                      smoothing=Smoothing(bandwidth="5d"))  # fmt: skip
+    assert text(made, "neighbouring rows alike").endswith(
+        "Give --bandwidth, and --block with times that last longer than that and are short beside "
+        "it."
+    )
 
 
 def test_cautions_are_in_the_table_and_come_back():
@@ -255,3 +440,15 @@ def test_the_remedy_for_a_far_value_can_be_pasted():
     y[:40] = -9999.0
     made = make_curve({"x": x, "code d": y}, "x", "code d")
     assert """--where '"code d" <> -9999'""" in text(made, "repeated far value")
+
+
+def test_a_store_of_few_folds_asks_for_another_store(tmp_path):
+    """Its rows were dealt when they were counted."""
+    data = tmp_path / "data"
+    data.mkdir()
+    for day in range(3):
+        write_day(data, day)
+    settings = StoreSettings("wet_bulb_c", "power_kw", folds=4)
+    update_store(tmp_path / "store", data, settings)
+    made = make_curve(tmp_path / "store")
+    assert text(made, "few folds").endswith("Make another store without --folds.")

@@ -2,6 +2,7 @@
 
 import json
 import os
+import re
 import subprocess
 import sys
 
@@ -33,6 +34,8 @@ def plant(tmp_path_factory):
                 "three": np.arange(3000) % 3 + 0.0,
                 "constant": np.full(3000, 4.0),
                 "signed": rng.normal(0.0, 1.0, 3000),
+                "site:batch": (np.arange(3000) + 3000 * month) // 150,
+                "logged_on": stamps.astype("datetime64[D]"),
             }
         )
         pq.write_table(table, folder / f"{month}.parquet", row_group_size=1000)
@@ -118,6 +121,106 @@ def test_block_and_landmarks(plant, capsys):
     assert "crosses 30.5 at" in told
 
 
+def curve_lines_of(plant, capsys, *options):
+    code, told, complaints = run(
+        capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", *options
+    )
+    assert (code, complaints) == (0, "")
+    # Long lines go on below their text.
+    return " ".join(told.split())
+
+
+@pytest.mark.parametrize("block", ['"site:batch"', '"logged_at":day', "logged_at:day"])
+def test_a_block_in_quotes(plant, capsys, block):
+    told = curve_lines_of(plant, capsys, "--block", block)
+    said = block if ":b" in block else "logged_at:day"
+    assert f" by {said}, dealt to " in told
+    assert f"blocks {40 if ':b' in block else 42} by" in told
+
+
+def test_units_in_quotes(plant, tmp_path, capsys):
+    out = tmp_path / "curves.parquet"
+    code, _, _ = run(
+        capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", "--by", '"site:batch"',
+        "--bandwidth", "5", "--out", out, "--quiet",
+    )  # fmt: skip
+    assert code == 0
+    assert list(load_curve(out).curves) == [(batch,) for batch in range(40)]
+
+
+def test_folds_that_hold_rows_are_counted(plant, capsys):
+    told = curve_lines_of(plant, capsys, "--block", "logged_at:month", "--landmarks")
+    assert (
+        "blocks 2 by logged_at:month, dealt to 2 of 32 folds; the width rests on leaving out folds"
+    ) in told
+    assert "band none, because no window meets enough folds to tell how much they differ; " in told
+    assert "pointwise" not in told
+    assert "landmark none, because no point is supported: all are thin or outside" in told
+
+
+def test_what_is_supported_has_a_band_and_all_folds(plant, capsys):
+    told = curve_lines_of(plant, capsys, "--block", '"site:batch"', "--crossing", "1000")
+    assert "width and band rest on leaving out folds" in told
+    assert "band pointwise 95 %" in told
+    assert "1000 is not reached on any supported stretch" in told
+
+
+def test_nothing_supported_is_no_missed_crossing(plant, capsys):
+    few = ("--block", "logged_at:day", "--folds", "4", "--crossing", "30.5")
+    told = curve_lines_of(plant, capsys, *few)
+    assert "landmark none, because no point is supported" in told
+    assert "is not reached" not in told
+    code, facts, _ = run(
+        capsys, "curve", plant, "--x", "wet_bulb_c", "--y", "power_kw", "--json", *few
+    )
+    assert code == 0
+    assert json.loads(facts)["landmark_stretches"] == []
+    assert (json.loads(facts)["blocks"], json.loads(facts)["folds_with_rows"]) == (42, 4)
+
+
+def test_a_curve_of_no_rows_near_any_point_has_no_band(plant, capsys):
+    told = curve_lines_of(plant, capsys, "--at", "-1000,1000")
+    assert "band none, because no point has rows near enough; " in told
+
+
+def test_rows_that_could_judge_are_counted(plant, capsys):
+    code, told, _ = run(
+        capsys, "curve", plant, "--x", "logged_at", "--y", "power_kw", "--block", "logged_at:day",
+        "--bandwidth", "4h",
+    )  # fmt: skip
+    told = " ".join(told.split())
+    assert code == 0
+    assert re.search(r"would do as well \(flat zone\), by the \d+ rows that could judge", told)
+    assert "caution Only " in told
+    assert "resemble each other" not in told
+
+
+def test_large_counts_have_separators(plant, tmp_path, capsys):
+    out = tmp_path / "curve.arrow"
+    told = curve_lines_of(plant, capsys, "--points", "2000", "--engine", "binned", "--out", out)
+    assert "points 2,000 from" in told
+    assert "engine binned, 8,192 bins" in told
+    code, told, _ = run(capsys, "info", out)
+    told = " ".join(told.split())
+    assert code == 0
+    assert ", points 2,000, landmarks False" in told
+    assert re.search(r"0.parquet \(\d+,\d{3} bytes, 3,000 rows\)", told)
+
+
+@pytest.mark.parametrize("command", ["curve", "search", "compare", "update"])
+def test_help_tells_of_zones(capsys, command):
+    code, told, _ = run(capsys, command, "--help")
+    assert code == 0
+    assert "--block COLUMN[:UNIT[@ZONE]]" in told
+
+
+def test_help_tells_when_days_begin_and_how_to_quote(capsys):
+    told = " ".join(run(capsys, "curve", "--help")[1].split())
+    assert "midnight of the column's own zone, which is UTC for CSV times with an offset" in told
+    assert "logged_at:day@Europe/Madrid" in told
+    assert """'"logged:at":day'""" in told
+
+
 def test_info_of_data_and_of_a_curve(plant, tmp_path, capsys):
     code, told, _ = run(capsys, "info", plant)
     assert code == 0
@@ -163,7 +266,7 @@ REFUSALS = {
     ),
     "range empty": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--range", "900", "901"],
-        "6000 x below range",
+        "6,000 x below range",
     ),
     "no condition": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--where", "power_kw + 1"],
@@ -193,6 +296,20 @@ REFUSALS = {
     ),
     "block unit": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--block", "logged_at:dy"], "use 'day'",
+    ),
+    "hours of dates": (
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--block", "logged_on:hour"],
+        "--block must name a column of times when the unit is an hour, but 'logged_on' holds "
+        "date32[day], which tells no hours; write --block logged_on:day.",
+    ),
+    "colon without quotes": (
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--block", "site:batch"],
+        """'batch' is no unit; use one of 'hour', 'day', 'week', 'month', or put quotes around a """
+        """name that holds a colon, as in '"site:batch"'.""",
+    ),
+    "unit of another option": (
+        ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--by", "site:batch"],
+        """--by must name a column""",
     ),
     "criterion needs block": (
         ["{}", "--x", "wet_bulb_c", "--y", "power_kw", "--criterion", "leave-block-out"],

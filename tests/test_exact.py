@@ -38,12 +38,12 @@ def refusal(smoothing=EXACT, **options):
 def test_auto_is_exact_up_to_so_many_rows_and_says_why():
     few = curve(smoothing=Smoothing())
     assert few.trace["engine"]["name"] == "exact"
-    assert few.trace["engine"]["reason"] == f"at most {AUTO_ROWS} rows"
+    assert few.trace["engine"]["reason"] == f"at most {AUTO_ROWS:,} rows"
     assert few.trace["engine"]["error_in_noise_sd"] == 0.0
     many = cases.make_rows("uniform", AUTO_ROWS + 1, seed=1).columns()
     made = curve(many, Smoothing(widths=8))
     assert made.trace["engine"]["name"] == "binned"
-    assert made.trace["engine"]["reason"] == f"more than {AUTO_ROWS} rows"
+    assert made.trace["engine"]["reason"] == f"more than {AUTO_ROWS:,} rows"
 
 
 def test_auto_bins_for_a_kernel_without_an_end():
@@ -66,8 +66,8 @@ def test_engines_can_be_asked_for():
 def test_the_exact_engine_is_refused_beyond_its_memory():
     assert bytes_per_row(Columns("x", "y")) == 44
     assert refusal(Smoothing(engine="exact", memory_gigabytes=1e-4)) == (
-        "--engine exact must stay within --memory 0.0001 (gigabytes), but 4000 rows need 0.000176; "
-        "raise it to 0.00018, or take the binned engine."
+        "--engine exact must stay within --memory 0.0001 (gigabytes), but 4,000 rows need "
+        "0.000176; raise it to 0.00018, or take the binned engine."
     )
 
 

@@ -18,6 +18,7 @@ import fastsmooth.polars_frames
 from fastsmooth import make_curve, make_fleet, smooth
 from fastsmooth.curve import VALUES
 from fastsmooth.errors import InputError, ReadError
+from fastsmooth.frames import _Spooled
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.source import Columns, open_source
 from tests import cases
@@ -260,3 +261,11 @@ def test_polars_group_without_a_curve_says_why():
 
 def test_doctests_of_the_namespace_count():
     assert doctest.testmod(fastsmooth.polars_frames).attempted > 5
+
+
+def test_a_reader_of_what_was_written_first_must_say_how_it_is_written():
+    class Unfinished(_Spooled):
+        """Without `_write`."""
+
+    with pytest.raises(TypeError, match="_write"):
+        Unfinished("the stream", TABLE.schema)

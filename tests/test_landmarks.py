@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from fastsmooth import Band, Reading, Smoothing, make_curve
+from fastsmooth.curve import EDGE, OK
 
 DAYS, PER_DAY = 64, 40
 
@@ -17,9 +18,9 @@ def rows(seed, truth, x=None, noise=0.5, day_sd=0.0):
     return {"x": x, "y": y, "day": day}
 
 
-def marks(data, *, crossings=(), block=None, **smoothing):
+def marks(data, *, crossings=(), block=None, folds=32, **smoothing):
     made = make_curve(
-        data, "x", "y", reading=Reading(block=block, threads=1),
+        data, "x", "y", reading=Reading(block=block, folds=folds, threads=1),
         smoothing=Smoothing(**{"bandwidth": 1.0, "widths": 8, **smoothing}),
         band=Band(landmarks=True, crossings=crossings),
     )  # fmt: skip
@@ -81,6 +82,39 @@ def test_noise_around_a_straight_line_turns_nowhere():
         assert "highest" not in found
 
 
+@pytest.mark.parametrize("folds", [2, 3, 4])
+def test_few_folds_make_no_turns_out_of_noise(folds):
+    """Two folds that happen to agree are no proof: their error has one degree of freedom."""
+    turns = 0
+    for seed in range(20):
+        found = marks(rows(seed, lambda x: 0.0 * x), folds=folds, bandwidth=0.5)
+        turns += len(found.get("lowest", [])) + len(found.get("highest", []))
+    # A swing as large comes by chance in three of a thousand; each run has some twenty.
+    assert turns <= 4
+
+
+def test_few_folds_still_see_a_wave_that_stands_out():
+    found = marks(rows(2, wave, noise=0.05), folds=8)
+    assert [mark["x"] for mark in found["lowest"]] == pytest.approx([3 * np.pi / 2], abs=0.1)
+
+
+def test_where_landmarks_were_looked_for_is_told():
+    data = rows(7, step)
+    made = make_curve(
+        data, "x", "y", reading=Reading(block="day"), smoothing=Smoothing(bandwidth=1.0, widths=8),
+        band=Band(landmarks=True),
+    )  # fmt: skip
+    ((low, high),) = made.trace["landmark_stretches"]
+    good = made.x[(made.status == OK) | (made.status == EDGE)]
+    assert (low, high) == (good[0], good[-1])
+    made = make_curve(
+        data, "x", "y", reading=Reading(block="day", folds=4),
+        smoothing=Smoothing(bandwidth=1.0, widths=8), band=Band(landmarks=True, crossings=(0.0,)),
+    )  # fmt: skip
+    assert made.trace["landmark_stretches"] == []
+    assert make_curve(data, "x", "y").trace["landmark_stretches"] is None
+
+
 def test_a_line_without_noise_is_steepest_nowhere():
     found = marks(rows(3, lambda x: 2.0 * x, noise=0.0), crossings=(7.0,))
     assert "steepest" not in found
@@ -117,3 +151,6 @@ def test_a_log_scale_gives_places_in_terms_of_x():
     place = next(m for m in made.trace["landmarks"] if m["kind"] == "crossing")
     assert place["x"] == pytest.approx(np.exp(2.5), rel=0.05)
     assert place["lower"] < place["x"] < place["upper"]
+    ((low, high),) = made.trace["landmark_stretches"]
+    assert low == pytest.approx(1.0, abs=0.02)
+    assert high == pytest.approx(np.exp(5.0), rel=0.02)

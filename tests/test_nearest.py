@@ -209,7 +209,7 @@ def test_neighbours_go_with_nothing_else():
         ({"band": Band(kind="simultaneous")}, "--band simultaneous must be left out"),
         (
             {"smoothing": Smoothing(estimator="nearest", neighbours=3000)},
-            "--neighbours must be below the number of rows, 3000, but it is 3000",
+            "--neighbours must be below the number of rows, 3,000, but it is 3,000",
         ),
         (
             {"smoothing": Smoothing(estimator="nearest", memory_gigabytes=1e-4)},

@@ -19,7 +19,7 @@ CASES = [
      "leave it out."),
     (Reading, "threads", True, "--threads must be a whole number, 1 or more, but it is True; "
      "leave it out."),
-    (Reading, "folds", 32.0, "--folds must be a whole number between 2 and 1024, but it is 32.0; "
+    (Reading, "folds", 32.0, "--folds must be a whole number between 2 and 1,024, but it is 32.0; "
      "leave it out."),
     (Reading, "block", 5, "--block must name a column, with or without a unit, but it is 5; "
      "leave it out."),
@@ -27,7 +27,7 @@ CASES = [
     (Reading, "strict", "no", "--strict must be True or False, but it is 'no'; leave it out."),
     (Reading, "scale", None, "--scale must be one of linear, log, but it is None; use one of "
      "'linear', 'log'."),
-    (Smoothing, "widths", 48.5, "--widths must be a whole number between 8 and 1000, but it is "
+    (Smoothing, "widths", 48.5, "--widths must be a whole number between 8 and 1,000, but it is "
      "48.5; leave it out."),
     (Smoothing, "kernel", None, "--kernel must be one of biweight, epanechnikov, uniform, "
      "triangular, triweight, tricube, gaussian, but it is None; use one of 'biweight', "
@@ -51,8 +51,8 @@ CASES = [
      "percent."),
     (Band, "level", NAN, "--level must lie between 0 and 1, but it is nan; write 0.95 for 95 "
      "percent."),
-    (Band, "points", 10.5, "--points must be a whole number between 2 and 1000000, but it is 10.5; "
-     "leave it out."),
+    (Band, "points", 10.5, "--points must be a whole number between 2 and 1,000,000, but it is "
+     "10.5; leave it out."),
     (Band, "least_rows", INF, "--least-rows must be a finite number, 0 or more, but it is inf; "
      "leave it out."),
     (Band, "landmarks", "no", "--landmarks must be True or False, but it is 'no'; leave it out."),

@@ -413,6 +413,6 @@ def test_large_arrays_are_cut_into_tasks():
     n = (1 << 20) + 5
     with open_source({"wet_bulb_c": np.arange(n) * 1.0, "power_kw": np.zeros(n)}, XY) as source:
         assert [task.rows for task in source.tasks] == [1 << 20, 5]
-        assert source.tasks[1].label == "rows 1048576 to 1048580"
+        assert source.tasks[1].label == "rows 1,048,576 to 1,048,580"
         totals = list(source.map_tasks(sum_of, 2))
     assert sum(total for _, total in totals) == n * (n - 1) / 2

@@ -182,8 +182,8 @@ def test_csv_integers_beyond_2_to_the_53_are_refused(tmp_path):
     with source, pytest.raises(InputError) as caught:
         gather(source)
     assert str(caught.value) == (
-        "--x must hold integers below 2^53 (9007199254740992), which a float64 keeps exactly, but "
-        f"'x' in '{tmp_path}/a.csv' holds larger ones; subtract an offset from the column, or "
+        "--x must hold integers below 2^53 (9,007,199,254,740,992), which a float64 keeps exactly, "
+        f"but 'x' in '{tmp_path}/a.csv' holds larger ones; subtract an offset from the column, or "
         "divide it, first."
     )
 
@@ -242,12 +242,12 @@ class SpentStream(Stream):
 def test_stream_that_is_spent_is_no_empty_table():
     with open_source(SpentStream(TABLE), XY) as source:
         assert gather(source).rows == ROWS
-        with pytest.raises(ReadError, match="the stream gave 1000 rows first and 0 rows then"):
+        with pytest.raises(ReadError, match="the stream gave 1,000 rows first and 0 rows then"):
             gather(source)
     # A time axis looks at the first time when opening, which is a pass too.
     with (
         open_source(SpentStream(TABLE), Columns("logged_at", "x")) as source,
-        pytest.raises(ReadError, match="the stream gave 1000 rows first and 0 rows then"),
+        pytest.raises(ReadError, match="the stream gave 1,000 rows first and 0 rows then"),
     ):
         gather(source)
 
@@ -266,8 +266,8 @@ def test_stream_that_differs_on_the_second_pass():
         with pytest.raises(ReadError) as caught:
             gather(source)
     assert str(caught.value) == (
-        "DATA must deliver the same rows on each pass, but the stream gave 1000 rows first and 900 "
-        "rows then; write it to a Parquet file and name that."
+        "DATA must deliver the same rows on each pass, but the stream gave 1,000 rows first and "
+        "900 rows then; write it to a Parquet file and name that."
     )
 
 

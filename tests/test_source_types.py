@@ -77,8 +77,8 @@ def test_integers_beyond_2_to_the_53_are_refused(value, as_dictionary):
     with open_source(table, XY) as source, pytest.raises(InputError) as caught:
         gather(source)
     assert str(caught.value) == (
-        "--y must hold integers of at most 2^53 (9007199254740992), which a float64 keeps "
-        f"exactly, but 'y' has {value}; subtract an offset from the column, or divide it, first."
+        "--y must hold integers of at most 2^53 (9,007,199,254,740,992), which a float64 keeps "
+        f"exactly, but 'y' has {value:,}; subtract an offset from the column, or divide it, first."
     )
 
 

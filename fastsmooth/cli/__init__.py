@@ -7,10 +7,14 @@ from collections.abc import Sequence
 
 import click
 
+from fastsmooth.cli.bench import bench
+from fastsmooth.cli.compare import compare
 from fastsmooth.cli.curve import curve
 from fastsmooth.cli.demo import demo
 from fastsmooth.cli.info import info
+from fastsmooth.cli.score import score
 from fastsmooth.cli.search import search
+from fastsmooth.cli.update import update
 from fastsmooth.errors import (
     EXIT_INTERRUPTED,
     EXIT_OK,
@@ -18,7 +22,7 @@ from fastsmooth.errors import (
     FastsmoothError,
     InputError,
 )
-from fastsmooth.near import advise, find_near
+from fastsmooth.near import find_near
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -61,8 +65,9 @@ def _reword(misuse: click.ClickException) -> str:
         known = [] if context is None else [
             one for each in context.command.get_params(context) for one in each.opts
         ]  # fmt: skip
-        near = find_near(misuse.option_name, known)
-        remedy = advise(misuse.option_name, known) if near else help_
+        # Dashes, which all options share, would make strangers look alike.
+        near = find_near(misuse.option_name.lstrip("-"), [one.lstrip("-") for one in known])
+        remedy = "use " + " or ".join(f"'--{one}'" for one in near) if near else help_
         what = f"be an option of '{context.command_path}'" if context else "be a known option"
         return str(InputError(misuse.option_name, what, "there is none of this name", remedy))
     message = misuse.format_message()
@@ -84,5 +89,5 @@ def commands() -> None:
     """
 
 
-for _command in (curve, search, info, demo):
+for _command in (curve, search, score, info, demo, bench, update, compare):
     commands.add_command(_command)

@@ -23,6 +23,7 @@ from fastsmooth.settings import (
 
 if TYPE_CHECKING:
     from fastsmooth.curve import Curve
+    from fastsmooth.fleet import Fleet
     from fastsmooth.passes import Progress
     from fastsmooth.settings import Band, Reading, Smoothing
 
@@ -58,9 +59,12 @@ DATA_OPTIONS = with_options(
     click.option("--threads", type=int, metavar="N", help="Default: all processors."),
     click.option("--folds", type=int, default=32, show_default=True, metavar="N",
                  help="Parts of the data for standard errors."),
-    click.option("--block", metavar="COLUMN[:UNIT]",
+    click.option("--block", metavar="COLUMN[:UNIT[@ZONE]]",
                  help="Rows that may depend on each other: a column, or a time column with hour, "
-                 "day, week or month, as in logged_at:day."),
+                 "day, week or month, as in logged_at:day. Days, weeks and months begin at "
+                 "midnight of the column's own zone, which is UTC for CSV times with an offset; "
+                 "name another as in logged_at:day@Europe/Madrid. A name that holds a colon "
+                 "stands in double quotes, as in '\"logged:at\":day'."),
     click.option("--timeout", type=float, default=DEFAULT_TIMEOUT_SECONDS, show_default=True,
                  metavar="SECONDS", help="How long a silent object store is waited for."),
     click.option("--last", metavar="SPAN",
@@ -83,6 +87,13 @@ SMOOTHING_OPTIONS = with_options(
     choice("--engine", ENGINES, "Sums over bins, or over every row in memory"),
     click.option("--memory", type=float, default=4.0, show_default=True, metavar="GIGABYTES",
                  help="What the exact engine may take."),
+)  # fmt: skip
+UNIT_OPTIONS = with_options(
+    click.option("--by", multiple=True, metavar="COLUMN[:UNIT[@ZONE]]",
+                 help="One curve for each value of this column, or of a time column's hours, days, "
+                 "weeks or months, as in logged_at:month, spelled like --block (may be repeated)."),
+    click.option("--shared-bandwidth", is_flag=True,
+                 help="With --by: one width for all units, chosen jointly."),
 )  # fmt: skip
 BAND_OPTIONS = with_options(
     click.option("--level", type=float, default=0.95, show_default=True, metavar="SHARE",
@@ -170,9 +181,20 @@ def check_given(data: tuple[str, ...], options: dict[str, Any]) -> None:
 
 
 def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> Curve:
-    """Call the API with what the three groups of options say."""
+    """Call the API for one curve with what the three groups of options say."""
     from fastsmooth.api import make_curve
 
+    return make_curve(**_arguments(data, options), progress=progress)
+
+
+def make_many(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> Fleet:
+    """Call the API for curves of many units with what the groups of options say."""
+    from fastsmooth.manyunits import make_fleet
+
+    return make_fleet(**_arguments(data, options), progress=progress)
+
+
+def _arguments(data: tuple[str, ...], options: dict[str, Any]) -> dict[str, Any]:
     check_given(data, options)
     reading = _reading(
         **_take(options, (
@@ -198,7 +220,7 @@ def make(data: tuple[str, ...], options: dict[str, Any], progress: Progress) -> 
         "limits",
     )
     band = _band(**_take(options, names)) if "level" in options else None
-    return make_curve(
-        data[0] if len(data) == 1 else list(data),
-        reading=reading, smoothing=smoothing, band=band, progress=progress, **options,
-    )  # fmt: skip
+    whole = data[0] if len(data) == 1 else list(data)
+    return {
+        "data": whole, "reading": reading, "smoothing": smoothing, "band": band, **options
+    }  # fmt: skip

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from collections.abc import Iterator
 
     from fastsmooth.curve import Curve
+    from fastsmooth.fleet import Fleet
     from fastsmooth.passes import Progress
 
 
@@ -26,6 +27,20 @@ def tell_curve(made: Curve, written: list[str], as_json: bool, quiet: bool) -> N
         lines = curve_lines(made)
         if written:
             lines.append(f"wrote      {', '.join(written)}")
+        print_lines([*lines, "", PRUDENCE])
+
+
+def tell_fleet(made: Fleet, written: list[str], as_json: bool, quiet: bool) -> None:
+    """Print curves of many units in a few lines, or as JSON."""
+    from fastsmooth.fleetwords import fleet_facts, fleet_lines
+    from fastsmooth.summary import PRUDENCE
+
+    if as_json:
+        print_json({**fleet_facts(made), "written": written})
+    elif not quiet:
+        lines = fleet_lines(made)
+        if written:
+            lines += ["", f"wrote      {', '.join(written)}"]
         print_lines([*lines, "", PRUDENCE])
 
 
@@ -51,8 +66,8 @@ def print_lines(lines: list[str]) -> None:
 
 
 @contextmanager
-def show_progress(quiet: bool) -> Iterator[Progress]:
-    """Show progress on stderr, on a terminal only."""
+def show_progress(quiet: bool, counted: str = "rows") -> Iterator[Progress]:
+    """Show progress on stderr, on a terminal only; `counted` names what its numbers count."""
     from fastsmooth.passes import silent
 
     if quiet or not sys.stderr.isatty():
@@ -70,6 +85,6 @@ def show_progress(quiet: bool) -> Iterator[Progress]:
 
         def show(stage: str, rows: int, of: int | None) -> None:
             done = {"total": of, "completed": rows} if of else {"total": None}
-            bar.update(task, description=stage, rows=f"{rows:,} rows" if rows else "", **done)
+            bar.update(task, description=stage, rows=f"{rows:,} {counted}" if rows else "", **done)
 
         yield show

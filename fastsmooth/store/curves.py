@@ -14,11 +14,6 @@ from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.store.opening import Store, Window, reading_of, with_store
 from fastsmooth.store.settings import StoreSettings
 
-_REMEDIES = {
-    "Narrow --range for finer bins.": "Make another store with more --bins.",
-    "Leave out --folds.": "Make another store without --folds.",
-}
-
 
 def curve_of_store(
     path: str | os.PathLike[str],
