@@ -195,7 +195,7 @@ def curve_from_table(
     """
     smoothing = settings_or_default("smoothing", smoothing, Smoothing)
     band = settings_or_default("band", band, Band)
-    check_rows_spared(smoothing)
+    check_rows_spared(smoothing, band, "a table")
     plan = table.plan
     reading = Reading(where=plan.where, scale=plan.scale, folds=plan.folds, block=block_of(plan))
     if threads is not None:
@@ -212,20 +212,33 @@ def curve_from_table(
         )
 
 
-def check_rows_spared(smoothing: Smoothing) -> None:
-    """Refuse settings that ask for every row where only sums are at hand.
+def check_rows_spared(smoothing: Smoothing, band: Band, kept: str) -> None:
+    """Refuse settings that ask for rows where only sums are at hand.
+
+    Parameters
+    ----------
+    smoothing, band : Smoothing, Band
+        What was asked for.
+    kept : str
+        What keeps the sums, as ``a store``.
 
     Raises
     ------
     InputError
         They do.
     """
-    if smoothing.estimator == NEAREST or smoothing.engine == "exact":
-        raise InputError(
-            "smoothing=", "leave rows alone where only a table is at hand",
-            f"estimator {smoothing.estimator} with engine {smoothing.engine} needs every row",
-            "take local-linear or local-constant, and leave engine= out",
-        )  # fmt: skip
+    asked = {
+        f"--estimator {NEAREST}": smoothing.estimator == NEAREST,
+        "--engine exact": smoothing.engine == "exact",
+        "--robust": smoothing.robust,
+        "--limits": bool(band.limits),
+    }
+    for option, given in asked.items():
+        if given:
+            raise InputError(
+                option, "come with data files", f"{kept} keeps no rows",
+                "name the files, or leave it out",
+            )  # fmt: skip
 
 
 def curve_of_counted(

@@ -687,7 +687,9 @@ def test_a_sample_with_the_number_of_rows_plans_long_runs(readings):
 
 def test_a_plan_may_have_more_bins(readings):
     assert fastsmooth.plan_for(readings, X, Y, bins=16_384).bins == 16_384
-    with pytest.raises(InputError, match=r"^bins= must be between 512 and [0-9,]+, but it is 4; leave"):
+    with pytest.raises(
+        InputError, match=r"^bins= must be between 512 and [0-9,]+, but it is 4; leave"
+    ):
         fastsmooth.plan_for(readings, X, Y, bins=4)
 
 
@@ -720,11 +722,19 @@ def test_rows_outside_the_plan_are_told(folder):
     assert "outside the plan's range 5 to 10 and were left out" in told["rows outside the plan"]
 
 
-@pytest.mark.parametrize("smoothing", [Smoothing(estimator="nearest"), Smoothing(engine="exact")])
-def test_what_needs_rows_is_refused(folder, smoothing):
+@pytest.mark.parametrize(
+    "asked",
+    [
+        {"smoothing": Smoothing(estimator="nearest")},
+        {"smoothing": Smoothing(engine="exact")},
+        {"smoothing": Smoothing(robust=True)},
+        {"band": fastsmooth.Band(limits=(0.05, 0.95))},
+    ],
+)
+def test_what_needs_rows_is_refused(folder, asked):
     table = local_table(folder, fastsmooth.plan_for(folder, X, Y))
-    with pytest.raises(InputError, match=r"^smoothing= must leave rows alone"):
-        fastsmooth.curve_from_table(table, smoothing=smoothing)
+    with pytest.raises(InputError, match=r"must come with data files, but a table keeps no rows"):
+        fastsmooth.curve_from_table(table, **asked)
 
 
 def test_an_empty_table_is_refused(folder):

@@ -13,7 +13,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from fastsmooth import InputError, Reading, Smoothing, StoreSettings, make_curve, search_bandwidth
+from fastsmooth import (
+    Band,
+    InputError,
+    Reading,
+    Smoothing,
+    StoreSettings,
+    make_curve,
+    search_bandwidth,
+)
 from fastsmooth import open_store as opened
 from fastsmooth import update_store as update
 from fastsmooth.blocks import fold_of_number
@@ -245,6 +253,50 @@ def test_a_moved_file_is_not_counted_twice(tmp_path):
     assert store.manifest.used == 3 * 240
     assert store.entries[1].path == str(moved)
     assert not update(tmp_path / "store", str(moved)).changed
+
+
+def test_a_renamed_file_is_not_counted_twice(tmp_path):
+    paths = [write_day(tmp_path, day) for day in range(3)]
+    os.utime(paths[1], ns=(1_700_000_000_123_456_789,) * 2)
+    grow(tmp_path / "store", paths, DAY)
+    renamed = tmp_path / "kept.parquet"
+    paths[1].rename(renamed)
+    done = update(tmp_path / "store", str(tmp_path))
+    assert (done.moved, done.added, done.vanished) == ((str(renamed),), (), ())
+    assert opened(tmp_path / "store").manifest.used == 3 * 240
+    # A time in whole seconds may be shared by chance.
+    os.utime(paths[2], ns=(1_700_000_000_000_000_000,) * 2)
+    update(tmp_path / "store", str(paths[2]), replace_changed=True)
+    paths[2].rename(tmp_path / "other.parquet")
+    with pytest.raises(InputError) as refused:
+        update(tmp_path / "store", str(tmp_path))
+    assert str(refused.value) == (
+        f"DATA must be told apart from files that were counted and are gone, but "
+        f"'{tmp_path}/other.parquet' may be '{paths[2]}' or another, for size and time are the "
+        f"same; put the files back under their names, or write a new one once more, for a time of "
+        f"its own."
+    )
+    os.utime(tmp_path / "other.parquet")
+    assert update(tmp_path / "store", str(tmp_path)).added == (f"{tmp_path}/other.parquet",)
+
+
+def test_a_file_reached_by_a_link_is_not_counted_twice(tmp_path):
+    (tmp_path / "real").mkdir()
+    paths = [write_day(tmp_path / "real", day) for day in range(2)]
+    (tmp_path / "link").symlink_to(tmp_path / "real")
+    update(tmp_path / "store", str(tmp_path / "real"), DAY)
+    done = update(tmp_path / "store", str(tmp_path / "link"))
+    assert (done.changed, done.added, len(done.unchanged)) == (False, (), 2)
+    # A change is noticed by way of the link, too.
+    write_day(tmp_path / "real", 0, rows=300)
+    with pytest.raises(InputError, match="changed since; count them anew with --replace"):
+        update(tmp_path / "store", str(tmp_path / "link"))
+    done = update(tmp_path / "store", str(tmp_path / "link"), replace_changed=True)
+    assert (done.replaced, done.added) == ((str(paths[0]),), ())
+    assert opened(tmp_path / "store").manifest.used == 300 + 240
+    os.link(paths[1], tmp_path / "real" / "twin.parquet")
+    with pytest.raises(InputError, match=r"name each file once, but '.*' and '.*' are one file;"):
+        update(tmp_path / "store", str(tmp_path / "real"))
 
 
 def test_a_hash_tells_a_touched_file_from_a_changed_one(tmp_path):
@@ -487,9 +539,26 @@ def test_settings_are_fixed_and_contradictions_refused(days, tmp_path):
         make_curve(tmp_path / "store", reading=Reading(where="power_kw > 3"))
     with pytest.raises(InputError, match="--block must agree with the store, but it is plant and"):
         make_curve(tmp_path / "store", reading=Reading(block="plant"))
-    with pytest.raises(InputError, match="leave rows alone where only a table is at hand"):
-        make_curve(tmp_path / "store", smoothing=Smoothing(engine="exact"))
     assert make_curve(tmp_path / "store", "wet_bulb_c", "power_kw").bandwidth > 0.0
+
+
+@pytest.mark.parametrize(
+    ("option", "asked"),
+    [
+        ("--engine exact", {"smoothing": Smoothing(engine="exact")}),
+        ("--estimator nearest", {"smoothing": Smoothing(estimator="nearest")}),
+        ("--robust", {"smoothing": Smoothing(robust=True)}),
+        ("--limits", {"band": Band(limits=(0.05, 0.95))}),
+    ],
+)
+def test_what_needs_rows_is_refused(days, tmp_path, option, asked):
+    grow(tmp_path / "store", days[:2], UNITS)
+    with pytest.raises(InputError) as refused:
+        make_curve(tmp_path / "store", **asked)
+    assert str(refused.value) == (
+        f"{option} must come with data files, but a store keeps no rows; name the files, or leave "
+        f"it out."
+    )
 
 
 def test_refusals_of_new_stores_leave_no_folder(days, tmp_path):

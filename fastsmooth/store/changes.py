@@ -53,17 +53,15 @@ def sort_files(paths: list[str], entries: list[Entry], with_hash: bool) -> Sorte
     Raises
     ------
     InputError
-        A file may be one that was counted and is gone, or another.
+        A file may be one that was counted and is gone, or another; or one is named twice.
     """
-    place = {entry.path: n for n, entry in enumerate(entries)}
-    known = [path for path in paths if path in place]
+    marks = [_file_system_mark(entry.path) for entry in entries]
     vanished = [
-        n for n, entry in enumerate(entries)
-        if as_address(entry.path) is None and not os.path.exists(entry.path)
-    ]  # fmt: skip
+        n for n, entry in enumerate(entries) if marks[n] is None and as_address(entry.path) is None
+    ]
+    place = _places(paths, entries, marks)
     found = Sorted([], {}, {}, {}, [], vanished, {})
-    for path in known:
-        n = place[path]
+    for path, n in place.items():
         record = read_identity(path, None)
         digest = entries[n].sha256
         alike = is_alike(entries[n], record)
@@ -91,6 +89,48 @@ def sort_files(paths: list[str], entries: list[Entry], with_hash: bool) -> Sorte
     return found
 
 
+def _file_system_mark(path: str) -> tuple[int, int] | None:
+    """What tells files of this computer apart under any name; None if there is none."""
+    if as_address(path) is not None:
+        return None
+    try:
+        status = os.stat(path)
+    except OSError:
+        return None
+    return status.st_dev, status.st_ino
+
+
+def _places(
+    paths: list[str], entries: list[Entry], marks: list[tuple[int, int] | None]
+) -> dict[str, int]:
+    """Ordinals of the files that were counted, under their own name or by way of a link.
+
+    Raises
+    ------
+    InputError
+        Two paths lead to one file.
+    """
+    by_path = {entry.path: n for n, entry in enumerate(entries)}
+    by_mark = {mark: n for n, mark in enumerate(marks) if mark is not None and mark[1]}
+    named: dict[tuple[int, int], str] = {}
+    place = {}
+    for path in paths:
+        mark = _file_system_mark(path)
+        if mark is not None and mark[1]:
+            if mark in named:
+                raise InputError(
+                    "DATA", "name each file once", f"'{path}' and '{named[mark]}' are one file",
+                    "leave one of them out",
+                )  # fmt: skip
+            named[mark] = path
+            n = by_path.get(path, by_mark.get(mark))
+        else:
+            n = by_path.get(path)
+        if n is not None:
+            place[path] = n
+    return place
+
+
 def _counted_before(
     record: FileRecord, new: list[FileRecord], entries: list[Entry], found: Sorted
 ) -> int | None:
@@ -111,15 +151,23 @@ def _counted_before(
         for other in new:
             if other is not record and found.digests[other.path] == digest:
                 raise _counted_twice(record.path, other.path)
-    former = [n for n in found.vanished if _may_be(entries[n], record)]
+    gone = [n for n in found.vanished if is_alike(entries[n], record)]
+    former = [n for n in gone if _has_name_of(entries[n], record)]
+    by_name = bool(former)
+    if not by_name:
+        former = [n for n in gone if not _namesakes(entries[n], new)]
     if not former:
         return None
-    rivals = [one for one in new if _may_be(entries[former[0]], one)]
-    if len(former) > 1 or len(rivals) > 1:
+    entry = entries[former[0]]
+    rivals = _namesakes(entry, new) if by_name else [one for one in new if is_alike(entry, one)]
+    # Times in whole seconds come from archives and coarse clocks: two files may well share one.
+    sure = by_name or record.modified_ns % 1_000_000_000 != 0
+    if len(former) > 1 or len(rivals) > 1 or not sure:
         raise InputError(
             "DATA", "be told apart from files that were counted and are gone",
-            f"'{record.path}' may be '{entries[former[0]].path}' or another",
-            "put the files back where they were, or give them another name",
+            f"'{record.path}' may be '{entry.path}' or another, for size and time are the same",
+            "put the files back under their names, or write a new one once more, for a time of "
+            "its own",
         )  # fmt: skip
     return former[0]
 
@@ -138,9 +186,12 @@ def is_alike(entry: Entry, record: FileRecord) -> bool:
     return (entry.size_bytes, entry.modified_ns) == (record.size_bytes, record.modified_ns)
 
 
-def _may_be(entry: Entry, record: FileRecord) -> bool:
-    names = os.path.basename(entry.path), os.path.basename(record.path)
-    return names[0] == names[1] and is_alike(entry, record)
+def _has_name_of(entry: Entry, record: FileRecord) -> bool:
+    return os.path.basename(entry.path) == os.path.basename(record.path)
+
+
+def _namesakes(entry: Entry, new: list[FileRecord]) -> list[FileRecord]:
+    return [one for one in new if _has_name_of(entry, one) and is_alike(entry, one)]
 
 
 def is_same(record: FileRecord, other: FileRecord) -> bool:

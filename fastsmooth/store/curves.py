@@ -51,7 +51,7 @@ def curve_of_store(
     ReadError
         The store is damaged.
     """
-    check_rows_spared(smoothing)
+    check_rows_spared(smoothing, band, "a store")
 
     def make(store: Store) -> Curve:
         store.settings.check_agrees(asked)

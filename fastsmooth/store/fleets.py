@@ -89,7 +89,7 @@ def fleet_of_store(
     ReadError
         The store is damaged.
     """
-    check_rows_spared(smoothing)
+    check_rows_spared(smoothing, band, "a store")
 
     def make(store: Store) -> Fleet:
         store.settings.check_agrees(asked)
