@@ -73,6 +73,7 @@ __all__ = [
     "Caution",
     "Comparison",
     "Curve",
+    "CurveComparison",
     "FastsmoothError",
     "Fleet",
     "InputError",

@@ -92,11 +92,11 @@ def plan_for(
 
     Examples
     --------
-    >>> wet_bulb_c = np.linspace(-5.0, 28.0, 1000)
+    >>> wet_bulb_c = np.random.default_rng(1).uniform(-5.0, 28.0, 1000)
     >>> sample = {"wet_bulb_c": wet_bulb_c, "power_kw": 20.0 + 0.1 * wet_bulb_c**2}
     >>> plan = plan_for(sample, "wet_bulb_c", "power_kw", rows=1_000_000_000)
     >>> plan.bins, plan.folds, plan.rows_per_run
-    (8192, 32, 42)
+    (8192, 32, 65536)
     """
     reading = settings_or_default("reading", reading, Reading)
     check_columns(x, y, weight, count)
@@ -188,7 +188,8 @@ def curve_from_table(
     >>> plan = plan_for({"wet_bulb_c": wet_bulb_c, "power_kw": power_kw}, "wet_bulb_c", "power_kw")
     >>> table = BinTable(plan)
     >>> for fold in range(plan.folds):
-    ...     table.add_rows(fold, wet_bulb_c[fold :: plan.folds], power_kw[fold :: plan.folds])
+    ...     rows = slice(fold, None, plan.folds)
+    ...     table.add_rows(fold, wet_bulb_c[rows].copy(), power_kw[rows].copy())
     >>> made = curve_from_table(table)
     >>> round(float(made.at(10.0)[0]), 1), made.cautions[0].code
     (24.0, 'no rows at hand')

@@ -258,7 +258,7 @@ class Source:
         self._reader.close()
 
     def constant_units(self, task: Task) -> tuple[pa.Array, ...] | None:
-        """Return the one value of each unit column in a task, (1,) each, if all are known unread."""
+        """Return the one value of each unit column in a task, (1,) each, if known unread."""
         from fastsmooth.casts import constant_array
 
         arrays = []

@@ -213,8 +213,8 @@ def test_progress_goes_through_its_stages():
     [
         (
             lambda: Smoothing(estimator="local-linaer"),
-            "--estimator must be one of local-linear, local-constant, nearest, but it is 'local-linaer'; "
-            "use 'local-linear' or 'local-constant'.",
+            "--estimator must be one of local-linear, local-constant, nearest, but it is "
+            "'local-linaer'; use 'local-linear' or 'local-constant'.",
         ),
         (
             lambda: Smoothing(kernel="gausian"),
@@ -397,8 +397,8 @@ def test_a_handful_of_rows_gives_a_curve_or_a_refusal_but_no_spike(n):
 def test_public_names_are_there():
     for name in fastsmooth.__all__:
         assert getattr(fastsmooth, name) is not None
-    with pytest.raises(AttributeError, match="no attribute 'smooth'"):
-        _ = fastsmooth.smooth
+    with pytest.raises(AttributeError, match="no attribute 'smoothly'"):
+        _ = fastsmooth.smoothly
 
 
 def test_importing_loads_no_heavy_library():
