@@ -161,7 +161,9 @@ def compare_curves(
     facts["name"] = _name(now)
     mine = {**side_facts(baseline), "name": _name(base)}
     trace = {
-        "settings": baseline.settings, "files": [*mine.pop("files"), *facts.pop("files")],
+        "settings": baseline.settings,
+        # What was given counts too: a curve file is no less dear than its data.
+        "files": [*mine.pop("files"), *facts.pop("files"), *_paths(base), *_paths(now)],
         "by_types": kinds, "paired": terms.paired, "hours_per_row": terms.hours_per_row,
         "base": mine, "now": facts,
     }  # fmt: skip
@@ -220,12 +222,16 @@ def side_facts(side: Curve | Fleet) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def _name(given: Any) -> str | None:
+def _paths(given: Any) -> list[str]:
     if isinstance(given, str | os.PathLike):
-        return os.fspath(given)
+        return [os.fspath(given)]
     if isinstance(given, list | tuple) and all(isinstance(one, str | os.PathLike) for one in given):
-        return ", ".join(os.fspath(one) for one in given)
-    return None
+        return [os.fspath(one) for one in given]
+    return []
+
+
+def _name(given: Any) -> str | None:
+    return ", ".join(_paths(given)) or None
 
 
 def held_curve(given: Any) -> Curve | Fleet | None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 
 from fastsmooth.curve import Curve
+from fastsmooth.errors import WriteError
 from fastsmooth.files_out import write_table
 from fastsmooth.passes import Progress, silent
 
@@ -151,12 +152,22 @@ def _write_months(
             ]
         ),
     )
-    folder.mkdir(parents=True, exist_ok=True)
+    _make_folder(folder)
     month = stamps.astype("datetime64[M]")
     for one in np.unique(month):
         rows = np.flatnonzero(month == one)
         part = table.slice(int(rows[0]), rows.size)
         write_table(part, folder / f"{plant}-{one}.parquet", "FOLDER")
+
+
+def _make_folder(folder: Path) -> None:
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise WriteError(
+            "FOLDER", "be a folder that can be made and written",
+            f"making '{folder}' failed: {error.strerror}", "name another one",
+        ) from error  # fmt: skip
 
 
 def _wander(rng: np.random.Generator, n: int, memory: float, sd: float) -> np.ndarray:
@@ -231,7 +242,8 @@ def run_night(folder: Path, progress: Progress = silent) -> Night:
     settings = StoreSettings(
         "wet_bulb_c", "power_kw", by=("plant",), block=BLOCK, period="logged_at:month", where=WHERE
     )
-    updated = update_store(store, year, settings, progress=progress)
+    # The files were just written anew, so a store of an earlier demo must count them anew.
+    updated = update_store(store, year, settings, replace_changed=True, progress=progress)
     fleet = make_fleet(
         year, "wet_bulb_c", "power_kw", by="plant", reading=Reading(where=WHERE, block=BLOCK),
         smoothing=Smoothing(robust=True), band=Band(limits=LIMITS), progress=progress,

@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 _LEAST_WINDOW = 1e-6
 # Rows that spread by less than this many bins (standard deviation) carry no slope.
 _LEAST_SPREAD_BINS = 1.0 / 16.0
+# Bins on either side that the curve at a bin may be drawn from; see `localfit.chords`.
+_CHORD_REACH = 3
 # Over a window of so many ranges every kernel is flat to rounding: wider ones change nothing.
 WIDEST_RANGES = 1e6
 
@@ -212,6 +214,45 @@ def others(parts: Floats) -> Floats:
     return out
 
 
+def _reached(sums: Floats, reach: int) -> tuple[int, int] | None:
+    """The first bin, and the one after the last, within reach of those that hold rows."""
+    filled = sums[0].nonzero()[0]
+    if not filled.size:
+        return None
+    return max(int(filled[0]) - reach, 0), min(int(filled[-1]) + 1 + reach, sums.shape[1])
+
+
+def _sums_by_fold(level: Level, shape: Shape, bandwidth_bins: float) -> tuple[Floats, Floats]:
+    """Return each fold's `kernel_sums` of weight and response, (folds, 3, bins), (folds, 2, bins).
+
+    Blocks last days, so that a fold fills few of the bins: sums are zero out of its reach.
+    """
+    from fastsmooth.kernels import binned
+
+    folds, bins = level.folds.shape[0], level.bins
+    reach = min(math.ceil(shape.support * bandwidth_bins + 0.5), bins)
+    stencil = np.empty((3, 3, reach + 1))
+    binned.fill_stencil(shape.code, bandwidth_bins, 1, stencil)
+    s, t = np.zeros((folds, 3, bins)), np.zeros((folds, 2, bins))
+    for fold in range(folds):
+        reached = _reached(level.folds[fold], reach)
+        if reached is None:
+            continue
+        first, stop = reached
+        own = level.folds[fold, :, first:stop]
+        padded = np.zeros((3, stop - first + 2 * reach))
+        inside = padded[:, reach : reach + stop - first]
+        out = np.empty((3, stop - first))
+        inside[:] = own[0:3]
+        binned.bin_sums(padded, stencil, out)
+        s[fold, :, first:stop] = out
+        inside *= level.pilot[first:stop]
+        inside += own[3:6]
+        binned.bin_sums(padded, stencil[0:2], out[0:2])
+        t[fold, :, first:stop] = out[0:2]
+    return s, t
+
+
 def left_out_fold_scores(
     level: Level, scored: Level, shape: Shape, bandwidth: float, empty: float
 ) -> dict[str, tuple[Floats, float]]:
@@ -237,25 +278,26 @@ def left_out_fold_scores(
     from fastsmooth.kernels import localfit
 
     folds, h = level.folds.shape[0], width_in_bins(bandwidth, level)
-    s, t = np.empty((folds, 3, level.bins)), np.empty((folds, 2, level.bins))
+    s, t = (others(sums) for sums in _sums_by_fold(level, shape, h))
+    scores = {name: np.zeros(folds) for name in ESTIMATORS}
+    lost = dict.fromkeys(ESTIMATORS, 0.0)
+    at_zero, spread, none = shape.at_zero, least_spread(h), np.empty((6, 0))
     for fold in range(folds):
-        sums = level.folds[fold]
-        response = np.ascontiguousarray(sums[3:6] + level.pilot * sums[0:3])
-        s[fold] = kernel_sums(sums[0:3], shape, h, 3, squared=False)
-        t[fold] = kernel_sums(response, shape, h, 2, squared=False)
-    s, t = others(s), others(t)
-    out = {name: (np.empty(folds), 0.0) for name in ESTIMATORS}
-    fit = np.empty((6, level.bins))
-    coefficients, sums_of_score = np.empty((7, level.bins)), np.empty(4)
-    none, no_leverage = np.empty((6, 0)), np.zeros(level.bins)
-    for fold in range(folds):
-        localfit.fit_bins(s[fold], t[fold], shape.at_zero, empty, least_spread(h), fit)
+        reached = _reached(scored.folds[fold], _CHORD_REACH)
+        if reached is None:
+            continue
+        here = slice(*reached)
+        # Contiguous copies of a few bins cost less than passing over all.
+        places, rows = level.first[:, here].copy(), scored.folds[fold][:, here].copy()
+        bins = rows.shape[1]
+        fit, chord, coefficients = np.empty((6, bins)), np.empty((3, bins)), np.empty((7, bins))
+        no_leverage, pilot, found = np.zeros(bins), scored.pilot[here], np.empty(4)
+        localfit.fit_bins(
+            s[fold][:, here].copy(), t[fold][:, here].copy(), at_zero, empty, spread, fit
+        )
         for row, name in ((0, "local-constant"), (3, "local-linear")):
-            localfit.score_bins(
-                scored.folds[fold], none, scored.pilot, *chords_of(level, fit[row], no_leverage),
-                coefficients, sums_of_score,
-            )  # fmt: skip
-            scores, lost = out[name]
-            scores[fold] = sums_of_score[0]
-            out[name] = (scores, lost + float(sums_of_score[3]))
-    return out
+            localfit.chords(places, fit[row], no_leverage, chord)
+            localfit.score_bins(rows, none, pilot, *chord, coefficients, found)
+            scores[name][fold] = found[0]
+            lost[name] += float(found[3])
+    return {name: (scores[name], lost[name]) for name in ESTIMATORS}

@@ -9,13 +9,11 @@ import sys
 from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from urllib.parse import parse_qs, unquote, urlsplit
 
-FOLDER = pathlib.Path(sys.argv[1])
 
-
-def described(path):
+def described(path, folder):
     content = path.read_bytes()
     return {
-        "kind": "storage#object", "name": str(path.relative_to(FOLDER)), "bucket": FOLDER.name,
+        "kind": "storage#object", "name": str(path.relative_to(folder)), "bucket": folder.name,
         "size": str(len(content)), "etag": f"tag-{hash(content)}", "generation": "1",
         "metageneration": "1", "updated": "2026-01-02T03:04:05.678Z",
         "timeCreated": "2026-01-02T03:04:05.678Z",
@@ -28,19 +26,20 @@ class Google(BaseHTTPRequestHandler):
     def do_GET(self):
         parts = urlsplit(self.path)
         query = parse_qs(parts.query)
-        bucket = f"/storage/v1/b/{FOLDER.name}"
-        path = FOLDER / unquote(parts.path.removeprefix(f"{bucket}/o/"))
+        folder = self.server.folder
+        bucket = f"/storage/v1/b/{folder.name}"
+        path = folder / unquote(parts.path.removeprefix(f"{bucket}/o/"))
         if parts.path == bucket:
-            return self.tell({"kind": "storage#bucket", "name": FOLDER.name})
+            return self.tell({"kind": "storage#bucket", "name": folder.name})
         if parts.path == f"{bucket}/o":
             prefix = query.get("prefix", [""])[0]
-            every = [described(one) for one in sorted(FOLDER.rglob("*")) if one.is_file()]
+            every = [described(one, folder) for one in sorted(folder.rglob("*")) if one.is_file()]
             items = [one for one in every if one["name"].startswith(prefix)]
             return self.tell({"kind": "storage#objects", "items": items})
         if not path.is_file():
             return self.answer(404, b"{}")
         if query.get("alt") != ["media"]:
-            return self.tell(described(path))
+            return self.tell(described(path, folder))
         content = path.read_bytes()
         first, _, last = self.headers.get("Range", "bytes=0-").removeprefix("bytes=").partition("-")
         start, stop = int(first), min(int(last or len(content)) + 1, len(content))
@@ -63,5 +62,6 @@ class Google(BaseHTTPRequestHandler):
 
 if __name__ == "__main__":
     server = ThreadingHTTPServer(("127.0.0.1", 0), Google)
+    server.folder = pathlib.Path(sys.argv[1])
     print(server.server_port, flush=True)
     server.serve_forever()

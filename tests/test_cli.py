@@ -236,15 +236,22 @@ def test_info_of_data_and_of_a_curve(plant, tmp_path, capsys):
     assert json.loads(told)["kind"] == "curve"
 
 
-def test_demo_leaves_its_files_and_repeats_to_the_bit(tmp_path, capsys):
+def test_demo_leaves_its_files_and_repeats_to_the_bit_in_one_folder(tmp_path, capsys):
     tables = []
-    for name in ("one", "two"):
-        code, told, _ = run(capsys, "demo", tmp_path / name)
-        assert code == 0
+    for _ in range(2):
+        code, told, complaint = run(capsys, "demo", tmp_path / "demo")
+        assert code == 0, complaint
         assert "invented" in told
-        assert (tmp_path / name / "curve.png").stat().st_size > 20_000
-        tables.append((tmp_path / name / "curve.csv").read_bytes())
+        assert (tmp_path / "demo" / "curve.png").stat().st_size > 20_000
+        tables.append((tmp_path / "demo" / "curve.csv").read_bytes())
     assert tables[0] == tables[1]
+
+
+def test_demo_refuses_a_folder_that_cannot_be_made(tmp_path, capsys):
+    (tmp_path / "notes").write_text("mine")
+    code, _, complaint = run(capsys, "demo", tmp_path / "notes")
+    assert (code, (tmp_path / "notes").read_text()) == (2, "mine")
+    assert complaint.startswith("fastsmooth: FOLDER must be a folder that can be made and written")
 
 
 REFUSALS = {

@@ -508,6 +508,16 @@ def test_the_command_prints_json_and_leaves_data_alone(files, tmp_path, capsys):
     assert "--out must" in complaint
 
 
+@pytest.mark.parametrize("option", ["--out", "--units-out"])
+def test_a_curve_file_that_is_compared_is_never_written_over(files, option, tmp_path, capsys):
+    curve = tmp_path / "curve.parquet"
+    curve.write_bytes((files / "birch.parquet").read_bytes())
+    code, _, complaint = run(capsys, curve, files / "now.parquet", option, curve)
+    assert code == 2
+    assert f"{option} must leave the data alone, but '{curve}' is one of" in complaint
+    assert curve.read_bytes() == (files / "birch.parquet").read_bytes()
+
+
 def test_the_command_compares_data_of_one_folder_by_two_conditions(files, capsys):
     code, told, complaints = run(
         capsys, files / "base.parquet", files / "base.parquet", "--x", "wet_bulb_c", "--y",

@@ -347,6 +347,27 @@ def test_forgetting_drops_whole_periods_and_keeps_the_ledger(days, tmp_path):
     }  # fmt: skip
 
 
+def test_forgetting_never_empties_a_store(days, tmp_path):
+    grow(tmp_path / "store", days, UNITS)
+    with pytest.raises(InputError) as refused:
+        update(tmp_path / "store", forget_before="2052-01-01")
+    assert str(refused.value) == (
+        "--forget-before must leave rows in the store, but all lie before 2052-01-01; give an "
+        "earlier date, or delete the store."
+    )
+    assert opened(tmp_path / "store").manifest.used == 8 * 240
+    # With rows of a later period in the same update there is something left.
+    late = write_day(tmp_path, 40)
+    update(tmp_path / "store", str(late), forget_before="2025-03-01")
+    assert opened(tmp_path / "store").manifest.used == 240
+    # When the only file left holds rows of forgotten periods now, the store is empty.
+    os.replace(write_day(tmp_path, 3), late)
+    update(tmp_path / "store", str(late), replace_changed=True)
+    for make in (make_curve, lambda store: make_fleet(store, by=("plant",))):
+        with pytest.raises(InputError, match="a store that holds rows, but all its periods were"):
+            make(tmp_path / "store")
+
+
 def test_the_last_periods_are_had_without_reading(days, tmp_path):
     grow(tmp_path / "store", days, replace(DAY, period="logged_at:day"))
     store = opened(tmp_path / "store")

@@ -114,7 +114,7 @@ def statement(plan: Plan, table: str, dialect: str, *, fold: str | None = None) 
     Examples
     --------
     >>> plan = Plan.simple(0.0, 30.0, bins=1024, folds=8)
-    >>> print(statement(plan, "readings", "duckdb")[-37:])
+    >>> print(statement(plan, "readings", "duckdb")[-38:])
     GROUP BY
       "reason",
       "fold",

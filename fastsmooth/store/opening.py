@@ -166,13 +166,13 @@ class Store:
         if window.before is not None:
             stop = period.begun_at(window.before, "--before")
             held = [number for number in held if number < stop]
-        if window.last is not None and held:
-            start = period.first_of_last(window.last, held[-1])
-            held = [number for number in held if number >= start]
-        if not held:
+        if not held and self.manifest.periods:
             raise InputError(
                 "--before", "leave rows in the store", "none are earlier", "give a later date"
             )
+        if window.last is not None and held:
+            start = period.first_of_last(window.last, held[-1])
+            held = [number for number in held if number >= start]
         return held
 
     def period_labels(self, numbers: Sequence[int]) -> list[str]:
@@ -224,9 +224,15 @@ class Store:
         Raises
         ------
         InputError
-            The store does not keep such units apart, or the window does not suit.
+            The store does not keep such units apart, the window does not suit, or all periods were
+            forgotten.
         """
         sums = self._gather(window, threads, by)
+        if not sums:
+            raise InputError(
+                "DATA", "be a store that holds rows", "all its periods were forgotten",
+                "count files of later periods first",
+            )  # fmt: skip
         cautions = tuple(self.cautions())
         return {
             key: self._counted(sums[key], cautions, len(sums)) for key in sorted(sums, key=sort_key)

@@ -265,6 +265,11 @@ class _Job:
                 and one.period < forgotten_before
             )
         )
+        if dropped and not shelf.held and forget_before is not None:
+            raise InputError(
+                "--forget-before", "leave rows in the store", f"all lie before {forget_before}",
+                "give an earlier date, or delete the store",
+            )  # fmt: skip
         entries = self._entered(entries, found, counted, again, with_hash)
         compacted = shelf.compact(grids)
         parts, contents = shelf.write_out(len(marks))
