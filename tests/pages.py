@@ -36,11 +36,20 @@ def readings(seed: int = 1) -> dict[str, Any]:
 
 
 def small_fleet(**settings: Any) -> Fleet:
-    """Four curves and a unit without one."""
-    return make_fleet(
+    """Four curves, one of them with a caution, and a unit without one."""
+    made = make_fleet(
         readings(), "wet_bulb_c", "power_kw", by="plant",
         reading=Reading(threads=1), band=Band(**settings),
     )  # fmt: skip
+    return replace(made, units=tuple(_warned(unit) for unit in made.units))
+
+
+def _warned(unit: Unit) -> Unit:
+    if unit.key != ("Dorf",) or unit.curve is None:
+        return unit
+    caution = Caution("several minima", "The criterion has 2 separate minima.")
+    curve = replace(unit.curve, cautions=(*unit.curve.cautions, caution))
+    return Unit(unit.key, unit.status, unit.reason, unit.rows, curve)
 
 
 def renamed(fleet: Fleet, keys: Sequence[tuple[Any, ...]], by: Sequence[str] = ("plant",)) -> Fleet:
