@@ -142,9 +142,7 @@ def make_curve(
     ) as source:
         fixed = own_bandwidth(source, reading, smoothing)
         places = own_points(source, reading, band)
-        chosen = count_and_search(
-            source, reading, smoothing, fixed, places, progress, counting
-        )
+        chosen = count_and_search(source, reading, smoothing, fixed, places, progress, counting)
         progress("fitting", 0, None)
         made = assemble(source, chosen, reading, smoothing, band)
         return add_limits(source, made, chosen.shape, reading, band.limits, progress)

@@ -168,7 +168,8 @@ def assemble(
         "files": list(_file_facts(tuple(source.files))),
         "engine": {k: _finite(v) for k, v in found.engine.items()},
         "fit": found.fit,
-        "landmarks": None, "landmark_stretches": None,
+        "landmarks": None,
+        "landmark_stretches": None,
         "plan": json.loads(json.dumps(plan.to_dict())),
         "versions": dict(_versions()),
         "robust": _robust_in_axis(chosen.robust, log),
@@ -218,9 +219,7 @@ def _places(chosen: Chosen, band: Band) -> Floats:
     return np.linspace(low, high, points)
 
 
-def _by_bandwidth(
-    chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band
-) -> Evaluated:
+def _by_bandwidth(chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band) -> Evaluated:
     """Evaluate the estimators that have a kernel and a bandwidth."""
     table, shape, bandwidth = chosen.counted.table, chosen.shape, chosen.bandwidth
     plan, pyramid = table.plan, chosen.pyramid
@@ -292,9 +291,7 @@ def _by_bandwidth(
     )  # fmt: skip
 
 
-def _by_neighbours(
-    chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band
-) -> Evaluated:
+def _by_neighbours(chosen: Chosen, reading: Reading, smoothing: Smoothing, band: Band) -> Evaluated:
     """Evaluate the mean of the nearest rows."""
     table, near = chosen.counted.table, chosen.near
     assert near is not None

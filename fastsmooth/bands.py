@@ -138,10 +138,7 @@ def smooth_noise(
         return Noise(np.full(bins, overall), np.full(bins, room), overall, None)
     # Fewer bins suffice for a variance: at least sixteen to a bandwidth.
     step = 1
-    while (
-        bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH
-        and bins % (2 * step) == 0
-    ):
+    while bandwidth_bins / (2 * step) >= _VARIANCE_BINS_PER_BANDWIDTH and bins % (2 * step) == 0:
         step *= 2
     groups = squared.reshape(squared.shape[0], -1, step).sum(axis=2)
     weights = expected.reshape(expected.shape[0], -1, step).sum(axis=2)

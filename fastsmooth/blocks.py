@@ -344,7 +344,7 @@ def check_alike(column: str, types: list[pa.DataType], argument: str = "--block"
     InputError
         Kinds or time zones differ.
     """
-    kinds = list(dict.fromkeys(kind for kind in map(_kind, types) if kind))
+    kinds = list(dict.fromkeys(kind for kind in map(kind_of, types) if kind))
     if len(kinds) > 1:
         raise InputError(
             argument, "name a column of one kind in every file",
@@ -353,12 +353,12 @@ def check_alike(column: str, types: list[pa.DataType], argument: str = "--block"
         )  # fmt: skip
 
 
-def _kind(data_type: pa.DataType) -> str:
-    """The kind of a column in words; empty where it holds nulls only."""
+def kind_of(data_type: pa.DataType) -> str:
+    """Return the kind of a column in words; empty where it holds nulls only."""
     import pyarrow.types as pt
 
     if pt.is_dictionary(data_type):
-        return _kind(data_type.value_type)
+        return kind_of(data_type.value_type)
     if pt.is_timestamp(data_type):
         return f"times in zone {data_type.tz}" if data_type.tz else "times without a zone"
     known = (

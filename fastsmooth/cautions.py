@@ -24,6 +24,8 @@ _STANDS_OUT = 0.2
 # At the narrowest width one row in a hundred may be alone by chance.
 # The narrowest width leaves up to one row in twenty without three others, by its definition.
 _MANY_ALONE = 0.03
+# From so many equal rows to a row on, their likeness decides the criterion.
+_REPEATED = 1.5
 _MANY_THIN = 0.5
 _HEAVY_FOLD = 0.5
 # Fewer folds than this leave the standard errors of the criterion to chance.
@@ -137,6 +139,14 @@ def about_search(made: Curve) -> Iterator[Caution]:
             "width at the upper end",
             f"The best {word} {label(trail.bandwidth)} is the widest searched: within the noise "
             f"the data look like {shape}.",
+        )
+    repeated = made.rows_counted > _REPEATED * made.trace["rows"]["used"]
+    if settings["count"] is not None and criterion == "leave-one-out" and repeated:
+        yield Caution(
+            "equal rows",
+            f"Rows of --count {settings['count']} stand for several equal ones, and leave-one-out "
+            f"predicts each from its twins: it chooses too narrow a width. Give --block, or give "
+            f"{option}.",
         )
     if trail.minima > 1:
         yield Caution(

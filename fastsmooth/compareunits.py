@@ -15,7 +15,7 @@ from fastsmooth.errors import InputError
 from fastsmooth.fleet import MADE, Fleet, Key, Unit, sort_key
 from fastsmooth.fleetpass import count_fleet, count_units
 from fastsmooth.grouping import Grouping
-from fastsmooth.manyunits import Finer, Job, Tables, Worker, spread, why_not, within_memory
+from fastsmooth.manyunits import Finer, Worker, why_not, within_memory
 from fastsmooth.passes import Progress
 from fastsmooth.settings import Reading
 from fastsmooth.sides import (
@@ -33,6 +33,7 @@ from fastsmooth.sides import (
     width_on_scale,
 )
 from fastsmooth.source import Source, open_source
+from fastsmooth.unitjob import Job, Tables, spread
 
 _MOST_PASSES = 3
 

@@ -7,12 +7,14 @@ from typing import TYPE_CHECKING, Any
 
 from fastsmooth.difference import Difference
 from fastsmooth.excess import Excess
+from fastsmooth.fleet import short_name
 
 if TYPE_CHECKING:
     from fastsmooth.comparison import CurveComparison, UnitComparison
 
 _MOST_STRETCHES = 6
 _MOST_UNITS = 20
+_LONGEST_NAME = 48
 
 
 def comparison_lines(found: CurveComparison) -> list[str]:
@@ -155,7 +157,9 @@ def _many_lines(found: CurveComparison) -> list[str]:
     if rest:
         lines.append("")
         for unit in rest[:_MOST_UNITS]:
-            lines.append(f"not ranked {unit.name}: {unit.reason or unit.status}")
+            lines.append(
+                f"not ranked {short_name(unit.name, _LONGEST_NAME)}: {unit.reason or unit.status}"
+            )
         if len(rest) > _MOST_UNITS:
             lines.append(f"           and {len(rest) - _MOST_UNITS:,} more")
     counts: dict[str, int] = {}
@@ -174,7 +178,7 @@ def _unit_line(rank: int, unit: UnitComparison, excess: Excess | None) -> str:
     assert excess is not None
     test = None if unit.difference is None else unit.difference.p_value
     return (
-        f"{rank:>4}  {unit.name[:21]:<22}{cell(excess.amount, 12, amount_text)}"
+        f"{rank:>4}  {short_name(unit.name, 21):<22}{cell(excess.amount, 12, amount_text)}"
         f"{cell(excess.lower, 12, amount_text)}{cell(excess.upper, 12, amount_text)}"
         f"{cell(excess.share, 9, '{:+.2%}'.format)}"
         f"{cell(unit.adjusted_p_value, 12, '{:.2g}'.format)}{cell(test, 9, '{:.2g}'.format)}"

@@ -324,6 +324,20 @@ def read_identity(path: str, rows: int | None) -> FileRecord:
         return _identity(path, rows)
 
 
+def is_there(path: str) -> bool:
+    """Tell whether there is a file of this name, here or in an object store.
+
+    Raises
+    ------
+    InputError
+        Its store does not answer, or does not say.
+    """
+    with reading(path), suppress(FileNotFoundError):
+        _identity(path, None)
+        return True
+    return False
+
+
 def _identity(path: str, rows: int | None) -> FileRecord:
     address = as_address(path)
     if address is not None:

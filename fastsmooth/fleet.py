@@ -133,8 +133,36 @@ class Unit:
 
 
 def unit_name(key: Key) -> str:
-    """Return a key for people, as in ``plant 7, 2026-01``."""
-    return ", ".join("null" if one is None else str(one) for one in key)
+    """Return a key for people, as in ``plant 7, 2026-01``, on one line.
+
+    Examples
+    --------
+    >>> unit_name(("plant 7", 2026)), unit_name((None, "")), unit_name(("line\\nbreak", "null"))
+    ('plant 7, 2026', 'null, ""', 'line break, "null"')
+    """
+    return ", ".join(_part_name(one) for one in key)
+
+
+def _part_name(part: object) -> str:
+    text = "null" if part is None else str(part)
+    # What no line can hold would tear a table; what cannot be seen, or reads as missing, is quoted.
+    text = "".join(one if one.isprintable() else " " for one in text)
+    unseen = text != text.strip() or not text or (text == "null" and part is not None)
+    return f'"{text}"' if unseen else text
+
+
+def short_name(name: str, most: int) -> str:
+    """Shorten a name in its middle to so many characters: names of a fleet differ at their ends.
+
+    Examples
+    --------
+    >>> short_name("northmoor", 9), short_name("northmoor-dairy-cooler-17", 13)
+    ('northmoor', 'northm…ler-17')
+    """
+    if len(name) <= most:
+        return name
+    tail = (most - 1) // 2
+    return f"{name[: most - 1 - tail]}…{name[len(name) - tail :]}"
 
 
 def sort_key(key: Key) -> tuple[tuple[bool, Any], ...]:

@@ -180,7 +180,13 @@ class Layout:
 
 
 def lay_out(
-    plan: Plan, units: int, units_per_task: float, tasks: int, rows: int, threads: int
+    plan: Plan,
+    units: int,
+    units_per_task: float,
+    tasks: int,
+    rows: int,
+    threads: int,
+    likely: int = _WORKING_BINS,
 ) -> Layout:
     """Decide on bins, folds and runs for many units, within the memory cap.
 
@@ -200,6 +206,8 @@ def lay_out(
         Tasks and rows of the data.
     threads : int
         Threads at hand; bins and folds do not depend on it.
+    likely : int
+        Bins that a typical unit will ask for.
 
     Raises
     ------
@@ -239,7 +247,7 @@ def lay_out(
             "leave out a column, or make some units at a time with --where",
         )  # fmt: skip
     at_once = min(units, units_per_task) * per_task
-    working = max(_WORKING_BINS, _power_below(CACHE_BYTES / (lane * at_once)))
+    working = max(likely, _power_below(CACHE_BYTES / (lane * at_once)))
     bins = min(BINS, working, _power_below(fitting))
     run = _ALL_ROWS
     if not apart:
@@ -369,12 +377,28 @@ class FleetCounted:
     layout: Layout
 
 
+# Guesses the bins that a typical unit will ask for, from a sample, the plan for all units together
+# and the rows of a unit.
+Likely = Callable[[UnitSample, Plan, float], int]
+
+
+def usual_bins(sample: UnitSample, plan: Plan, rows_per_unit: float) -> int:
+    """Guess the usual number of bins, whatever the data."""
+    del sample, plan, rows_per_unit
+    return _WORKING_BINS
+
+
 def count_fleet(
-    source: Source, reading: Reading, grouping: Grouping, progress: Progress = silent
+    source: Source,
+    reading: Reading,
+    grouping: Grouping,
+    progress: Progress = silent,
+    likely: Likely = usual_bins,
 ) -> FleetCounted:
     """Plan and read, as often as the range of x and the number of units demand (mostly once).
 
-    The range is that of all units together, decided as for one curve.
+    The range is that of all units together, decided as for one curve. `likely` guesses how many
+    bins a unit will ask for.
 
     Raises
     ------
@@ -391,7 +415,7 @@ def count_fleet(
     ) -> tuple[BinTable, Floats]:
         nonlocal room, extra_passes, last
         while True:
-            layout = _layout_of(source, plan, sample, room, reading.threads)
+            layout = _layout_of(source, plan, sample, room, reading.threads, likely)
             base = _base_of(plan, layout)
             try:
                 units = count_units(
@@ -412,9 +436,14 @@ def count_fleet(
     return FleetCounted(together, last[0], sample, last[1])
 
 
-def _layout_of(source: Source, plan: Plan, sample: UnitSample, room: int, threads: int) -> Layout:
+def _layout_of(
+    source: Source, plan: Plan, sample: UnitSample, room: int, threads: int, likely: Likely
+) -> Layout:
     rows = source.rows_expected or 64 * max(1, sample.rows.x.size)
-    return lay_out(plan, room, sample.units_per_task, max(1, len(source.tasks)), rows, threads)
+    return lay_out(
+        plan, room, sample.units_per_task, max(1, len(source.tasks)), rows, threads,
+        likely(sample, plan, rows / max(1, sample.units)),
+    )  # fmt: skip
 
 
 def _base_of(plan: Plan, layout: Layout) -> Plan:

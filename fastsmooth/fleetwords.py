@@ -8,12 +8,13 @@ from typing import Any
 
 import numpy as np
 
-from fastsmooth.fleet import MADE, Fleet, Unit
+from fastsmooth.fleet import MADE, Fleet, Unit, short_name
 from fastsmooth.summary import row_lines
 
 _FIRST_UNITS = 10
 _FIRST_WITHOUT = 5
 _MOST_ROBUST = 3
+_LONGEST_NAME = 32
 
 
 def fleet_lines(fleet: Fleet) -> list[str]:
@@ -96,10 +97,13 @@ def _width_lines(fleet: Fleet) -> list[str]:
         ]
     low, high = int(np.argmin(widths)), int(np.argmax(widths))
     middle = math.exp(float(np.median(np.log(widths))))
+    ends = [
+        f"{_label(fleet, widths[place])} ({short_name(made[place].name, _LONGEST_NAME)})"
+        for place in (low, high)
+    ]
     return [
-        f"bandwidth  {_label(fleet, widths[low])} ({made[low].name}) to "
-        f"{_label(fleet, widths[high])} ({made[high].name}), median {_label(fleet, middle)}; each "
-        f"unit's own, chosen by {settings['criterion']}; {estimator}"
+        f"bandwidth  {' to '.join(ends)}, median {_label(fleet, middle)}; each unit's own, chosen "
+        f"by {settings['criterion']}; {estimator}"
     ]
 
 
@@ -111,7 +115,9 @@ def _robust_lines(fleet: Fleet) -> list[str]:
     shares = [one[2] / one[0] if one[0] else 0.0 for one in counts]
     most = sorted(range(len(shares)), key=lambda place: -shares[place])[:_MOST_ROBUST]
     told = ", ".join(
-        f"{fleet.units[place].name} {shares[place]:.2%}" for place in most if shares[place] > 0.0
+        f"{short_name(fleet.units[place].name, _LONGEST_NAME)} {shares[place]:.2%}"
+        for place in most
+        if shares[place] > 0.0
     )
     text = (
         f"robust     {down:,} rows ({down / max(judged, 1):.2%}) count less than half, {ignored:,} "
@@ -123,12 +129,14 @@ def _robust_lines(fleet: Fleet) -> list[str]:
 def _unit_lines(fleet: Fleet) -> list[str]:
     made = [unit for unit in fleet.units if unit.status == MADE]
     without = [unit for unit in fleet.units if unit.status != MADE]
-    width = max(len(unit.name) for unit in [*made[:_FIRST_UNITS], *without[:_FIRST_WITHOUT]])
+    shown = [*made[:_FIRST_UNITS], *without[:_FIRST_WITHOUT]]
+    width = min(max(len(unit.name) for unit in shown), _LONGEST_NAME)
     lines = [_unit_line(fleet, unit, width) for unit in made[:_FIRST_UNITS]]
     if len(made) > _FIRST_UNITS:
         lines.append(f"  and {len(made) - _FIRST_UNITS:,} more")
     lines += [
-        f"  {unit.name:<{width}}  {unit.rows:>13,} rows  no curve, {unit.status}: {unit.reason}"
+        f"  {short_name(unit.name, width):<{width}}  {unit.rows:>13,} rows  no curve, "
+        f"{unit.status}: {unit.reason}"
         for unit in without[:_FIRST_WITHOUT]
     ]
     if len(without) > _FIRST_WITHOUT:
@@ -138,6 +146,6 @@ def _unit_lines(fleet: Fleet) -> list[str]:
 
 def _unit_line(fleet: Fleet, unit: Unit, width: int) -> str:
     assert unit.bandwidth is not None
-    told = f"  {unit.name:<{width}}  {unit.rows:>13,} rows  bandwidth "
+    told = f"  {short_name(unit.name, width):<{width}}  {unit.rows:>13,} rows  bandwidth "
     told += _label(fleet, unit.bandwidth)
     return told + (f"; {', '.join(unit.caution_codes)}" if unit.caution_codes else "")

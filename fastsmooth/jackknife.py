@@ -128,9 +128,7 @@ def leave_out_folds(
     return deviations_of(*fold_sums_at(places, level, shape, bandwidth_bins), bandwidth_bins, kind)
 
 
-def deviations_of(
-    s: Floats, t: Floats, v: Floats, bandwidth_bins: float, kind: str
-) -> Deviations:
+def deviations_of(s: Floats, t: Floats, v: Floats, bandwidth_bins: float, kind: str) -> Deviations:
     """Refit without each fold in turn, from sums per fold as `fold_sums_at` returns them."""
     folds, n = s.shape[0], s.shape[2]
     weights = weights_of(s.sum(axis=0), bandwidth_bins, kind)

@@ -4,9 +4,8 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING, Any, Protocol, TypeVar
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -31,75 +30,27 @@ from fastsmooth.fleetpass import (
     count_units,
 )
 from fastsmooth.grouping import Grouping, Key
-from fastsmooth.kernels.shapes import SHAPES
 from fastsmooth.passes import Counted, Progress, check_sizes, silent
 from fastsmooth.plan import Plan, Sample, bin_width, pilot_of
-from fastsmooth.search import narrowest_width, search_table
+from fastsmooth.search import search_table
 from fastsmooth.settings import NEAREST, Band, Reading, Smoothing, check_flag
+from fastsmooth.sharedwidth import shared_width
 from fastsmooth.source import Columns, Source, open_source
 from fastsmooth.store.disk import is_store
+from fastsmooth.unitjob import Job, Tables, spread
 from fastsmooth.unitpasses import add_unit_limits, weigh_in_rounds
 from fastsmooth.unitsums import CountedUnits
 
 if TYPE_CHECKING:
-    from fastsmooth.kernels.shapes import Shape
-    from fastsmooth.robust import Core
     from fastsmooth.trail import Search
 
 Floats = NDArray[np.float64]
-T = TypeVar("T")
-U = TypeVar("U")
 
 # All units are searched, those whose width asks for it again with finer bins, and once more.
 _MOST_ROUNDS = 3
 # A round may take so many passes where memory does not hold the finer bins of all its units.
 _MOST_PARTS = 4
 _FEWEST_PLACES = 4
-# The common width must be one at which units with this share of the rows can be judged.
-_SHARE_JUDGED = 0.95
-_COARSEST_BINS_PER_BANDWIDTH = 8
-
-
-@dataclass(frozen=True)
-class Job:
-    """What is to be made of every unit.
-
-    Attributes
-    ----------
-    source : Source
-        Opened data.
-    reading, smoothing, band
-        Settings.
-    grouping : Grouping
-        What tells units apart.
-    criterion : str
-        What chooses the width.
-    fixed : float or None
-        The caller's width for all units, on the plan's scale.
-    places : (n,) float64 or None
-        The caller's points, on the plan's scale.
-    shared_bandwidth : bool
-        Whether all units get one width, chosen jointly.
-    cores, robust : mapping of tuple
-        Where most rows of a unit lie, and what weights did, once rows far off weigh less.
-    """
-
-    source: Source
-    reading: Reading
-    smoothing: Smoothing
-    band: Band
-    grouping: Grouping
-    criterion: str
-    fixed: float | None
-    places: Floats | None
-    shared_bandwidth: bool
-    cores: Mapping[Key, Core] = field(default_factory=dict)
-    robust: Mapping[Key, dict[str, Any]] = field(default_factory=dict)
-
-    @property
-    def shape(self) -> Shape:
-        """The kernel function."""
-        return SHAPES[self.smoothing.kernel]
 
 
 @dataclass(frozen=True)
@@ -224,19 +175,6 @@ def _check_spared(smoothing: Smoothing, band: Band, *, stored: bool = False) -> 
             )  # fmt: skip
 
 
-class Tables(Protocol):
-    """What holds the tables of all units: a pass over the data, or a store."""
-
-    def table(self, key: Key) -> BinTable:
-        """Return the table of a unit."""
-
-    def sample(self, key: Key) -> Sample:
-        """Return some of its rows, in runs."""
-
-    def shown(self, key: Key) -> Floats:
-        """Return x and y of a thin selection of its rows, (2, n)."""
-
-
 @dataclass(frozen=True)
 class Weighed:
     """Tables of weighed rows; what is kept of rows as they are comes from the first pass.
@@ -280,7 +218,7 @@ def make_units(job: Job, progress: Progress) -> Fleet:
     InputError
         The data cannot be used, or no unit has rows enough for a curve.
     """
-    counted = count_fleet(job.source, job.reading, job.grouping, progress)
+    counted = count_fleet(job.source, job.reading, job.grouping, progress, job.likely_bins)
     ways, source = counted.units.ways, job.source
     tables: Tables = counted.units
     together = counted.together
@@ -360,7 +298,7 @@ def fleet_of_tables(
     shared = None
     if job.shared_bandwidth and makers:
         progress("searching", 0, None)
-        shared = _shared_bandwidth(job, tables, makers)
+        shared = shared_width(job, tables, makers)
         job = replace(job, fixed=shared["bandwidth_on_scale"])
     passes = together.passes
     settings: dict[str, Any] = {}
@@ -408,17 +346,6 @@ def _robust_counts(job: Job, keys: Sequence[Key]) -> list[list[int]] | None:
     return [[job.robust.get(key, {}).get(name, 0) for name in names] for key in keys]
 
 
-def spread(function: Callable[[T], U], values: Sequence[T], threads: int) -> list[U]:
-    """Apply a function to values, several at a time; stop early when one fails."""
-    if threads == 1 or len(values) < 2:
-        return [function(value) for value in values]
-    pool = ThreadPoolExecutor(threads, thread_name_prefix="fastsmooth")
-    try:
-        return list(pool.map(function, values))
-    finally:
-        pool.shutdown(wait=True, cancel_futures=True)
-
-
 def _sort_out(job: Job, tables: Tables, keys: Sequence[Key]) -> tuple[dict[Key, Unit], list[Key]]:
     """Part units of which no curve can be made, with the reason, from the others."""
     units: dict[Key, Unit] = {}
@@ -456,7 +383,11 @@ def why_not(job: Job, table: BinTable) -> tuple[str, str] | None:
         return "no usable rows", f"Every row was refused ({refused})."
     low, high = table.extent.tolist()
     if low == high:
-        return "x constant", f"{columns.x} is the same in all {rows:,} rows."
+        return "x constant", (
+            f"{columns.x} is the same in all {rows:,} rows."
+            if rows > 1
+            else "There is one row only."
+        )
     if job.reading.block is not None and len(table.sums) < 2:
         return "one block only", (
             f"{job.reading.block} is the same in all {rows:,} rows, or its blocks share one fold."
@@ -607,111 +538,6 @@ def within_memory(finer: dict[Key, Plan], slots: int) -> dict[Key, Plan]:
         key: replace(plan, bins=bins[key], width=plan.width * (plan.bins / bins[key]))
         for key, plan in finer.items()
     }
-
-
-def _shared_bandwidth(job: Job, tables: Tables, keys: Sequence[Key]) -> dict[str, Any]:
-    """Choose one width for all units by the criterion summed over them.
-
-    The sum runs over units of rows times criterion over the unit's own lowest value: every unit's
-    loss counts in units of its own noise, so that noisy meters do not decide for all. (AICc is a
-    log-likelihood already: rows times its value.) Between the widths of the grid the lowest point
-    of a parabola through three neighbours in log h is taken. With the plug-in rule, which has no
-    sum over rows, it is the mean of the logarithms of the units' widths, weighted by rows.
-    """
-    low, high, judges = _common_interval(tables, keys)
-    estimator, criterion = job.smoothing.estimator, job.criterion
-
-    def judge(key: Key) -> tuple[float, Floats, Floats, float] | None:
-        table = tables.table(key)
-        try:
-            found = search_table(
-                table, Pyramid(table), job.shape, criterion=criterion,
-                by_block=job.reading.block is not None, widths=job.smoothing.widths,
-                bounds=(low, high),
-            )  # fmt: skip
-        except InputError:
-            return None  # too few rows to judge; the unit's own search tells
-        trail = found.trails[estimator]
-        return float(table.tally.used), trail.bandwidths, trail.values(criterion), trail.bandwidth
-
-    told = [one for one in spread(judge, judges, job.reading.threads) if one is not None]
-    if not told:
-        raise InputError(
-            "--shared-bandwidth", "find a unit with rows enough to judge a width",
-            f"none of {len(keys):,} has", "give --bandwidth",
-        )  # fmt: skip
-    rows = np.array([one[0] for one in told])
-    grid = told[0][1]
-    loss = np.zeros(grid.shape[0])
-    for own, (_, _, values, _) in zip(rows, told, strict=True):
-        loss += own * _relative(values, criterion)
-    loss /= rows.sum()
-    if criterion == "plug-in":
-        bandwidth = math.exp(float(rows @ np.log([one[3] for one in told])) / float(rows.sum()))
-    else:
-        bandwidth = _lowest(grid, loss)
-    log = job.reading.scale == "log"
-    return {
-        "bandwidth": math.exp(bandwidth) if log else bandwidth,
-        "bandwidth_on_scale": bandwidth, "criterion": criterion,
-        "widths": (np.exp(grid) if log else grid).tolist(),
-        "relative_loss": [one if math.isfinite(one) else None for one in loss.tolist()],
-        "units_judging": len(told), "rows_judging": int(rows.sum()),
-    }  # fmt: skip
-
-
-def _common_interval(tables: Tables, keys: Sequence[Key]) -> tuple[float, float, list[Key]]:
-    """The widths to compare, and the units that can judge all of them."""
-    narrow, rows, high = np.full(len(keys), np.inf), np.zeros(len(keys)), 0.0
-    for place, key in enumerate(keys):
-        table = tables.table(key)
-        try:
-            own = narrowest_width(table)
-        except InputError:
-            continue  # too few distinct x to judge any width; the unit's own search tells
-        narrow[place] = max(own, _COARSEST_BINS_PER_BANDWIDTH * table.plan.width)
-        rows[place] = table.tally.used
-        high = max(high, float(table.extent[1] - table.extent[0]))
-    if not rows.any():
-        raise _nobody_judges(keys)
-    order = np.argsort(narrow, kind="stable")
-    share = np.cumsum(rows[order]) / rows.sum()
-    low = float(narrow[order[int(np.argmax(share >= _SHARE_JUDGED * (1.0 - 1e-12)))]])
-    judges = [key for place, key in enumerate(keys) if narrow[place] <= low]
-    return low, max(high, 2.0 * low), judges
-
-
-def _nobody_judges(keys: Sequence[Key]) -> InputError:
-    return InputError(
-        "--shared-bandwidth", "find a unit with rows enough to judge a width",
-        f"none of {len(keys)} has", "give --bandwidth",
-    )  # fmt: skip
-
-
-def _relative(values: Floats, criterion: str) -> Floats:
-    if criterion == "aicc":
-        return values
-    best = float(values.min())
-    # A unit without noise has nothing to weigh its loss by.
-    return values / best if 0.0 < best < math.inf else np.where(values > best, math.inf, 1.0)
-
-
-def _lowest(grid: Floats, loss: Floats) -> float:
-    """The width of the lowest loss, refined between grid points by a parabola in log h."""
-    if not np.isfinite(loss).any():
-        raise InputError(
-            "--shared-bandwidth", "find a width at which all units can be judged",
-            "there is none", "leave it out, or give --bandwidth",
-        )  # fmt: skip
-    place = int(np.flatnonzero(loss == loss.min())[-1])
-    logs = np.log(grid)
-    around = slice(place - 1, place + 2)
-    if not 0 < place < grid.shape[0] - 1 or not np.isfinite(loss[around]).all():
-        return float(grid[place])
-    left, middle, right = loss[around].tolist()
-    bend = left - 2.0 * middle + right
-    step = 0.5 * (left - right) / bend if bend > 0.0 else 0.0
-    return math.exp(float(logs[place]) + step * float(logs[1] - logs[0]))
 
 
 def _none_made(units: Sequence[Unit]) -> InputError:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
+from fastsmooth.fleet import short_name, unit_name
 from fastsmooth.summary import PRUDENCE
 
 if TYPE_CHECKING:
@@ -11,6 +12,7 @@ if TYPE_CHECKING:
 
 _MOST_UNITS = 12
 _MOST_UNKNOWN = 5
+_LONGEST_NAME = 48
 
 
 def scored_lines(scored: Scored) -> list[str]:
@@ -86,14 +88,14 @@ def _fleet_lines(scored: Scored, units: list[dict[str, Any]]) -> list[str]:
     flagged.sort(key=lambda unit: -unit["share_outside"])
     columns = scored.units.column_names[: len(scored.by)]
     for unit in flagged[:_MOST_UNITS]:
-        name = ", ".join("null" if unit[one] is None else str(unit[one]) for one in columns)
+        name = short_name(unit_name(tuple(unit[one] for one in columns)), _LONGEST_NAME)
         lines += _unit_lines(unit, f"outside    {name}: ", "           ")
     if len(flagged) > _MOST_UNITS:
         lines.append(f"           and {len(flagged) - _MOST_UNITS:,} units more (--json has all)")
     if scored.unknown:
         most = sorted(scored.unknown.items(), key=lambda item: -item[1])
         told = "; ".join(
-            ", ".join("null" if one is None else str(one) for one in key) + f": {rows:,} rows"
+            f"{short_name(unit_name(key), _LONGEST_NAME)}: {_counted(rows, 'row')}"
             for key, rows in most[:_MOST_UNKNOWN]
         )
         more = len(most) - _MOST_UNKNOWN

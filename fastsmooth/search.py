@@ -133,9 +133,7 @@ def search_table(
         if by_block:
             by_fold, not_judged = job.left_out_points(grid.tolist(), mapped)
             rows_alone = not_judged if criterion == "leave-block-out" else rows_alone
-        found = mapped(
-            lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS
-        )
+        found = mapped(lambda name: _trail(job, name, grid, points, by_fold, criterion), ESTIMATORS)
         trails = dict(zip(ESTIMATORS, found, strict=True))
     return Search(criterion, shape.name, trails, rows_alone)
 
@@ -260,9 +258,7 @@ def _trail(
     )
 
 
-def _refine(
-    job: Scoring, name: str, grid: Floats, values: list[float], criterion: str
-) -> Point:
+def _refine(job: Scoring, name: str, grid: Floats, values: list[float], criterion: str) -> Point:
     """Golden section between the neighbours of the best grid point, on one level throughout."""
     if not any(math.isfinite(value) for value in values):
         raise InputError(

@@ -328,6 +328,14 @@ def _cautions(
             "The baseline leaves far rows out and the current rows are all counted: faults of the "
             "current period are part of the difference.",
         )
+    trail = base.search.trails[base.settings["estimator"]]
+    if base.width_given and base.bandwidth > trail.flat_zone[1]:
+        yield Caution(
+            "wide baseline",
+            f"The baseline's width {base.width_label(base.bandwidth)} was given and lies above its "
+            f"flat zone (up to {base.width_label(trail.flat_zone[1])}): where it smooths over a "
+            f"bend, a difference may be the baseline's own.",
+        )
     blocks = base.settings["block"], now.settings["block"]
     if blocks[0] != blocks[1]:
         told = [one or "runs of rows" for one in blocks]

@@ -257,6 +257,12 @@ def _checked_weights(sample_weight: Any, y: Floats) -> Floats:
         raise ValueError(f"sample_weight must not be negative, but it holds {weights.min():g}")
     if not weights.any():
         raise ValueError("sample_weight must hold a positive weight, but all are zero")
+    mean = weights[weights > 0.0].mean()
+    if mean < 1.0 - 1e-9:
+        raise ValueError(
+            f"sample_weight must tell how often each row stands, on average once or more, but the "
+            f"mean of the positive weights is {mean:g}; multiply all by one number"
+        )
     return weights
 
 

@@ -141,7 +141,13 @@ def _fit_line(made: Curve) -> str:
     return (
         f"fit        R2 {r2} on left-out rows, CV(RMSE) {percent('cv_rmse')}, "
         f"NMBE {percent('nmbe')}"
+        + ("; rows far off weigh less in these, too" if _is_reweighted(made) else "")
     )
+
+
+def _is_reweighted(made: Curve) -> bool:
+    facts = made.trace.get("robust")
+    return facts is not None and bool(facts["rounds"])
 
 
 def _limit_lines(made: Curve) -> list[str]:
@@ -149,12 +155,26 @@ def _limit_lines(made: Curve) -> list[str]:
     if limits is None:
         return []
     told = ", ".join(f"{100 * level:g} %" for level in limits.levels)
+    # Limits go with the scatter: those of rows of weight 4 lie half as far from the curve.
+    whose = (
+        "; the values are for rows of weight 1 and lie 1/sqrt(w) times as far from the curve for "
+        "rows of weight w"
+        if made.settings["weight"] is not None
+        else ""
+    )
+    empty = [
+        f"{100 * level:g} %"
+        for level, values in zip(limits.levels, limits.values, strict=True)
+        if not np.isfinite(values).any()
+    ]
+    if empty:
+        whose += f"; none at {', '.join(empty)}, for too few rows lie beyond"
     if not limits.rows_judged:
-        return [f"limits     {told}"]
+        return [f"limits     {told}{whose}"]
     found = ", ".join(f"{100 * share:.3g} %" for share in limits.coverage)
     return [
         f"limits     {told} of rows below; of {limits.rows_judged:,} rows held against limits made "
-        f"without them {found}"
+        f"without them {found}{whose}"
     ]
 
 

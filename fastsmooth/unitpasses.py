@@ -27,9 +27,9 @@ from fastsmooth.robust import (
 
 if TYPE_CHECKING:
     from fastsmooth.bintable import BinTable
-    from fastsmooth.manyunits import Job, Tables
     from fastsmooth.plan import Plan
     from fastsmooth.source import Chunk
+    from fastsmooth.unitjob import Job, Tables
 
 # Counts the rows of a source into a table for each unit that has a plan.
 Count = Callable[[Reweighted, Callable[[Key], "Plan | None"]], "Tables"]
@@ -101,7 +101,8 @@ def weigh_in_rounds(
     progress : callable
         As for `make_curve`.
     """
-    from fastsmooth.manyunits import middle_of_unit, spread
+    from fastsmooth.manyunits import middle_of_unit
+    from fastsmooth.unitjob import spread
 
     log, threads = job.reading.scale == "log", job.reading.threads
 

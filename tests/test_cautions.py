@@ -452,3 +452,12 @@ def test_a_store_of_few_folds_asks_for_another_store(tmp_path):
     update_store(tmp_path / "store", data, settings)
     made = make_curve(tmp_path / "store")
     assert text(made, "few folds").endswith("Make another store without --folds.")
+
+
+def test_equal_rows_predict_each_other():
+    """Three equal rows to a row: leave-one-out sees twins; with one to a row there is no word."""
+    x, y = clean(2000)
+    for repeats, told in ((3, True), (1, False)):
+        data = {"x": x, "y": y, "n": np.full(2000, repeats)}
+        made = make_curve(data, "x", "y", count="n")
+        assert ("equal rows" in codes(made)) == told

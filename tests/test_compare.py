@@ -402,6 +402,12 @@ def test_a_store_is_a_baseline_but_not_what_is_compared(files, tmp_path, capsys)
     assert (code, complaints) == (0, "")
     assert "2,880 used of 11,520 read, 60 blocks by logged_at:day" in " ".join(told.split())
     assert "blocks by logged_at:day, where plant = 'alder'" in " ".join(told.split())
+    # What is not given is as the store counted.
+    again = run(capsys, store, files / "now.parquet")
+    assert again == (0, told, "")
+    code, _, complaint = run(capsys, store, files / "now.parquet", "--base-where", "plant = 'oak'")
+    assert code == 2
+    assert "--where must agree with the store, but it is plant = 'oak' and" in complaint
     code, _, complaint = run(capsys, files / "birch.parquet", store)
     assert code == 2
     assert "NOW must be data or a curve, but" in complaint

@@ -22,7 +22,6 @@ from fastsmooth import (
     load_curve,
     make_curve,
     make_fleet,
-    manyunits,
     units_of,
 )
 from fastsmooth.bintable import Pyramid
@@ -30,10 +29,12 @@ from fastsmooth.cli import main
 from fastsmooth.fleet import MADE, Fleet, arrow_type, column_of
 from fastsmooth.fleetpass import count_fleet, count_units, lay_out
 from fastsmooth.grouping import Grouping, Keys
+from fastsmooth.likelybins import bins_for_width, likely_bins
 from fastsmooth.packing import pack, unpack
 from fastsmooth.passes import count_pass
-from fastsmooth.plan import Plan
+from fastsmooth.plan import Plan, Sample
 from fastsmooth.search import search_table
+from fastsmooth.sharedwidth import lowest_width
 from fastsmooth.source import Columns, open_source
 from tests import cases
 
@@ -262,6 +263,44 @@ def test_ten_thousand_units_find_room(block):
     layout = lay_out(simple_plan(block=block), 12_500, 4000, 50, 50_000_000, 2)
     assert bytes_of(layout) <= fleetpass.MEMORY_CAP_BYTES
     assert layout.bins >= (32 if block else 64)
+
+
+@pytest.mark.parametrize("rows_per_unit", [1e4, 1e6])
+def test_the_bins_that_widths_will_ask_for_are_guessed(rows_per_unit):
+    """A typical unit's width on so many rows spans enough of the bins, without very many more."""
+    rows = cases.make_rows("uniform", 40_000, 1)
+    code = np.arange(40_000) % 4
+    sample = Sample(rows.wet_bulb_c, rows.power_kw + 50.0 * code, code, np.arange(40_000))
+    plan = Plan.simple(-5.0, 28.0)
+    shape = SHAPES["biweight"]
+    bins = likely_bins(sample, code, plan, shape, "local-linear", rows_per_unit)
+    one = cases.make_rows("uniform", int(rows_per_unit), 2)
+    own = make_curve(one.columns(), X, Y, smoothing=Smoothing(engine="binned"))
+    spanned = own.bandwidth / (33.0 / bins)
+    assert shape.fewest_bins_per_bandwidth <= spanned < 4 * shape.fewest_bins_per_bandwidth
+
+
+def test_a_sample_too_small_tells_no_bins():
+    few = Sample(np.arange(9.0), np.arange(9.0), np.zeros(9, np.int64), np.arange(9))
+    nothing = likely_bins(
+        few, np.zeros(9, np.int64), Plan.simple(0.0, 9.0), SHAPES["biweight"], "local-linear", 1e6
+    )
+    assert nothing is None
+    same = Sample(np.ones(2000), np.arange(2000.0), np.zeros(2000, np.int64), np.arange(2000))
+    assert (
+        likely_bins(
+            same, np.zeros(2000, np.int64), Plan.simple(0.0, 9.0), SHAPES["biweight"],
+            "local-linear", 1e6,
+        )
+        is None
+    )  # fmt: skip
+
+
+def test_a_width_of_the_callers_decides_the_bins():
+    shape = SHAPES["biweight"]
+    assert bins_for_width(1.0, 0.0, 10.0, shape) == 512
+    assert bins_for_width(100.0, 0.0, 10.0, shape) == 8
+    assert bins_for_width(5e-324, 0.0, 10.0, shape) == 1
 
 
 def test_far_too_many_units_are_refused():
@@ -524,7 +563,7 @@ def test_units_with_too_little_data_say_so(made):
             50,
         ),
         "north": (MADE, None, 4000),
-        "one": ("x constant", "wet_bulb_c is the same in all 1 rows.", 1),
+        "one": ("x constant", "There is one row only.", 1),
         "south": (MADE, None, 3000),
         "stuck": ("x constant", "wet_bulb_c is the same in all 40 rows.", 40),
         "two": (
@@ -642,8 +681,11 @@ def test_a_shared_width_is_the_best_for_all_together(odd):
     assert told["units_judging"] == 2
     assert told["rows_judging"] == 7000
     # The same sum from each unit's own table, by hand.
+    bins = found.trace["engine"]["bins"]
     with open_source(data, Columns(X, Y), units=("plant",)) as source:
-        counted = count_fleet(source, Reading(), Grouping.parse("plant"))
+        counted = count_fleet(
+            source, Reading(), Grouping.parse("plant"), likely=lambda *about: bins
+        )
     widths, loss = np.array(told["widths"]), 0.0
     for table in counted.units.tables().values():
         values = (
@@ -697,12 +739,12 @@ def test_a_shared_width_needs_somebody_to_judge(odd):
 def test_the_lowest_point_between_grid_widths():
     grid = np.geomspace(0.1, 10.0, 21)
     loss = 1.0 + (np.log(grid) - math.log(0.7)) ** 2
-    assert manyunits._lowest(grid, loss) == pytest.approx(0.7, rel=1e-9)
+    assert lowest_width(grid, loss) == pytest.approx(0.7, rel=1e-9)
     loss[:3] = math.inf
-    assert manyunits._lowest(grid, np.where(grid < 0.72, math.inf, loss)) == grid[9]
-    assert manyunits._lowest(grid, -grid) == grid[-1]
+    assert lowest_width(grid, np.where(grid < 0.72, math.inf, loss)) == grid[9]
+    assert lowest_width(grid, -grid) == grid[-1]
     with pytest.raises(InputError, match="find a width at which all units can be judged"):
-        manyunits._lowest(grid, np.full(21, math.inf))
+        lowest_width(grid, np.full(21, math.inf))
 
 
 # Files.
@@ -915,6 +957,23 @@ def test_the_command_writes_one_table_and_tells_the_units(tmp_path, capsys):
     assert "for all, chosen by leave-one-out summed over 3 units" in " ".join(
         capsys.readouterr().out.split()
     )
+
+
+def test_the_summary_holds_odd_names_on_one_line_each():
+    from fastsmooth.fleetwords import fleet_lines
+
+    rng = np.random.default_rng(4)
+    names = ["a" * 300, "", "null", "line\nbreak", " led", None, "ö/ü"]
+    n = 60 * len(names)
+    x = rng.uniform(0.0, 10.0, n)
+    plant = [names[row % len(names)] for row in range(n)]
+    data = pa.table({"x": x, "y": x + rng.normal(0.0, 0.1, n), "plant": pa.array(plant)})
+    made = make_fleet(data, "x", "y", by="plant", smoothing=Smoothing(bandwidth=3.0))
+    lines = [one for one in fleet_lines(made) if " 60 rows  bandwidth 3" in one]
+    assert [one[2:34].strip() for one in lines] == [
+        '""', '" led"', "a" * 16 + "…" + "a" * 15, "line break", '"null"', "ö/ü", "null",
+    ]  # fmt: skip
+    assert {one.index(" rows  bandwidth") for one in lines} == {49}
 
 
 def test_the_summary_tells_units_without_a_curve(made):

@@ -78,6 +78,30 @@ def test_coverage_is_that_of_left_out_rows_and_told():
     assert made.trace["engine"]["passes"] == 2
 
 
+def test_limits_of_weighted_rows_say_whose_they_are():
+    data = rows() | {"precision": np.full(60_000, 4.0)}
+    made = curve(data, (0.05, 0.95), weight="precision")
+    plain = curve(data, (0.05, 0.95))
+    told = next(one for one in curve_lines(made) if one.startswith("limits"))
+    assert told.endswith(
+        "; the values are for rows of weight 1 and lie 1/sqrt(w) times as far from the curve for "
+        "rows of weight w"
+    )
+    line = next(one for one in curve_lines(plain) if one.startswith("limits"))
+    assert "weight" not in line
+    # As told: those of these rows, of weight 4, lie half as far from the curve.
+    half = (made.limits.values - made.estimate) / 2.0
+    assert half == pytest.approx(plain.limits.values - plain.estimate, abs=1e-6)
+
+
+def test_limits_that_too_few_rows_lie_beyond_are_told():
+    made = curve(rows(300), (0.001, 0.5))
+    assert np.isnan(made.limits.values[0]).all()
+    assert np.isfinite(made.limits.values[1]).any()
+    told = next(one for one in curve_lines(made) if one.startswith("limits"))
+    assert told.endswith("; none at 0.1 %, for too few rows lie beyond")
+
+
 @pytest.mark.parametrize("seed", range(3))
 def test_limits_never_cross(seed):
     data = rows(400, seed)
@@ -194,3 +218,11 @@ def test_layouts_stay_within_the_cap():
         assert 8 * np.prod(made.shape) <= 256 << 20 or made.groups == 2
     assert widening((0.5,)) == pytest.approx((np.pi / 2.0) ** 0.2)
     assert widening((0.5, 0.99)) == pytest.approx(widening((0.99,)))
+
+
+def test_the_picture_shows_limits():
+    from fastsmooth.report.picture import figure
+
+    made = curve(rows(5000))
+    drawn = {line.get_gid() for panel in figure(made).axes for line in panel.lines}
+    assert {"limit 0.05", "limit 0.5", "limit 0.95"} <= drawn

@@ -35,6 +35,9 @@ from fastsmooth.errors import InputError, ReadError, WriteError
 from fastsmooth.files import find_files, read_identity
 from fastsmooth.settings import Reading
 from fastsmooth.source import Columns, open_source
+from fastsmooth.store.opening import open_store
+from fastsmooth.store.settings import StoreSettings
+from fastsmooth.store.update import update_store
 from tests import cases
 from tests.source_tools import gather
 
@@ -568,3 +571,17 @@ def test_azure_account_comes_from_the_environment(answering, monkeypatch):
     )
     assert all(path.startswith("/coolers/plants") for path in answering.seen)
     assert answering.seen
+
+
+def test_a_moved_object_is_not_counted_into_a_store_twice(store, tmp_path):
+    fill(store, "plants/2025/a.parquet", "plants/2025/b.parquet")
+    wanted = StoreSettings("wet_bulb_c", "power_kw")
+    update_store(tmp_path / "store", "s3://plants/2025", wanted)
+    put(store, "plants/2025/c.parquet", as_bytes(readings(100, 1)))
+    store.delete_file("plants/2025/b.parquet")
+    done = update_store(tmp_path / "store", "s3://plants/2025")
+    assert (done.moved, done.added, done.vanished) == (("s3://plants/2025/c.parquet",), (), ())
+    assert open_store(tmp_path / "store").manifest.used == 200
+    # While the other one is there, the same bytes are rows of their own, as they are here.
+    put(store, "plants/2025/d.parquet", as_bytes(readings(100, 1)))
+    assert len(update_store(tmp_path / "store", "s3://plants/2025").added) == 1

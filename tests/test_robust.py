@@ -62,6 +62,15 @@ def test_it_says_what_it_did():
     assert f"{facts['rows_ignored']:,} of them not at all" in line
 
 
+def test_its_fit_is_told_to_be_a_weighted_one():
+    data = rows()
+    told = "; rows far off weigh less in these, too"
+    fit = [one for one in curve_lines(curve(data)) if one.startswith("fit")]
+    assert len(fit) == 1
+    assert fit[0].endswith(told)
+    assert not any(told in one for one in curve_lines(curve(data, Smoothing())))
+
+
 def test_a_stuck_sensor_is_told_where_it_stuck():
     data = rows(spoilt=0.0)
     stuck = (data["x"] > 10.0) & (data["x"] < 11.0) & (np.arange(6000) % 3 == 0)

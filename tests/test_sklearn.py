@@ -114,6 +114,7 @@ def test_fractions_of_rows():
     [
         (-np.ones(Y.size), "sample_weight must not be negative, but it holds -1"),
         (np.zeros(Y.size), "sample_weight must hold a positive weight, but all are zero"),
+        (np.full(Y.size, 0.5), "mean of the positive weights is 0.5; multiply all by one number"),
         (np.ones((Y.size, 1)), "must be 1D, but it has 2 dimensions"),
         (np.ones(3), "inconsistent numbers of samples"),
         (np.full(Y.size, np.nan), "sample_weight contains NaN"),

@@ -582,6 +582,27 @@ def test_what_needs_rows_is_refused(days, tmp_path, option, asked):
     )
 
 
+@pytest.mark.parametrize("blocks", ["logged_at:day", None])
+def test_days_of_another_clock_are_refused(tmp_path, blocks):
+    wanted = replace(DAY, block=blocks)
+    first = write_day(tmp_path, 0)
+    table = pq.read_table(first)
+    here = table["logged_at"].cast(pa.timestamp("s", "Europe/Madrid"))
+    second = tmp_path / "madrid.parquet"
+    pq.write_table(table.set_column(0, "logged_at", here), second)
+    update(tmp_path / "store", str(first), wanted)
+    with pytest.raises(InputError) as refused:
+        update(tmp_path / "store", str(second))
+    assert str(refused.value) == (
+        "--period must name a column of one kind in every file, but 'logged_at' holds times in "
+        "zone Europe/Madrid and in the store's files times without a zone; write the files alike, "
+        "or make another store."
+    )
+    # In one update they are refused alike.
+    with pytest.raises(InputError, match="must name a column of one kind in every file"):
+        update(tmp_path / "other", [str(first), str(second)], wanted)
+
+
 def test_refusals_of_new_stores_leave_no_folder(days, tmp_path):
     cases = [
         (StoreSettings("wet_bulb_c"), "--y must be given for a new store, but it is missing"),
@@ -591,8 +612,8 @@ def test_refusals_of_new_stores_leave_no_folder(days, tmp_path):
     ]
     for wanted, text in cases:
         with pytest.raises(InputError, match=text):
-            update(tmp_path / "store", str(days[0]), wanted)
-        assert not (tmp_path / "store").exists()
+            update(tmp_path / "new" / "store", str(days[0]), wanted)
+        assert not (tmp_path / "new").exists()
     (tmp_path / "other").mkdir()
     (tmp_path / "other" / "notes.txt").write_text("mine")
     with pytest.raises(InputError, match="STORE must be a store, or an empty or new folder, but"):

@@ -92,12 +92,17 @@ def compare(
 
 
 def _groups(base: str, options: dict[str, Any]) -> dict[str, Any]:
-    """Take the options that make groups of settings; what was not given is as in BASE's curve."""
+    """Take the options that make groups of settings.
+
+    What was not given is as in BASE's curve, or as the store counted that stands for BASE.
+    """
     from dataclasses import replace
 
     from fastsmooth.compare import held_curve
     from fastsmooth.settings import Band, Reading, Smoothing
     from fastsmooth.sides import reading_of
+    from fastsmooth.store.disk import is_store
+    from fastsmooth.store.opening import open_store
 
     def given(*names: str) -> dict[str, Any]:
         taken = {name: options.pop(name) for name in names}
@@ -116,6 +121,11 @@ def _groups(base: str, options: dict[str, Any]) -> dict[str, Any]:
         groups["reading"] = replace(reading_of(held), **read)
         if base_where is not None:
             groups["base_reading"] = replace(reading_of(held), where=base_where)
+        return groups
+    if is_store(base):
+        own = open_store(base).reading
+        groups["reading"] = replace(own, **read)
+        groups["base_reading"] = replace(own, where=own.where if base_where is None else base_where)
         return groups
     groups["reading"] = reading = Reading(**read)
     if base_where is not None:

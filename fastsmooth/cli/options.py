@@ -131,8 +131,15 @@ def _reading(
 
 
 def _smoothing(
-    estimator: str, kernel: str, bandwidth: str | None, criterion: str | None, widths: int,
-    neighbours: int | None, robust: bool, engine: str, memory: float,
+    estimator: str,
+    kernel: str,
+    bandwidth: str | None,
+    criterion: str | None,
+    widths: int,
+    neighbours: int | None,
+    robust: bool,
+    engine: str,
+    memory: float,
 ) -> Smoothing:
     from fastsmooth.settings import Smoothing
 
@@ -197,15 +204,36 @@ def make_many(data: tuple[str, ...], options: dict[str, Any], progress: Progress
 def _arguments(data: tuple[str, ...], options: dict[str, Any]) -> dict[str, Any]:
     check_given(data, options)
     reading = _reading(
-        **_take(options, (
-            "where", "range_", "scale", "strict", "threads", "folds", "block", "timeout", "last",
-        ))
+        **_take(
+            options,
+            (
+                "where",
+                "range_",
+                "scale",
+                "strict",
+                "threads",
+                "folds",
+                "block",
+                "timeout",
+                "last",
+            ),
+        )
     )
     smoothing = _smoothing(
-        **_take(options, (
-            "estimator", "kernel", "bandwidth", "criterion", "widths", "neighbours", "robust",
-            "engine", "memory",
-        ))
+        **_take(
+            options,
+            (
+                "estimator",
+                "kernel",
+                "bandwidth",
+                "criterion",
+                "widths",
+                "neighbours",
+                "robust",
+                "engine",
+                "memory",
+            ),
+        )
     )
     names = (
         "level",

@@ -17,6 +17,7 @@ from fastsmooth.report.look import (  # fmt: skip
     CELLS,
     CURVE,
     MUTED,
+    OTHER,
     PAPER,
     ROWS,
     RULE,
@@ -156,6 +157,7 @@ def draw_rows(panel: Axes, curve: Curve, shown: Shown) -> Ticks:
     _draw_cells(panel, curve, shown)
     x = shown.plotted(curve.x)
     _draw_band(panel, curve, x)
+    _draw_limits(panel, curve, x)
     halo = [withStroke(linewidth=4.2, foreground=PAPER, alpha=0.75)]
     for stretch in stretches(curve.status):
         if stretch.status == OUTSIDE:
@@ -201,6 +203,13 @@ def _draw_cells(panel: Axes, curve: Curve, shown: Shown) -> None:
         np.ma.masked_where(shade <= 0.0, shade).T, cmap=CELLS, vmin=0.0,
         rasterized=True, zorder=1, gid="cells",
     )  # fmt: skip
+
+
+def _draw_limits(panel: Axes, curve: Curve, x: Floats) -> None:
+    if curve.limits is None:
+        return
+    for level, values in zip(curve.limits.levels, curve.limits.values, strict=True):
+        panel.plot(x, values, color=OTHER, linewidth=0.8, zorder=4, gid=f"limit {level:g}")
 
 
 def _draw_band(panel: Axes, curve: Curve, x: Floats) -> None:

@@ -104,6 +104,9 @@ def reading_notes(curve: Curve, coarse_cells: bool, unsampled: bool) -> str:
         least = curve.settings["least_rows"]
         folds = ", or too few folds of blocks" if curve.settings["block"] else ""
         notes.append(f"Dashed (thin): fewer than {least:g} effective rows{folds}.")
+    if curve.limits is not None:
+        shares = ", ".join(f"{100.0 * level:g} %" for level in curve.limits.levels)
+        notes.append(f"Thin lines: below them lie {shares} of the rows.")
     if coarse_cells:
         notes.append("Rows are not shown: far values of y make their cells too coarse.")
     elif unsampled:

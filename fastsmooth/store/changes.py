@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 from fastsmooth.addresses import as_address, open_stream
 from fastsmooth.errors import InputError
-from fastsmooth.files import FileRecord, read_identity, reading
+from fastsmooth.files import FileRecord, is_there, read_identity, reading
 from fastsmooth.store import disk
 from fastsmooth.store.ledger import Entry
 
@@ -76,6 +76,7 @@ def sort_files(paths: list[str], entries: list[Entry], with_hash: bool) -> Sorte
         else:
             found.changed[n] = record
     new = [read_identity(path, None) for path in paths if path not in place]
+    found.vanished.extend(_moved_away(new, entries, set(place.values())))
     if with_hash:
         found.digests.update({record.path: digest_of_file(record.path) for record in new})
     for record in new:
@@ -131,6 +132,15 @@ def _places(
     return place
 
 
+def _moved_away(new: list[FileRecord], entries: list[Entry], named: set[int]) -> list[int]:
+    """Objects that are gone and have the ETag of a new one; a store is not asked for all others."""
+    marks = {(record.size_bytes, record.etag) for record in new if record.etag is not None}
+    return [
+        n for n, entry in enumerate(entries)
+        if (entry.size_bytes, entry.etag) in marks and n not in named and not is_there(entry.path)
+    ]  # fmt: skip
+
+
 def _counted_before(
     record: FileRecord, new: list[FileRecord], entries: list[Entry], found: Sorted
 ) -> int | None:
@@ -161,7 +171,8 @@ def _counted_before(
     entry = entries[former[0]]
     rivals = _namesakes(entry, new) if by_name else [one for one in new if is_alike(entry, one)]
     # Times in whole seconds come from archives and coarse clocks: two files may well share one.
-    sure = by_name or record.modified_ns % 1_000_000_000 != 0
+    marked = record.etag is not None and record.etag == entry.etag
+    sure = by_name or marked or record.modified_ns % 1_000_000_000 != 0
     if len(former) > 1 or len(rivals) > 1 or not sure:
         raise InputError(
             "DATA", "be told apart from files that were counted and are gone",

@@ -14,13 +14,14 @@ from fastsmooth.bintable import BinTable
 from fastsmooth.fleet import Fleet
 from fastsmooth.fromtable import check_rows_spared
 from fastsmooth.grouping import Grouping, Key
-from fastsmooth.manyunits import Job, fleet_of_tables
+from fastsmooth.manyunits import fleet_of_tables
 from fastsmooth.passes import Counted, Progress, silent
 from fastsmooth.plan import Sample
 from fastsmooth.settings import Band, Reading, Smoothing
 from fastsmooth.store.curves import told_of
 from fastsmooth.store.opening import Store, Window, reading_of, with_store
 from fastsmooth.store.settings import StoreSettings
+from fastsmooth.unitjob import Job
 
 
 @dataclass(frozen=True)

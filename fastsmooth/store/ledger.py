@@ -141,6 +141,8 @@ class Basis:
         A round number near the middle of y.
     rows_per_run, folds_per_task : int
         How runs of rows are dealt to folds.
+    kinds : dict of str to str
+        Kinds of the block's and the period's column, in words; see `fastsmooth.blocks.kind_of`.
     """
 
     settings: StoreSettings
@@ -153,6 +155,7 @@ class Basis:
     reference: float
     rows_per_run: int
     folds_per_task: int
+    kinds: dict[str, str] = field(default_factory=dict)
 
     @property
     def period(self) -> Period | None:

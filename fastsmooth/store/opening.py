@@ -106,6 +106,11 @@ class Store:
         return self.manifest.basis.settings
 
     @property
+    def reading(self) -> Reading:
+        """How its rows were read."""
+        return reading_of(self.settings, Reading())
+
+    @property
     def entries(self) -> tuple[Entry, ...]:
         """The files counted."""
         return self.manifest.entries

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fastsmooth.axis import Axis
+from fastsmooth.blocks import Block, check_alike, kind_of
 from fastsmooth.errors import InputError
 from fastsmooth.fleet import arrow_type
 from fastsmooth.grouping import Grouping, Keys
@@ -17,6 +18,7 @@ from fastsmooth.source import Source, open_source
 from fastsmooth.store.counting import columns_to_read
 from fastsmooth.store.grid import NODES, Grid, core_range, widen
 from fastsmooth.store.ledger import Basis
+from fastsmooth.store.periods import Period
 from fastsmooth.store.settings import StoreSettings
 from fastsmooth.store.units import stored_type
 
@@ -35,11 +37,13 @@ def open_files(paths: Sequence[str], basis: Basis) -> Source:
     Raises
     ------
     InputError
-        x is of another kind, in another time zone, or finer than the store counts it.
+        x, block or period is of another kind or in another time zone, or x is finer than the
+        store counts it.
     """
     source = open_source(list(paths), columns_to_read(basis.settings), where=basis.settings.where)
     try:
         _check_axis(source.axis, basis.axis, basis.settings.names[0])
+        _check_kinds(_kinds(source, basis.settings), basis)
     except InputError:
         source.close()
         raise
@@ -54,6 +58,38 @@ def _check_axis(axis: Axis, own: Axis, column: str) -> None:
             f"'{column}' is {axis.arrow_type} and the store has {own.arrow_type}",
             "write the files alike, or make another store",
         )  # fmt: skip
+
+
+def _kinds(source: Source, settings: StoreSettings) -> dict[str, str]:
+    """Kinds of the block's and the period's column, which must be one each in all files."""
+    made = {}
+    for argument, column in _told_apart(settings).items():
+        types = [schema.field(column).type for schema in source.schemas]
+        check_alike(column, types, argument)
+        made[column] = next((kind for kind in map(kind_of, types) if kind), "")
+    return made
+
+
+def _told_apart(settings: StoreSettings) -> dict[str, str]:
+    """The columns whose values make blocks and periods, by option."""
+    made = {}
+    if settings.period is not None:
+        made["--period"] = Period.parse(settings.period).column
+    if settings.block is not None:
+        made["--block"] = Block.parse(settings.block).column
+    return made
+
+
+def _check_kinds(kinds: dict[str, str], basis: Basis) -> None:
+    """Refuse files whose blocks or periods would begin elsewhere than those of the store."""
+    for argument, column in _told_apart(basis.settings).items():
+        kind, own = kinds[column], basis.kinds.get(column, "")
+        if kind and own and kind != own:
+            raise InputError(
+                argument, "name a column of one kind in every file",
+                f"'{column}' holds {kind} and in the store's files {own}",
+                "write the files alike, or make another store",
+            )  # fmt: skip
 
 
 def new_basis(source: Source, settings: StoreSettings, threads: int) -> tuple[Basis, Grid]:
@@ -104,6 +140,7 @@ def new_basis(source: Source, settings: StoreSettings, threads: int) -> tuple[Ba
         settings, source.axis, _by_types(source, settings),
         {name: str(kind) for name, kind in source.fixed.key_types.items()}, source.x_unit,
         source.y_unit, bounds, plan.reference, plan.rows_per_run, plan.folds_per_task,
+        _kinds(source, settings),
     )  # fmt: skip
     return basis, Grid(grid.exponent, grid.first, bins, pilot)
 

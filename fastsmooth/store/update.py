@@ -182,6 +182,7 @@ def _files(data: Any) -> list[str]:
 def _folder(folder: str) -> Iterator[None]:
     """Make the folder of a new store, and remove it again if the store could not be made."""
     new = not os.path.isdir(folder)
+    made = _missing_folders(folder)
     if not new and not disk.is_store(folder):
         with os.scandir(folder) as entries:
             foreign = sorted(entry.name for entry in entries if not disk.is_own(entry.name))
@@ -198,10 +199,19 @@ def _folder(folder: str) -> Iterator[None]:
         if new and not disk.is_store(folder):
             with contextlib.suppress(OSError):
                 os.unlink(os.path.join(folder, disk.LOCK))
-            with contextlib.suppress(OSError):
-                os.rmdir(os.path.join(folder, disk.TABLES))
-                os.rmdir(folder)
+            for one in (os.path.join(folder, disk.TABLES), *made):
+                with contextlib.suppress(OSError):
+                    os.rmdir(one)
         raise
+
+
+def _missing_folders(folder: str) -> list[str]:
+    """The folder and those above it that have yet to be made, the innermost first."""
+    missing, place = [], os.path.abspath(folder)
+    while not os.path.isdir(place):
+        missing.append(place)
+        place = os.path.dirname(place)
+    return missing
 
 
 class _Job:
