@@ -740,3 +740,19 @@ def test_what_needs_rows_is_refused(folder, asked):
 def test_an_empty_table_is_refused(folder):
     with pytest.raises(InputError, match=r"^DATA must hold rows with"):
         fastsmooth.curve_from_table(BinTable(fastsmooth.plan_for(folder, X, Y)))
+
+
+def test_a_result_of_another_plan_is_refused():
+    """A statement may be kept for long; its result must not be read with another plan."""
+    rng = np.random.default_rng(3)
+    rows = pa.table({"x": rng.uniform(0.0, 25.0, 500), "y": rng.normal(size=500)})
+    one, other = (
+        fastsmooth.plan_for(rows, "x", "y", reading=fastsmooth.Reading(range=ends))
+        for ends in ((0.0, 26.0), (-1.0, 30.0))
+    )
+    connection = duckdb.connect()
+    connection.register("readings", rows)
+    text = statement(one, "readings", "duckdb", fold="0")
+    assert read_result(one, connection.sql(text)).tally.used == 500
+    with pytest.raises(InputError, match="x lies in other bins: another plan made the statement"):
+        read_result(other, connection.sql(text))

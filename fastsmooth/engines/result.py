@@ -166,6 +166,11 @@ def _add(table: BinTable, part: pa.RecordBatch, dealer: Dealer | None) -> None:
         if ((values < 0) | (values >= count)).any():
             raise _refusal(f"a {what} lies outside 0 to {count - 1}")
     low, high = (_numbers(used, name, pa.float64()) for name in ("low", "high"))
+    left = plan.origin + bins * plan.width
+    # A database's own logarithm may differ in the last digits.
+    hair = 1e-9 * (plan.width + max(abs(plan.origin), abs(plan.high)))
+    if ((low < left - hair) | (high > left + plan.width + hair)).any():
+        raise _refusal("x lies in other bins: another plan made the statement")
     table.extent = np.array([min(table.extent[0], low.min()), max(table.extent[1], high.max())])
     names = sum_names(plan)
     sums = {slot: _numbers(used, name, pa.float64()) for name, slot in names.items()}
