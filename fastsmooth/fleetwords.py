@@ -33,6 +33,7 @@ def fleet_lines(fleet: Fleet) -> list[str]:
     kind = "local quadratic centre" if settings["bias"] == "corrected" else "bias ignored"
     lines.append(f"band       {settings['band']} {100 * settings['level']:g} %, {kind}")
     lines += _robust_lines(fleet)
+    lines += _limit_lines(fleet)
     if "bins" in engine:
         times = "one pass" if engine["passes"] == 1 else f"{engine['passes']} passes"
         lines.append(
@@ -57,6 +58,7 @@ def fleet_facts(fleet: Fleet) -> dict[str, Any]:
         "engine": fleet.trace["engine"],
         "shared_bandwidth": fleet.trace["shared_bandwidth"],
         "robust": fleet.trace.get("robust"),
+        "limits": fleet.trace.get("limits"),
         "status_counts": fleet.status_counts(),
         "cautions": [caution._asdict() for caution in fleet.cautions],
         "caution_counts": caution_counts(fleet),
@@ -105,6 +107,21 @@ def _width_lines(fleet: Fleet) -> list[str]:
         f"bandwidth  {' to '.join(ends)}, median {_label(fleet, middle)}; each unit's own, chosen "
         f"by {settings['criterion']}; {estimator}"
     ]
+
+
+def _limit_lines(fleet: Fleet) -> list[str]:
+    facts = fleet.trace.get("limits")
+    if facts is None:
+        return []
+    levels, units = facts["levels"], facts["units"]
+    text = f"limits     {', '.join(f'{100 * level:g} %' for level in levels)} of rows below"
+    if facts["coverage"] is not None:
+        found = ", ".join(f"{100 * share:.3g} %" for share in facts["coverage"])
+        text += f"; of {facts['rows_judged']:,} rows held against limits made without them {found}"
+    for level, known in zip(levels, facts["units_with_limit"], strict=True):
+        if known < units:
+            text += f"; {units - known:,} units have none at {100 * level:g} %, for too few rows"
+    return [text]
 
 
 def _robust_lines(fleet: Fleet) -> list[str]:

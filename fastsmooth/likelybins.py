@@ -28,7 +28,8 @@ _BINS = 1024
 _WIDTHS = 16
 _FEWEST_ROWS = 1000
 # Units differ, and so do their widths.
-_MARGIN = 1.5
+_MARGIN = 1.35
+_LEAST, _MOST = 128, 1 << 30
 
 
 def likely_bins(
@@ -39,7 +40,7 @@ def likely_bins(
     estimator: str,
     rows_per_unit: float,
 ) -> int | None:
-    """Return the power of two of bins that a typical unit's width will ask for.
+    """Return how many bins a typical unit's width will ask for.
 
     The width that leave-one-out chooses on the sample, each unit's mean taken off, is carried over
     to the rows of one unit by the rate n^(-1/5) (Wand & Jones 1995, section 5.8).
@@ -86,7 +87,13 @@ def likely_bins(
 
 
 def bins_for_width(width: float, low: float, high: float, shape: Shape) -> int:
-    """Return the power of two of bins over a range at which a width spans enough of them."""
-    # Beyond any number of bins: such a width is refused once the range is known.
+    """Return how many bins over a range let a width span enough of them.
+
+    Quarters of an octave, so that bins can be merged two into one several times.
+    """
     wanted = _MARGIN * shape.fewest_bins_per_bandwidth * (high - low) / width
-    return 1 << math.ceil(math.log2(max(wanted, 1.0))) if math.isfinite(wanted) else 1
+    if not wanted < _MOST:
+        # Such a width is refused once the range is known.
+        return _MOST
+    step = max(_LEAST, 1 << math.ceil(math.log2(max(wanted, 1.0)))) // 8
+    return step * max(4, math.ceil(wanted / step))

@@ -152,13 +152,23 @@ def add_unit_limits(fleet: Fleet, job: Job, progress: Progress) -> Fleet:
     finder = unit_finder(job.grouping, keys)
     counts = count_residuals(job.source, lookup, layout, job.reading, finder, progress)
     shared = {name: fleet.trace[name] for name in SHARED}
-    units = []
+    units, made, known = [], 0, np.zeros(len(levels), np.int64)
+    below, judged = np.zeros(len(levels)), 0
     for unit, own in zip(fleet.units, counts, strict=False):
         curve = unit.curve
         if unit.status == MADE and curve is not None:
             limits = limits_of(curve, own, layout, levels, job.shape)
+            made += 1
+            known += np.isfinite(limits.values).any(axis=1)
+            below += np.nan_to_num(limits.coverage) * limits.rows_judged
+            judged += limits.rows_judged
             packed = PackedCurve.of(replace(curve, limits=limits), shared)
             unit = Unit(unit.key, MADE, None, unit.rows, packed)
         units.append(unit)
     engine = {**fleet.trace["engine"], "passes": fleet.trace["engine"]["passes"] + 1}
-    return replace(fleet, units=tuple(units), trace={**fleet.trace, "engine": engine})
+    told = {
+        "levels": list(levels), "units": made, "units_with_limit": known.tolist(),
+        "coverage": (below / judged).tolist() if judged else None, "rows_judged": judged,
+    }  # fmt: skip
+    trace = {**fleet.trace, "engine": engine, "limits": told}
+    return replace(fleet, units=tuple(units), trace=trace)

@@ -11,6 +11,8 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 from fastsmooth.kernels.shapes import SHAPES
+from hypothesis import given
+from hypothesis import strategies as st
 
 from fastsmooth import (
     Band,
@@ -296,11 +298,22 @@ def test_a_sample_too_small_tells_no_bins():
     )  # fmt: skip
 
 
-def test_a_width_of_the_callers_decides_the_bins():
+@given(width=st.floats(1e-5, 1e3))
+def test_a_width_of_the_callers_decides_the_bins(width):
     shape = SHAPES["biweight"]
-    assert bins_for_width(1.0, 0.0, 10.0, shape) == 512
-    assert bins_for_width(100.0, 0.0, 10.0, shape) == 8
-    assert bins_for_width(5e-324, 0.0, 10.0, shape) == 1
+    bins = bins_for_width(width, 0.0, 10.0, shape)
+    wanted = 1.35 * shape.fewest_bins_per_bandwidth * 10.0 / width
+    assert bins >= min(wanted, 1 << 30)
+    assert bins <= max(1.26 * wanted, 64)
+    # They merge two into one until few are left.
+    assert bins % 16 == 0
+    while bins > 128:
+        assert bins % 2 == 0
+        bins //= 2
+
+
+def test_no_width_asks_for_endless_bins():
+    assert bins_for_width(5e-324, 0.0, 10.0, SHAPES["biweight"]) == 1 << 30
 
 
 def test_far_too_many_units_are_refused():
