@@ -90,6 +90,7 @@ def read_result(plan: Plan, result: Any) -> BinTable:
     dealer = None if block is None else Dealer(replace(block, zone=None), plan.folds)
     for part in _parts(result_columns(plan), result):
         _add(table, part, dealer)
+        _check_plan(plan, part)
     return table
 
 
@@ -137,6 +138,18 @@ def _numbers(part: pa.RecordBatch, name: str, to: pa.DataType) -> NDArray[Any]:
         raise _refusal(f"'{name}' holds {column.type} ({str(error).splitlines()[0]})") from error
 
 
+def _check_plan(plan: Plan, part: pa.RecordBatch) -> None:
+    """Refuse the result of another plan's statement, which may have been kept for long."""
+    used = part.filter(pa.array(_numbers(part, "reason", pa.int64()) == 0))
+    bins = _numbers(used, "bin", pa.int64())
+    low, high = (_numbers(used, name, pa.float64()) for name in ("low", "high"))
+    left = plan.origin + bins * plan.width
+    # A database's own logarithm may differ in the last digits.
+    hair = 1e-9 * (plan.width + max(abs(plan.origin), abs(plan.high)))
+    if ((low < left - hair) | (high > left + plan.width + hair)).any():
+        raise _refusal("x lies in other bins: another plan made the statement")
+
+
 def _add(table: BinTable, part: pa.RecordBatch, dealer: Dealer | None) -> None:
     plan = table.plan
     reason = _numbers(part, "reason", pa.int64())
@@ -166,11 +179,6 @@ def _add(table: BinTable, part: pa.RecordBatch, dealer: Dealer | None) -> None:
         if ((values < 0) | (values >= count)).any():
             raise _refusal(f"a {what} lies outside 0 to {count - 1}")
     low, high = (_numbers(used, name, pa.float64()) for name in ("low", "high"))
-    left = plan.origin + bins * plan.width
-    # A database's own logarithm may differ in the last digits.
-    hair = 1e-9 * (plan.width + max(abs(plan.origin), abs(plan.high)))
-    if ((low < left - hair) | (high > left + plan.width + hair)).any():
-        raise _refusal("x lies in other bins: another plan made the statement")
     table.extent = np.array([min(table.extent[0], low.min()), max(table.extent[1], high.max())])
     names = sum_names(plan)
     sums = {slot: _numbers(used, name, pa.float64()) for name, slot in names.items()}
