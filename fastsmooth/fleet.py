@@ -325,11 +325,9 @@ class Fleet:
         ]
         status = np.concatenate(codes) if codes else np.empty(0, int)
         columns["status"] = pa.array(words).take(pa.array(status.astype(np.int64)))
-        first = np.concatenate(([0], np.cumsum(lengths)))[:-1].astype(np.int64)
-        place_of = np.full(sum(lengths), -1, np.int64)
-        place_of[first] = np.arange(len(packed))
-        facts = pa.array([b"" if one is None else one.facts for one in packed], pa.large_binary())
-        columns[FACTS] = facts.take(pa.array(place_of, mask=place_of < 0))
+        columns[FACTS] = _in_first_rows(
+            [b"" if one is None else one.facts for one in packed], lengths
+        )
         metadata = {FLEET_KEY: json.dumps(self.to_dict(), allow_nan=False, default=str).encode()}
         return pa.table(columns).replace_schema_metadata(metadata)
 
@@ -481,6 +479,22 @@ def arrow_type(name: str) -> pa.DataType:
     if fixed:
         return pa.binary(int(fixed[1]))
     return pa.type_for_alias(name)
+
+
+def _in_first_rows(values: Sequence[bytes], lengths: Sequence[int]) -> pa.Array:
+    """A binary column with each value in the first of so many rows, and nulls in the others."""
+    import pyarrow as pa
+
+    rows = sum(lengths)
+    first = np.cumsum([0, *lengths])[:-1]
+    held, sizes = np.zeros(rows, bool), np.zeros(rows + 1, np.int64)
+    held[first] = True
+    sizes[first + 1] = [len(one) for one in values]
+    # Thousands of curves take hundreds of megabytes: they are joined once and not copied again.
+    buffers = [
+        pa.array(held).buffers()[1], pa.py_buffer(np.cumsum(sizes)), pa.py_buffer(b"".join(values)),
+    ]  # fmt: skip
+    return pa.LargeBinaryArray.from_buffers(pa.large_binary(), rows, buffers)
 
 
 def _altered(name: str, what: str) -> InputError:

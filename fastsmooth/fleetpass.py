@@ -275,6 +275,7 @@ def count_units(
     *,
     most_units: int | None = None,
     room: int = 0,
+    units_per_task: float = 1.0,
     sampled_rows: int = 1,
     pooled: bool = False,
 ) -> CountedUnits:
@@ -302,6 +303,8 @@ def count_units(
         More are refused with `TooManyUnits`; None takes any number.
     room : int
         Bins that all units together will have, as far as is known: memory is not moved then.
+    units_per_task : float
+        How many units a task holds, as far as is known.
     sampled_rows : int
         First rows of each unit in each task that are kept as they are.
     pooled : bool
@@ -314,14 +317,18 @@ def count_units(
     """
     dealer = None if reading.blocks is None else Dealer(reading.blocks, base.folds)
     stride = max(1, (source.rows_expected or 64 * _SHOWN_ROWS) // _SHOWN_ROWS)
-    ways = Ways(grouping, base, plan_for, dealer, most_units, room, max(1, sampled_rows), stride)
+    ways = Ways(
+        grouping, base, plan_for, dealer, most_units, room, MEMORY_CAP_BYTES // 2,
+        max(1, sampled_rows), stride,
+    )  # fmt: skip
     alone = base.folds_per_task == 1 and base.block is None
 
     def count(parts: Iterator[tuple[Task, Iterator[Chunk]]]) -> UnitSums:
         sums: UnitSums | None = None
         for task, chunks in parts:
             if sums is None:
-                sums = UnitSums(ways, folds_of[task.index])
+                folds, own_room = met_by[task.index]
+                sums = UnitSums(ways, folds, own_room)
             for chunk in chunks:
                 sums.update(chunk, task)
         assert sums is not None  # no group is empty
@@ -337,7 +344,13 @@ def count_units(
         progress("reading", done, source.rows_expected)
 
     groups = task_groups(source.tasks, base)
-    folds_of = {group[0].index: _folds_met(group, base) for group in groups}
+    met_by = {
+        group[0].index: (
+            _folds_met(group, base),
+            min(room, math.ceil(_MARGIN * units_per_task * len(group)) * base.bins),
+        )
+        for group in groups
+    }
     total = CountedUnits(ways)
     heard = None if progress is silent else report
     for part in source.map_groups(count, groups, reading.threads, progress=heard):
@@ -421,6 +434,7 @@ def count_fleet(
                 units = count_units(
                     source, base, plans_of(base, sample), replace(reading, threads=layout.workers),
                     grouping, progress, most_units=room, room=room * layout.bins,
+                    units_per_task=sample.units_per_task,
                     sampled_rows=_sampled_rows(layout, source, sample), pooled=True,
                 )  # fmt: skip
             except TooManyUnits:

@@ -54,6 +54,8 @@ class Ways:
         More units than this are too many.
     room : int
         Bins that all units together may have, as far as is known.
+    keep_bytes : int
+        Memory that sums of groups may take before they are added up.
     sampled_rows : int
         The first rows of each unit in each task that are kept as they are.
     stride : int
@@ -66,6 +68,7 @@ class Ways:
     dealer: Dealer | None
     most_units: int | None
     room: int
+    keep_bytes: int
     sampled_rows: int
     stride: int
 
@@ -158,6 +161,12 @@ class UnitSums:
     def keys(self) -> list[Key]:
         """The units met."""
         return self._keys.keys
+
+    @property
+    def touched_bytes(self) -> float:
+        """Memory that rows have reached: no more bins than rows."""
+        bins = np.minimum(self._bins * len(self.folds), self._read)
+        return float(bins.sum()) * self.ways.slots * self._pool.itemsize
 
     @property
     def extents(self) -> Floats:
@@ -417,9 +426,11 @@ class CountedUnits:
 
     def __init__(self, ways: Ways) -> None:
         self.ways = ways
-        # Everything but the sums, which stay in parts where groups have folds of their own.
+        # Everything but the sums, which stay in parts while memory allows: to add them all up
+        # would cost as much as to read a third of the rows, and a unit's rows may be in one part.
         self._all = UnitSums(ways, ())
         self._parts: list[UnitSums] = []
+        self._together = False
 
     def take(self, part: UnitSums, alone: bool) -> None:
         """Add the sums of one group; `alone` if no other group has rows of the same folds.
@@ -430,13 +441,17 @@ class CountedUnits:
             Together there are more units than memory was planned for.
         """
         self._all.note(part)
+        self._parts.append(part)
         if alone:
-            self._parts.append(part)
             return
-        if not self._parts:
-            folds = range(self.ways.base.folds)
-            self._parts.append(UnitSums(self.ways, folds, self.ways.room))
-        self._parts[0].merge(part)
+        if self._together or sum(one.touched_bytes for one in self._parts) > self.ways.keep_bytes:
+            if not self._together:
+                folds = range(self.ways.base.folds)
+                self._parts.insert(0, UnitSums(self.ways, folds, self.ways.room))
+                self._together = True
+            # In the order of the groups: then a unit's sums are the same bits either way.
+            while len(self._parts) > 1:
+                self._parts[0].merge(self._parts.pop(1))
 
     def finish(self) -> None:
         """Sort what was kept by unit; nothing is taken any more."""
@@ -480,7 +495,8 @@ class CountedUnits:
         for part in self._parts:
             if not part.bin_counts:
                 part.count_bins()
-            table.sums |= part.bin_counts
+            for fold, counts in part.bin_counts.items():
+                table.sums[fold] = table.sums[fold] + counts if fold in table.sums else counts
         table.tally = self.tally
         if self._all.keys:
             extent = self._all.extents
@@ -495,12 +511,23 @@ class CountedUnits:
         plan = self._all.plans[number]
         assert plan is not None
         table = BinTable(plan)
+        own: set[int] = set()
         for part, numbers in zip(self._parts, self._numbers, strict=True):
             if key in numbers:
                 for fold in part.folds:
                     sums = part.part(numbers[key], fold)
-                    if sums is not None:
+                    if sums is None:
+                        continue
+                    if fold not in table.sums:
                         table.sums[fold] = sums
+                        continue
+                    if fold not in own:
+                        table.sums[fold] = table.sums[fold].copy()
+                        own.add(fold)
+                    # Sums that overflow are refused once all rows are in.
+                    with np.errstate(over="ignore", invalid="ignore"):
+                        table.sums[fold] += sums
+                    table.sums[fold][:, _PILOT] = plan.pilot_per_bin
         table.extent = self._all.extents[number].copy()
         table.tally = self._all.tally_of(number)
         table.blocks = self._all.blocks.get(number, set())
