@@ -334,9 +334,7 @@ def fit_slots(sums, at_zero, per_unit, count, fits):
     types.void(READ_1D, READ_1D, READ_1D, READ_1D, types.float64, types.int64, types.int64,
                READ_2D, WRITE_2D, WRITE_2D, WRITE_1D, WRITE_2D)
 )  # fmt: skip
-def refit_slots(
-    x, y, weight, coefficients, bandwidth, first, count, sums, terms, basis, fit, fits
-):
+def refit_slots(x, y, weight, coefficients, bandwidth, first, count, sums, terms, basis, fit, fits):
     """Fit windows that look poor directly, where need be; rows at one x share their window."""
     at_zero = coefficients[0]
     former = -1
