@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import os
+import secrets
 import shutil
 import tempfile
 import time
-from collections.abc import Sequence
-from contextlib import ExitStack
+from collections.abc import Iterator, Sequence
+from contextlib import ExitStack, contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
 
@@ -141,13 +142,26 @@ def measure_sizes(
     progress("loading the kernels (a first run compiles them)", 0, None)
     loading = load_kernels()
     progress("writing invented Parquet files", 0, None)
-    with tempfile.TemporaryDirectory(prefix=_FOLDER_PREFIX, dir=folder) as temporary:
-        figures = _take_figures(sizes, threads, Path(temporary), progress)
+    with _temporary_folder(Path(folder)) as temporary:
+        figures = _take_figures(sizes, threads, temporary, progress)
     return Measurement(
         machine=machine, measured_at=measured_at, threads=threads, quick=quick,
         price_per_hour=price_per_hour, loading=loading, load_average=load,
         stolen_share=_stolen_share(ticks, stolen_and_all_ticks()), figures=tuple(figures),
     )  # fmt: skip
+
+
+@contextmanager
+def _temporary_folder(parent: Path) -> Iterator[Path]:
+    """Make a folder, and remove it whatever happens."""
+    path = parent / f"{_FOLDER_PREFIX}{secrets.token_hex(8)}"
+    # The name is known before the folder is made: no interruption finds one that nobody knows.
+    try:
+        path.mkdir(mode=0o700)
+        yield path
+    finally:
+        if path.exists():
+            shutil.rmtree(path)
 
 
 def load_kernels() -> Loading:
