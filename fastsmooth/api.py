@@ -31,6 +31,7 @@ from fastsmooth.passes import (
 from fastsmooth.reweighted import Reweighted
 from fastsmooth.robust import (
     ENOUGH,
+    NOT_WEIGHED,
     ROUNDS,
     core_of,
     farthest_move,
@@ -379,7 +380,7 @@ def _search_in_rounds(
     low, high = chosen.counted.table.extent.tolist()
     core = core_of(sample, np.linspace(low, high, ROBUST_POINTS))
     if core is None:
-        return replace(chosen, robust={"rounds": 0, "reason": "half of the rows lie on the curve"})
+        return replace(chosen, robust=dict(NOT_WEIGHED))
     log = reading.scale == "log"
     rounds, moved = 0, math.inf
     while rounds < ROUNDS and moved > ENOUGH:

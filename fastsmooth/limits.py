@@ -19,12 +19,12 @@ from numpy.typing import NDArray
 
 from fastsmooth.blocks import Dealer
 from fastsmooth.curve import OUTSIDE, Curve, Limits
+from fastsmooth.lookup import CurvePoints, Lookup, root_of
 from fastsmooth.passes import Progress, silent
 from fastsmooth.settings import Reading
 
 if TYPE_CHECKING:
     from fastsmooth.kernels.shapes import Shape
-    from fastsmooth.lookup import Lookup
     from fastsmooth.reweighted import Finder
     from fastsmooth.source import Chunk, Source, Task
 
@@ -126,8 +126,7 @@ def count_residuals(
         for chunk in chunks:
             unit = find(chunk)
             own = chunk.weight
-            with np.errstate(invalid="ignore"):
-                root = None if own is None else np.sqrt(np.where(own > 0.0, own, np.nan))
+            root = None if own is None else root_of(own)
             z = lookup.score(chunk.x, chunk.y, unit, np.inf, root).z
             stretch = lookup.stretch(chunk.x, unit, layout.stretches)
             group: NDArray[Any] = (row + np.arange(chunk.x.shape[0])) // run
@@ -168,8 +167,6 @@ def add_limits(
     progress: Progress = silent,
 ) -> Curve:
     """Return the curve with limits of its own rows, in one more pass; as it is without levels."""
-    from fastsmooth.lookup import CurvePoints, Lookup
-
     if not levels:
         return curve
     lookup = Lookup([CurvePoints.of(curve)], curve.scale == "log")

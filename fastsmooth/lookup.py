@@ -293,6 +293,12 @@ class Lookup:
         return ScoredRows(expected, residual, z, status)
 
 
+def root_of(weight: Floats) -> Floats:
+    """Return square roots of precisions, as `Lookup.score` takes them; NaN of negative ones."""
+    with np.errstate(invalid="ignore"):  # a negative precision is no reading
+        return np.sqrt(weight)
+
+
 def _side(z: Floats, low: Floats, high: Floats) -> Codes:
     """Return `ABOVE` or `BELOW` for z beyond the limits, else `INSIDE`: the place that judges."""
     return (z > high) * np.int8(ABOVE) + (z < low) * np.int8(BELOW)

@@ -361,14 +361,19 @@ def _sort_out(job: Job, tables: Tables, keys: Sequence[Key]) -> tuple[dict[Key, 
     return units, [key for key in keys if key not in units]
 
 
+def search_unit(job: Job, table: BinTable, pyramid: Pyramid) -> Search:
+    """Search the width of one unit; errors as for `search_table`."""
+    return search_table(
+        table, pyramid, job.shape, criterion=job.criterion,
+        by_block=job.reading.block is not None, widths=job.smoothing.widths,
+    )  # fmt: skip
+
+
 def middle_of_unit(job: Job, table: BinTable, places: Floats) -> Floats | None:
     """Return a unit's curve at places on the plan's scale; None where rows are too few for one."""
     pyramid, estimator = Pyramid(table), job.smoothing.estimator
     try:
-        found = search_table(
-            table, pyramid, job.shape, criterion=job.criterion,
-            by_block=job.reading.block is not None, widths=job.smoothing.widths,
-        )  # fmt: skip
+        found = search_unit(job, table, pyramid)
     except InputError:
         return None
     bandwidth = job.fixed or found.trails[estimator].bandwidth
@@ -446,10 +451,7 @@ class Worker:
         shape, estimator = job.shape, job.smoothing.estimator
         pyramid = Pyramid(table)
         try:
-            found = search_table(
-                table, pyramid, shape, criterion=job.criterion,
-                by_block=job.reading.block is not None, widths=job.smoothing.widths,
-            )  # fmt: skip
+            found = search_unit(job, table, pyramid)
         except InputError as error:
             return Unit(key, *_why_no_width(job, table, error), table.tally.used, None)
         if job.fixed is not None:

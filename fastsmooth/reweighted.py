@@ -5,15 +5,13 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import replace
 from threading import Lock
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from fastsmooth.lookup import Lookup, root_of
 from fastsmooth.source import CHUNK_ROWS, Chunk, Source, Task
-
-if TYPE_CHECKING:
-    from fastsmooth.lookup import Lookup
 
 Floats = NDArray[np.float64]
 # Gives each row of a chunk the number of its unit; for one thread.
@@ -92,8 +90,7 @@ class Reweighted(Source):
 
     def _weigh(self, chunk: Chunk, unit: int | NDArray[np.int64]) -> Chunk:
         own = chunk.weight
-        with np.errstate(invalid="ignore"):
-            root = None if own is None else np.sqrt(np.where(own > 0.0, own, np.nan))
+        root = None if own is None else root_of(own)
         scored = self._lookup.score(chunk.x, chunk.y, unit, np.inf, root)
         weight = bisquare(scored.z)
         stretch = self._lookup.stretch(chunk.x, unit, STRETCHES)

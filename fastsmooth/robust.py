@@ -35,6 +35,8 @@ _FEWEST_ROWS, _MOST_ROWS = 25, 2000
 # A stuck sensor's stretch has no scatter at all; it must not make all others outliers.
 _LEAST_OF_TYPICAL = 0.05
 _TOLD_STRETCHES = 3
+# The facts of rows that could not be weighed.
+NOT_WEIGHED = {"rounds": 0, "reason": "half of the rows lie on the curve"}
 
 
 @dataclass(frozen=True)

@@ -33,7 +33,7 @@ from fastsmooth.csvfile import CsvReader
 from fastsmooth.errors import InputError, ReadError
 from fastsmooth.files import Task, check_unchanged, partition_keys
 from fastsmooth.grouping import Grouping, Key
-from fastsmooth.lookup import ABOVE, BELOW, ROW_STATUSES, Lookup
+from fastsmooth.lookup import ABOVE, BELOW, ROW_STATUSES, Lookup, root_of
 from fastsmooth.near import advise
 from fastsmooth.opening import check_present, find_pruned, parse_filters
 from fastsmooth.parquet import ParquetReader
@@ -318,8 +318,7 @@ class ScorePass:
         ]
         root_weight = None
         if len(floats) > 2:
-            with np.errstate(invalid="ignore"):  # a negative precision is no reading
-                root_weight = np.sqrt(floats[2])
+            root_weight = root_of(floats[2])
         unit, unknown = finder.find(columns, rows)
         part.note_unknown(unknown)
         scored = self._lookup.score(floats[0], floats[1], unit, self.wishes.z_limit, root_weight)

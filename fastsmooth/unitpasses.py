@@ -17,6 +17,7 @@ from fastsmooth.passes import Progress
 from fastsmooth.reweighted import Finder, Reweighted
 from fastsmooth.robust import (
     ENOUGH,
+    NOT_WEIGHED,
     POINTS,
     ROUNDS,
     Core,
@@ -112,8 +113,7 @@ def weigh_in_rounds(
 
     found = dict(zip(keys, spread(start, keys, threads), strict=True))
     cores = {key: core for key, core in found.items() if core is not None}
-    none = {"rounds": 0, "reason": "half of the rows lie on the curve"}
-    facts: dict[Key, dict[str, Any]] = {key: none for key in keys if key not in cores}
+    facts: dict[Key, dict[str, Any]] = {key: dict(NOT_WEIGHED) for key in keys if key not in cores}
     samples = {key: tables.sample(key) for key in cores}
     plans = {key: tables.table(key).plan for key in keys}
     finder = unit_finder(job.grouping, keys)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from typing import Any, BinaryIO
+from typing import Any
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -15,7 +15,6 @@ from fastsmooth.comparison import CurveComparison, UnitComparison
 from fastsmooth.comparison_words import amount_text, p_text
 from fastsmooth.difference import Difference
 from fastsmooth.excess import Excess
-from fastsmooth.files_out import PICTURE_SUFFIXES, check_writable, write_atomically
 from fastsmooth.report.labels import Box, Ruler
 from fastsmooth.report.look import (
     BAND,
@@ -35,6 +34,7 @@ from fastsmooth.report.look import (
     set_ticks,
     write,
 )  # fmt: skip
+from fastsmooth.report.saving import save_figure
 from fastsmooth.report.scales import Shown, named, number_ticks, printable, shown_axis
 from fastsmooth.report.words import NOT_A_LIMIT, first_sentence
 
@@ -69,20 +69,7 @@ def draw(found: CurveComparison, path: str | os.PathLike[str]) -> None:
     WriteError
         The file cannot be written; nothing is left behind.
     """
-    suffix = check_writable(path, "--plot", PICTURE_SUFFIXES)
-    made, title = figure(found), _title(found)
-    # No date and no version, which would make equal pictures differ.
-    metadata: dict[str, dict[str, str | None]] = {
-        ".png": {"Software": None, "Title": title},
-        ".svg": {"Date": None, "Title": title},
-        ".pdf": {"CreationDate": None, "Title": title},
-    }
-
-    def save(stream: BinaryIO) -> None:
-        with plain_style():
-            made.savefig(stream, format=suffix[1:], dpi=DPI, metadata=metadata[suffix])
-
-    write_atomically(path, save, "--plot")
+    save_figure(path, lambda: figure(found), _title(found))
 
 
 def figure(found: CurveComparison) -> Figure:

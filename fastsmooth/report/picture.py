@@ -3,13 +3,12 @@
 from __future__ import annotations
 
 import os
-from typing import Any, BinaryIO, NamedTuple
+from typing import Any, NamedTuple
 
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from fastsmooth.curve import Curve
-from fastsmooth.files_out import PICTURE_SUFFIXES, check_writable, write_atomically
 from fastsmooth.report import words
 from fastsmooth.report.criteria import draw_criteria
 from fastsmooth.report.labels import Box, Ruler
@@ -32,6 +31,7 @@ from fastsmooth.report.rows import (
     has_unsampled_rows,
     x_ends,
 )
+from fastsmooth.report.saving import save_figure
 from fastsmooth.report.scales import named, shown_axis
 
 # All in inches.
@@ -60,21 +60,7 @@ def draw(curve: Curve, path: str | os.PathLike[str]) -> None:
     WriteError
         The file cannot be written; nothing is left behind.
     """
-    suffix = check_writable(path, "--plot", PICTURE_SUFFIXES)
-    title, said = words.title(curve), words.subtitle(curve)
-    # No date and no version, which would make equal pictures differ.
-    metadata: dict[str, dict[str, str | None]] = {
-        ".png": {"Software": None, "Title": title, "Description": said},
-        ".svg": {"Date": None, "Title": title, "Description": said},
-        ".pdf": {"CreationDate": None, "Title": title, "Subject": said},
-    }
-    made = figure(curve)
-
-    def save(stream: BinaryIO) -> None:
-        with plain_style():
-            made.savefig(stream, format=suffix[1:], dpi=DPI, metadata=metadata[suffix])
-
-    write_atomically(path, save, "--plot")
+    save_figure(path, lambda: figure(curve), words.title(curve), words.subtitle(curve))
 
 
 def figure(curve: Curve) -> Figure:
